@@ -1,0 +1,70 @@
+import { Type, type Static } from 'typebox';
+import { Severity } from './severity.ts';
+
+const Nullable = <T extends Parameters<typeof Type.Union>[0][number]>(type: T) => Type.Union([type, Type.Null()]);
+
+/** ISA-18.2 / IEC 62682 states that this version uses. */
+export const AlarmState = Type.Union([
+  Type.Literal('unacknowledged'),
+  Type.Literal('returned to normal, unacknowledged'),
+  Type.Literal('acknowledged'),
+  Type.Literal('normal'),
+]);
+export type AlarmState = Static<typeof AlarmState>;
+
+export const AlarmKind = Type.Union([Type.Literal('level'), Type.Literal('no data'), Type.Literal('sensor')]);
+
+/** A step in an alarm's life, kept for ever. */
+export const AlarmStep = Type.Object({
+  /** Event time for raised, escalated, returned, confirmed, corrected; wall clock for the rest. */
+  micros: Type.Integer(),
+  /** When the server took the step, by its wall clock. */
+  takenMicros: Type.Integer(),
+  what: Type.Union([
+    Type.Literal('raised'),
+    Type.Literal('escalated'),
+    Type.Literal('confirmed'),
+    Type.Literal('corrected'),
+    Type.Literal('returned'),
+    Type.Literal('acknowledged'),
+    Type.Literal('published'),
+  ]),
+  severity: Nullable(Severity),
+  value: Nullable(Type.Number()),
+  sensor: Nullable(Type.String()),
+  by: Nullable(Type.String()),
+  note: Nullable(Type.String()),
+});
+export type AlarmStep = Static<typeof AlarmStep>;
+
+export const Alarm = Type.Object({
+  /** Deterministic: bridge, rule, and time name of the first crossing. */
+  id: Type.String(),
+  bridge: Type.String(),
+  kind: AlarmKind,
+  /** Limit id; logger id for no data; sensor id for a sensor alarm. */
+  rule: Type.String(),
+  state: AlarmState,
+  severity: Severity,
+  raisedMicros: Type.Integer(),
+  /** Live value: causal filter, largest so far, and the channel that saw it. Null for no data. */
+  liveValue: Nullable(Type.Number()),
+  sensor: Nullable(Type.String()),
+  /** Sensors that passed a limit in this alarm. */
+  sensors: Type.Array(Type.String()),
+  /** The record's value (zero-phase, whole window) and what it made of the alarm; null until it is known. */
+  recordValue: Nullable(Type.Number()),
+  recordSeverity: Nullable(Severity),
+  verdict: Nullable(Type.Union([Type.Literal('confirmed'), Type.Literal('corrected')])),
+  /** Said when a neighbour that should have felt it did not. */
+  doubt: Nullable(Type.String()),
+  passage: Nullable(Type.String()),
+  /** Passages above the same limit in the day before this one, by the record. */
+  passagesAboveInDay: Type.Integer(),
+  returnedMicros: Nullable(Type.Integer()),
+  acknowledged: Nullable(Type.Object({ micros: Type.Integer(), by: Type.String(), note: Type.String() })),
+  steps: Type.Array(AlarmStep, { maxItems: 200 }),
+  /** One sentence for a person. */
+  message: Type.String(),
+});
+export type Alarm = Static<typeof Alarm>;

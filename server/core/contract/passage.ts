@@ -1,0 +1,104 @@
+import { Type, type Static } from 'typebox';
+import { Measured, Quality } from './measure.ts';
+import { Severity } from './severity.ts';
+
+const MicrosType = Type.Integer();
+const Nullable = <T extends Parameters<typeof Type.Union>[0][number]>(type: T) => Type.Union([type, Type.Null()]);
+
+export const Direction = Type.Union([Type.Literal('rising'), Type.Literal('falling')]);
+/** Towards rising or falling chainage. */
+export type Direction = Static<typeof Direction>;
+
+/** What one channel measured during a passage. Accelerations in m/s², strain in µm/m, displacement in mm. */
+export const ChannelMeasures = Type.Object({
+  sensor: Type.String(),
+  rateHz: Type.Number(),
+  /** Removed before measuring: the mean of the quiet parts. */
+  offset: Measured,
+  /** Root mean square of the quiet part before the train. */
+  noise: Measured,
+  /** Largest magnitude of the calibrated signal, between samples too. */
+  rawPeak: Measured,
+  /** Largest magnitude in the band of the rule, zero-phase, between samples too. */
+  bandPeak: Measured,
+  bandPeakMicros: Nullable(MicrosType),
+  /** Largest 1 s root mean square in the band. */
+  rms: Measured,
+  /** Seconds above each limit that holds for this channel, and how many excursions. */
+  timeAboveS: Type.Record(Type.String(), Type.Number()),
+  cyclesAbove: Type.Record(Type.String(), Type.Integer()),
+  /** Strongest frequency around the peak. */
+  dominantHz: Measured,
+  /** Codes of sensor conditions that held at any time in the window. */
+  flags: Type.Array(Type.String()),
+});
+export type ChannelMeasures = Static<typeof ChannelMeasures>;
+
+/** Where the numbers of a passage come from. */
+export const Provenance = Type.Object({
+  definitionVersion: Type.Integer(),
+  ruleVersion: Type.String(),
+  /** The low-pass of the band rule, as realised. */
+  filter: Type.Object({
+    kind: Type.String(),
+    order: Type.Integer(),
+    upToHz: Type.Number(),
+    rule: Type.String(),
+    phase: Type.String(),
+  }),
+});
+
+export const Phases = Type.Object({
+  /** First axle reaches the bridge; last axle leaves it; end of the usable free decay. */
+  onMicros: MicrosType,
+  offMicros: MicrosType,
+  freeEndMicros: MicrosType,
+  /** What found them. */
+  foundBy: Type.Union([Type.Literal('axle sensors'), Type.Literal('wheel-rail noise')]),
+  quality: Quality,
+  notes: Type.Array(Type.String()),
+});
+export type Phases = Static<typeof Phases>;
+
+export const Axle = Type.Object({
+  /** When it passed the middle of the axle sensors' base, and how far behind the first axle it runs. */
+  micros: MicrosType,
+  behindFirstM: Type.Number(),
+  /** Pulse height relative to the median axle of the train. */
+  weight: Type.Number(),
+});
+export type Axle = Static<typeof Axle>;
+
+export const Passage = Type.Object({
+  /** Bridge id and the time name of the first axle: `ottermere-20261201-051233-2`. */
+  id: Type.String(),
+  bridge: Type.String(),
+  startMicros: MicrosType,
+  endMicros: MicrosType,
+  phases: Phases,
+  speedMs: Measured,
+  direction: Nullable(Direction),
+  axleCount: Measured,
+  axles: Type.Array(Axle),
+  /** Peak deck acceleration: the largest band peak of the deck channels that may be trusted. */
+  peak: Type.Object({
+    measured: Measured,
+    sensor: Nullable(Type.String()),
+    micros: Nullable(MicrosType),
+    limit: Nullable(Type.String()),
+    severity: Nullable(Severity),
+    /** Peak over the immediate action limit (or the gravest that is set); null without limits. */
+    ofGravest: Nullable(Type.Number()),
+  }),
+  rawPeak: Measured,
+  f1Hz: Measured,
+  /** Damping ratio of the first mode, 1 = critical. */
+  zeta1: Measured,
+  /** Steel or air temperature during the passage, °C. */
+  temperatureC: Measured,
+  channels: Type.Array(ChannelMeasures),
+  quality: Quality,
+  notes: Type.Array(Type.String()),
+  provenance: Provenance,
+});
+export type Passage = Static<typeof Passage>;
