@@ -13,6 +13,7 @@ export const AlarmState = Type.Union([
 export type AlarmState = Static<typeof AlarmState>;
 
 export const AlarmKind = Type.Union([Type.Literal('level'), Type.Literal('no data'), Type.Literal('sensor')]);
+export type AlarmKind = Static<typeof AlarmKind>;
 
 /** A step in an alarm's life, kept for ever. */
 export const AlarmStep = Type.Object({

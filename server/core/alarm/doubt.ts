@@ -1,0 +1,92 @@
+import type { Alarm } from '../contract/alarm.ts';
+import { isDeckAcceleration, spanAt, type BridgeDefinition, type Sensor, type Span } from '../contract/bridge.ts';
+import type { ChannelMeasures, Passage } from '../contract/passage.ts';
+import { MICROS_PER_SECOND } from '../contract/time.ts';
+import type { DeskState } from './state.ts';
+
+/** A neighbour that should have felt it reads at least this part of the value. */
+export const NEIGHBOUR_SHARE = 0.25;
+/** A momentary condition (spike, gap, …) counts against a crossing within this long. */
+const MOMENT_MICROS = 5 * MICROS_PER_SECOND;
+
+/** The alarm with one more reason not to trust its sensor. Each reason is said once. */
+export function withDoubt(alarm: Alarm, reason: string): Alarm {
+  if (alarm.doubt === null) return { ...alarm, doubt: reason };
+  return isSaid(alarm, reason) ? alarm : { ...alarm, doubt: `${alarm.doubt}; ${reason}` };
+}
+
+export const isSaid = (alarm: Alarm, reason: string): boolean => (alarm.doubt ?? '').split('; ').includes(reason);
+
+/** What is said while no passage is known for a crossing. */
+export const NO_TRAIN = 'no train was found on the bridge';
+
+/** The alarm without the doubt that no train was there: one was found. */
+export function withTrain(alarm: Alarm): Alarm {
+  if (alarm.doubt === null) return alarm;
+  const reasons = alarm.doubt.split('; ').filter((reason) => !reason.startsWith(NO_TRAIN));
+  return { ...alarm, doubt: reasons.length === 0 ? null : reasons.join('; ') };
+}
+
+/** The alarm with the conditions of its sensor, as far as they are known by now, said as doubt. */
+export function conditionsDoubt(state: DeskState, alarm: Alarm): Alarm {
+  if (alarm.sensor === null) return alarm;
+  const sensor = alarm.sensor;
+  return (state.conditions[sensor] ?? [])
+    .filter((condition) => condition.state === 'began' || alarm.raisedMicros - condition.micros <= MOMENT_MICROS)
+    .reduce((doubted, condition) => withDoubt(doubted, `${sensor} is marked "${condition.code}"`), alarm);
+}
+
+/**
+ * The alarm with what its passage's record says against its sensor: flags of the channel, and neighbours that felt
+ * too little.
+ *
+ * A neighbour is a trusted deck channel of the same span that stands where the first bending mode moves at least half
+ * as much as at the sensor (half sine over the span); one beside a bearing has no say about midspan. Without neighbours
+ * there is no doubt from them.
+ */
+export function recordDoubt(definition: BridgeDefinition, alarm: Alarm, passage: Passage): Alarm {
+  const sensor = definition.sensors.find(({ id }) => id === alarm.sensor);
+  if (sensor === undefined) return alarm;
+  const own = passage.channels.find((channel) => channel.sensor === sensor.id);
+  const flagged = (own?.flags ?? []).reduce(
+    (doubted, flag) => withDoubt(doubted, `${sensor.id} is marked "${flag}"`),
+    alarm,
+  );
+  const value = Math.max(alarm.liveValue ?? 0, (own === undefined ? null : bandPeak(own)) ?? 0);
+  const highest = highestNeighbour(definition, sensor, passage);
+  if (highest === null || highest.value >= NEIGHBOUR_SHARE * value) return flagged;
+  return withDoubt(
+    flagged,
+    `its neighbours did not feel it, the most was ${highest.value.toFixed(2)} m/s² at ${highest.sensor}`,
+  );
+}
+
+function highestNeighbour(
+  definition: BridgeDefinition,
+  sensor: Sensor,
+  passage: Passage,
+): { sensor: string; value: number } | null {
+  const span = spanAt(definition, sensor.alongM);
+  const felt = passage.channels.flatMap((channel) => {
+    const neighbour = definition.sensors.find(({ id }) => id === channel.sensor);
+    const value = bandPeak(channel);
+    if (neighbour === undefined || neighbour.id === sensor.id || value === null || channel.flags.length > 0) return [];
+    if (!isDeckAcceleration(neighbour) || spanAt(definition, neighbour.alongM).id !== span.id) return [];
+    return ordinate(span, neighbour) >= 0.5 * ordinate(span, sensor) ? [{ sensor: neighbour.id, value }] : [];
+  });
+  return felt.reduce<(typeof felt)[number] | null>(
+    (top, one) => (top === null || one.value > top.value ? one : top),
+    null,
+  );
+}
+
+/** Ordinate of the first bending mode of a simple span, 0 at its bearings and 1 at midspan. */
+function ordinate(span: Span, sensor: Sensor): number {
+  const x = Math.min(Math.max((sensor.alongM - span.startM) / span.lengthM, 0), 1);
+  return Math.sin(Math.PI * x);
+}
+
+/** The band peak of a channel where it may be used. */
+export function bandPeak(channel: ChannelMeasures): number | null {
+  return channel.bandPeak.value === null || channel.bandPeak.quality === 'poor' ? null : channel.bandPeak.value;
+}

@@ -1,0 +1,96 @@
+import type { Alarm } from '../contract/alarm.ts';
+import { MICROS_PER_SECOND, type Micros } from '../contract/time.ts';
+import { escalate, giveBack, isActive, raise } from './life.ts';
+import { trimmed, withAlarm, type DeskEffect, type DeskState, type DeskStep, type NoData } from './state.ts';
+import { noDataMessage } from './wording.ts';
+
+/** A logger is silent after this long where its definition says nothing, s. */
+export const DEFAULT_SILENT_AFTER_S = 30;
+/** Silence of this many times `silentAfterS` is graver: IL. */
+export const GRAVE_SILENCE = 10;
+
+/** Data came: an alarm of silence is back to normal, and a hole between the newest samples is an interval without data. */
+export function onHeard(
+  state: DeskState,
+  { logger, fromMicros, toMicros }: { logger: string; fromMicros: Micros; toMicros: Micros },
+  nowMicros: Micros,
+): DeskStep {
+  const before = state.loggers[logger];
+  const alarm = silenceOf(state, logger);
+  const newestMicros = alarm === null ? Math.max(before?.newestMicros ?? 0, toMicros) : toMicros;
+  const heard = { ...state, loggers: { ...state.loggers, [logger]: { newestMicros, heardMicros: nowMicros } } };
+  const bridge = state.definition.id;
+  if (alarm !== null) {
+    const fromSilence = before?.newestMicros ?? alarm.raisedMicros - silentAfterMicros(state, logger);
+    return {
+      state: withAlarm(heard, giveBack(alarm, Math.max(fromMicros, alarm.raisedMicros), nowMicros)),
+      effects: noData({ bridge, logger, fromMicros: fromSilence, toMicros: fromMicros }),
+    };
+  }
+  const hole = before !== undefined && fromMicros - before.newestMicros > silentAfterMicros(state, logger);
+  return {
+    state: heard,
+    effects: hole ? noData({ bridge, logger, fromMicros: before.newestMicros, toMicros: fromMicros }) : [],
+  };
+}
+
+/**
+ * The wall clock went on. A logger that was heard once and is silent for longer than `silentAfterS` raises an alarm (AL),
+ * after ten times as long it becomes IL. A logger that was never heard raises none: its bridge has "no data yet".
+ *
+ * The alarm's time is the event time at which the silence became too long: newest sample + `silentAfterS`.
+ */
+export function onTick(state: DeskState, nowMicros: Micros): DeskStep {
+  const effects: DeskEffect[] = [];
+  let next = state;
+  for (const { id: logger } of state.definition.loggers) {
+    const heard = state.loggers[logger];
+    const alarm = silenceOf(state, logger);
+    const after = silentAfterMicros(state, logger);
+    if (alarm !== null) {
+      next = withAlarm(next, prolonged(alarm, nowMicros, after));
+    } else if (heard !== undefined && nowMicros - heard.heardMicros > after) {
+      next = trimmed(withAlarm(next, raised(state, logger, heard.newestMicros, after, nowMicros)));
+      effects.push(...noData({ bridge: state.definition.id, logger, fromMicros: heard.newestMicros, toMicros: null }));
+    }
+  }
+  return { state: next, effects };
+}
+
+/** The alarm of a logger's silence that lasts, or null. */
+export function silenceOf(state: DeskState, logger: string): Alarm | null {
+  return (
+    Object.values(state.alarms).find((alarm) => alarm.kind === 'no data' && alarm.rule === logger && isActive(alarm)) ??
+    null
+  );
+}
+
+function raised(state: DeskState, logger: string, newestMicros: Micros, after: Micros, takenMicros: Micros): Alarm {
+  const { definition } = state;
+  const sighting = { micros: newestMicros + after, takenMicros, severity: 'AL', value: null, sensor: null } as const;
+  return {
+    ...raise(definition.id, 'no data', logger, sighting),
+    message: noDataMessage(definition, logger, newestMicros),
+  };
+}
+
+/** Counted on the wall clock from when the alarm was raised, so that a restart of the server does not begin anew. */
+function prolonged(alarm: Alarm, nowMicros: Micros, after: Micros): Alarm {
+  const raisedTaken = alarm.steps[0]?.takenMicros ?? nowMicros;
+  if (nowMicros - raisedTaken + after < GRAVE_SILENCE * after) return alarm;
+  const micros = alarm.raisedMicros + (GRAVE_SILENCE - 1) * after;
+  return escalate(alarm, { micros, takenMicros: nowMicros, severity: 'IL', value: null, sensor: null });
+}
+
+function silentAfterMicros(state: DeskState, logger: string): Micros {
+  const defined = state.definition.loggers.find(({ id }) => id === logger)?.silentAfterS;
+  return (defined ?? DEFAULT_SILENT_AFTER_S) * MICROS_PER_SECOND;
+}
+
+/** Nothing where the clock was set back over the hole. */
+function noData(interval: NoData): DeskEffect[] {
+  const empty = interval.toMicros !== null && interval.toMicros <= interval.fromMicros;
+  return empty
+    ? [{ kind: 'no data', noData: { ...interval, toMicros: interval.fromMicros } }]
+    : [{ kind: 'no data', noData: interval }];
+}

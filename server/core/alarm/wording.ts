@@ -1,0 +1,75 @@
+import type { Alarm } from '../contract/alarm.ts';
+import { spanAt, type BridgeDefinition } from '../contract/bridge.ts';
+import { severityOf, type Severity } from '../contract/severity.ts';
+import { civilTime, MICROS_PER_SECOND, type Micros } from '../contract/time.ts';
+
+const LEVEL_NAMES: Readonly<Record<Severity, string>> = {
+  AL: 'alert limit',
+  IL: 'intervention limit',
+  IAL: 'immediate action limit',
+};
+
+/** Ends each sentence: what an alarm is and is not. */
+const ADVISORY = 'advisory: a reason to look, without authority over train movement';
+
+/**
+ * One sentence for the duty engineer: bridge, span, value, limit, by how much, sensor, and what the record says.
+ *
+ * @param alarm of kind `level`
+ */
+export function levelMessage(definition: BridgeDefinition, alarm: Alarm): string {
+  const parts = [`${placeOf(definition, alarm)}: ${liveClause(definition, alarm)}`];
+  if (alarm.liveValue !== null) parts.push(...recordClause(alarm));
+  if (alarm.doubt !== null) parts.push(`doubtful, since ${alarm.doubt.replaceAll('; ', ', and ')}`);
+  return `${[...parts, ADVISORY].join('; ')}.`;
+}
+
+/** One sentence about a logger that sends nothing. */
+export function noDataMessage(definition: BridgeDefinition, logger: string, sinceMicros: Micros): string {
+  return (
+    `${definition.name}: no data from logger ${logger} since ${clockTime(sinceMicros)}; ` +
+    `what it measures is not monitored, and the absence of alarms says nothing; ${ADVISORY}.`
+  );
+}
+
+/** One sentence about a sensor that cannot be trusted. */
+export function sensorMessage(definition: BridgeDefinition, sensor: string, code: string, detail: string): string {
+  const why = detail === '' ? '' : ` (${detail})`;
+  return `${definition.name}: sensor ${sensor} is marked "${code}"${why}; its values are not to be trusted until it is seen to; ${ADVISORY}.`;
+}
+
+/** `05:12:33 UTC on 2026-12-01`. */
+export function clockTime(micros: Micros): string {
+  const { year, month, day, hour, minute, second } = civilTime(Math.floor(micros / MICROS_PER_SECOND));
+  const two = (n: number): string => String(n).padStart(2, '0');
+  return `${two(hour)}:${two(minute)}:${two(second)} UTC on ${year}-${two(month)}-${two(day)}`;
+}
+
+function placeOf(definition: BridgeDefinition, alarm: Alarm): string {
+  const sensor = definition.sensors.find(({ id }) => id === alarm.sensor);
+  return sensor === undefined ? definition.name : `${definition.name}, span ${spanAt(definition, sensor.alongM).id}`;
+}
+
+function liveClause(definition: BridgeDefinition, alarm: Alarm): string {
+  const value = alarm.liveValue ?? alarm.recordValue ?? 0;
+  const source = alarm.liveValue === null ? 'the record finds a deck acceleration of' : 'deck acceleration';
+  const verb = alarm.liveValue === null ? ',' : ' is';
+  const at = alarm.sensor === null ? '' : ` at ${alarm.sensor}`;
+  const levels = definition.limits.find(({ id }) => id === alarm.rule)?.levels;
+  const severity = (levels === undefined ? null : severityOf(value, levels)) ?? alarm.severity;
+  const level = levels?.[severity];
+  if (level === undefined) return `${source} ${value.toFixed(2)} m/s²${at}${verb} above the ${LEVEL_NAMES[severity]}`;
+  const by = value - level;
+  return (
+    `${source} ${value.toFixed(2)} m/s²${at}${verb} ${by.toFixed(2)} m/s² (${((100 * by) / level).toFixed(1)} %) above the ` +
+    `${LEVEL_NAMES[severity]} of ${level.toFixed(2)} m/s² (${severity}, limit ${alarm.rule})`
+  );
+}
+
+function recordClause({ recordValue, recordSeverity, verdict }: Alarm): string[] {
+  if (recordValue === null || verdict === null) return [];
+  const reaches = recordSeverity === null ? 'below all limits' : recordSeverity;
+  return verdict === 'confirmed'
+    ? [`the record confirms ${reaches} with ${recordValue.toFixed(2)} m/s²`]
+    : [`the record corrects it to ${recordValue.toFixed(2)} m/s² (${reaches})`];
+}

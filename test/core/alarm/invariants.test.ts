@@ -1,0 +1,157 @@
+import fc from 'fast-check';
+import { describe, expect, test } from 'vitest';
+import { next, nextAll, openDesk } from '#core/alarm/desk.ts';
+import type { DeskEvent, DeskState } from '#core/alarm/state.ts';
+import type { Alarm } from '#core/contract/alarm.ts';
+import { SEVERITIES, severityRank } from '#core/contract/severity.ts';
+import { MICROS_PER_SECOND, type Micros } from '#core/contract/time.ts';
+import { aDefinition, aPassage, DAWN } from '../../support/specimen.ts';
+
+const SEED = 20_261_201;
+const S = MICROS_PER_SECOND;
+
+/** States that may follow each other, from the table in life.ts; staying is always allowed. */
+const MAY_FOLLOW: Record<string, readonly Alarm['state'][]> = {
+  unacknowledged: ['returned to normal, unacknowledged', 'acknowledged'],
+  acknowledged: ['unacknowledged', 'normal', 'returned to normal, unacknowledged'],
+  'returned to normal, unacknowledged': ['unacknowledged', 'normal'],
+  normal: ['unacknowledged', 'acknowledged', 'returned to normal, unacknowledged'],
+};
+
+const passageOf = (train: number): Micros => DAWN + train * 300 * S;
+
+/** A stream as a bridge sends it: trains one after the other, crossings within, before and between them. */
+const train = (index: number): fc.Arbitrary<DeskEvent[]> => {
+  const on = passageOf(index);
+  const id = aPassage({ onMicros: on }).id;
+  const crossing = fc
+    .record({
+      sensor: fc.constantFrom('A1', 'A2', 'A3'),
+      at: fc.integer({ min: -1, max: 120 }),
+      severity: fc.integer({ min: 0, max: 2 }),
+      lasting: fc.integer({ min: 1, max: 20 }),
+    })
+    .map(({ sensor, at, severity, lasting }) =>
+      SEVERITIES.slice(0, severity + 1).flatMap((level, i): DeskEvent[] => [
+        {
+          kind: 'level',
+          level: {
+            bridge: 'ottermere',
+            sensor,
+            limit: 'ballast',
+            kind: 'passed',
+            severity: level,
+            micros: on + at * S + i,
+            value: 2.3 + i * 0.7,
+          },
+        },
+        ...(i === severity
+          ? [
+              {
+                kind: 'level',
+                level: {
+                  bridge: 'ottermere',
+                  sensor,
+                  limit: 'ballast',
+                  kind: 'returned',
+                  severity: level,
+                  micros: on + (at + lasting) * S,
+                  value: 0.1,
+                },
+              } as const,
+            ]
+          : []),
+      ]),
+    );
+  return fc
+    .record({
+      crossings: fc.array(crossing, { maxLength: 6 }),
+      peak: fc.constantFrom(1, 2.3, 2.9, 3.6),
+      recorded: fc.boolean(),
+      detected: fc.boolean(),
+      answered: fc.array(fc.integer({ min: 0, max: 140 }), { maxLength: 3 }),
+    })
+    .map(({ crossings, peak, recorded, detected, answered }) => {
+      const timed: [Micros, DeskEvent][] = crossings.flat().map((event) => [timeOf(event), event]);
+      const say = (kind: 'entered' | 'left' | 'discarded', micros: Micros): [Micros, DeskEvent] => [
+        micros,
+        { kind: 'progress', progress: { bridge: 'ottermere', passage: id, kind, micros } },
+      ];
+      if (detected) timed.push(say('entered', on), say('left', on + 6 * S));
+      if (detected && !recorded) timed.push(say('discarded', on + 20 * S));
+      const passage = aPassage({ onMicros: on, peaks: { A1: peak, A2: peak * 0.9, A3: peak * 0.7 } });
+      if (detected && recorded) timed.push([on + 25 * S, { kind: 'passage', passage }]);
+      for (const at of answered) timed.push([on + at * S, { kind: 'acknowledge', alarm: '', by: 'x', note: '' }]);
+      return timed.toSorted((a, b) => a[0] - b[0]).map(([, event]) => event);
+    });
+};
+const timeOf = (event: DeskEvent): Micros => (event.kind === 'level' ? event.level.micros : 0);
+const stream = fc.tuple(train(0), train(1), train(2)).map((trains) => trains.flat());
+
+/** Acknowledgements in the stream answer the newest alarm that waits for one. */
+function resolved(state: DeskState, event: DeskEvent): DeskEvent {
+  if (event.kind !== 'acknowledge') return event;
+  const waiting = Object.values(state.alarms).filter((alarm) => alarm.state.includes('unacknowledged'));
+  return { ...event, alarm: waiting.at(-1)?.id ?? 'none' };
+}
+
+const start = (alarms: Alarm[] = []): DeskState => openDesk({ definition: aDefinition(), alarms, nowMicros: DAWN });
+const perPassageAndRule = (state: DeskState): string[] =>
+  Object.values(state.alarms).flatMap((alarm) => (alarm.passage === null ? [] : [`${alarm.passage} ${alarm.rule}`]));
+
+describe('whatever happens on the bridge', () => {
+  test('there is one alarm a passage and rule, severity never falls, and states follow the table', () => {
+    fc.assert(
+      fc.property(stream, (events) => {
+        let state = start();
+        for (const event of events) {
+          const after = next(state, resolved(state, event), DAWN).state;
+          for (const alarm of Object.values(after.alarms)) {
+            const before = state.alarms[alarm.id];
+            if (before === undefined) continue;
+            expect(severityRank(alarm.severity)).toBeGreaterThanOrEqual(severityRank(before.severity));
+            expect(alarm.liveValue ?? 0).toBeGreaterThanOrEqual(before.liveValue ?? 0);
+            if (before.state !== alarm.state) expect(MAY_FOLLOW[before.state]).toContain(alarm.state);
+            expect(alarm.steps.slice(0, before.steps.length)).toEqual(before.steps);
+          }
+          const keys = perPassageAndRule(after);
+          expect(new Set(keys).size).toBe(keys.length);
+          expect(Object.values(after.alarms).filter((a) => a.returnedMicros === null).length).toBe(
+            Object.values(after.alarms).filter((a) => a.state === 'unacknowledged' || a.state === 'acknowledged')
+              .length,
+          );
+          state = after;
+        }
+      }),
+      { seed: SEED, numRuns: 400 },
+    );
+  });
+
+  test('every event taken twice changes nothing the second time', () => {
+    fc.assert(
+      fc.property(stream, (events) => {
+        let state = start();
+        for (const event of events) {
+          if (event.kind === 'acknowledge') continue;
+          state = next(state, event, DAWN).state;
+          expect(next(state, event, DAWN + 99).effects).toEqual([]);
+        }
+      }),
+      { seed: SEED, numRuns: 300 },
+    );
+  });
+
+  test('a replay from the beginning or to the end, into a desk built anew from the store, changes nothing', () => {
+    fc.assert(
+      fc.property(stream, fc.nat(60), fc.boolean(), (events, cut, toTheEnd) => {
+        const seen = events.filter((event) => event.kind !== 'acknowledge');
+        const state = nextAll(start(), seen, DAWN).state;
+        const replayed = toTheEnd ? seen.slice(cut) : seen.slice(0, cut);
+        const again = nextAll(start(Object.values(state.alarms)), replayed, DAWN + 99);
+        expect(again.state.alarms).toEqual(state.alarms);
+        expect(again.effects).toEqual([]);
+      }),
+      { seed: SEED, numRuns: 300 },
+    );
+  });
+});
