@@ -1,0 +1,72 @@
+import type { Alarm, AlarmState, AlarmStep } from '#core/contract/alarm.ts';
+import type { BridgeDefinition } from '#core/contract/bridge.ts';
+import type { Levels } from '#core/contract/severity.ts';
+import { fixed } from './figure.ts';
+
+/** The words of an alarm: what it is about, its value against its limit, its steps. */
+
+export const LIMIT_NAMES = { AL: 'alert limit', IL: 'intervention limit', IAL: 'immediate action limit' } as const;
+
+export const GROUPS: readonly { state: AlarmState; title: string; meaning: string }[] = [
+  { state: 'unacknowledged', title: 'Unacknowledged', meaning: 'needs an answer' },
+  { state: 'returned to normal, unacknowledged', title: 'Returned to normal', meaning: 'unacknowledged, needs an answer' },
+  { state: 'acknowledged', title: 'Acknowledged', meaning: 'answered, still abnormal' },
+  { state: 'normal', title: 'Normal', meaning: 'back to normal and answered' },
+];
+
+export const needsAnswer = ({ state }: Pick<Alarm, 'state'>): boolean =>
+  state === 'unacknowledged' || state === 'returned to normal, unacknowledged';
+
+/** What the alarm is about, in a few words. */
+export function subjectOf(alarm: Alarm): string {
+  if (alarm.kind === 'no data') return `no data from logger ${alarm.rule}`;
+  if (alarm.kind === 'sensor') return `sensor ${alarm.rule} not to be trusted`;
+  return 'peak deck acceleration';
+}
+
+/** The levels of the limit that raised a level alarm. */
+export function levelsOf(alarm: Alarm, definition: BridgeDefinition | undefined): Levels | undefined {
+  if (alarm.kind !== 'level') return undefined;
+  return definition?.limits.find(({ id }) => id === alarm.rule)?.levels;
+}
+
+/** The value that counts: the record's where it is known, else the live one. */
+export const valueOf = (alarm: Alarm): number | null => alarm.recordValue ?? alarm.liveValue;
+
+/** `0.12 above IL 2.80`, or how far below its own limit the record has found it. */
+export function againstLimit(alarm: Alarm, levels: Levels | undefined): string {
+  const value = valueOf(alarm);
+  const limit = levels?.[alarm.severity];
+  if (value === null || limit === undefined) return alarm.severity;
+  const above = value - limit;
+  return `${fixed(Math.abs(above), 2)} ${above >= 0 ? 'above' : 'below'} ${alarm.severity} ${fixed(limit, 2)}`;
+}
+
+/** One step of an alarm's life as a sentence. */
+export function stepWords(step: AlarmStep): string {
+  const value = step.value === null ? '' : ` ${fixed(step.value, 2)} m/s²`;
+  const on = step.sensor === null ? '' : ` on ${step.sensor}`;
+  const level = step.severity === null ? '' : ` ${step.severity}`;
+  switch (step.what) {
+    case 'raised':
+      return `raised,${level}${value}${on}`;
+    case 'escalated':
+      return `escalated to${level},${value}${on}`;
+    case 'confirmed':
+      return `confirmed by the record:${level},${value}${on}`;
+    case 'corrected':
+      return `corrected by the record:${level || ' below all limits'},${value}${on}`;
+    case 'returned':
+      return 'returned to normal';
+    case 'acknowledged':
+      return `acknowledged${step.by === null ? '' : ` by ${step.by}`}${step.note ? `: ${step.note}` : ''}`;
+    case 'published':
+      return 'published on MQTT';
+  }
+}
+
+/** How long the server took from the samples' time to the step; empty for steps that have no event time. */
+export function delayWords(step: AlarmStep): string {
+  const seconds = (step.takenMicros - step.micros) / 1e6;
+  return seconds >= 0.05 && seconds < 3600 ? `taken ${fixed(seconds, seconds < 10 ? 1 : 0)} s later` : '';
+}
