@@ -1,5 +1,5 @@
-import { CholeskyDecomposition, Matrix } from 'ml-matrix';
 import type { Pole } from './pencil.ts';
+import { factorise, inverseOf, solveInto } from './positive-definite.ts';
 
 /**
  * Maximum-likelihood fit of damped oscillations with common poles to several channels, each with its own
@@ -8,56 +8,78 @@ import type { Pole } from './pencil.ts';
  */
 export interface DampedFit {
   poles: Pole[];
-  /** Per channel and pole: y = re · e^(−αt) cos ωt + im · e^(−αt) sin ωt. Row c holds offset, re0, im0, re1, im1, … */
+  /** Row c holds channel c: offset, then for each pole the factors of e^(−αt) cos ωt and e^(−αt) sin ωt. */
   coefficients: Float64Array[];
-  /** Residual sum of squares of each channel. */
+  /** Residual sum of squares of each channel, no nearer to zero than rounding allows. */
   residual: Float64Array;
-  /** Covariance of alpha0, omega0, alpha1, omega1, …: inverse Fisher information at the noise of the residuals. */
-  covariance: Matrix;
+  /** Covariance of alpha0, omega0, alpha1, …, row by row: inverse Fisher information at the noise of the residuals. */
+  covariance: Float64Array;
   /** Twice the negative log-likelihood but for a constant: Σ n ln RSS. */
   deviance: number;
 }
 
 export interface FitData {
+  /** Records about their mean, of one length. */
   channels: readonly Float64Array[];
-  /** Sum of squares about the mean, each channel's; above 0. */
+  /** Sum of squares of each channel; above 0. */
   energy: Float64Array;
   stepS: number;
 }
 
-/** Below this share of a channel's energy the residual is rounding. */
-const ROUNDING = 1e-14;
+export interface FitEffort {
+  /** Limit of accepted and refused steps. */
+  steps: number;
+  /** A step that betters the deviance by less than this is the last; 0 goes on until the poles stand still. */
+  enough: number;
+}
+
+/** Below this share of a channel's energy the residual is rounding: it is the difference of two sums. */
+const ROUNDING = 1e-13;
+/** Columns of the basis of which less than this is their own are the same to rounding. */
+const LEAST_PIVOT = 1e-5;
 
 /**
  * @param data channels of one length with energy above 0
  * @param start poles to begin from, at least one
- * @param iterations limit of accepted and refused steps
- * @returns null where the start cannot be fitted (coinciding poles, fewer samples than unknowns)
+ * @returns null where the start cannot be fitted: coinciding poles, fewer samples than unknowns
  */
-export function fitDamped(data: FitData, start: readonly Pole[], iterations: number): DampedFit | null {
+export function fitDamped(data: FitData, start: readonly Pole[], effort: FitEffort): DampedFit | null {
   const n = data.channels[0]!.length;
   if (n <= 4 * start.length + 1) return null;
-  let state = evaluate(data, start);
-  if (state === null) return null;
+  const columns = Array.from({ length: 4 * start.length + 1 }, () => new Float64Array(n));
+  const begun = evaluate(data, start, columns);
+  if (begun === null) return null;
+  let state: State = begun;
   let damping = 1e-3;
-  for (let i = 0; i < iterations; i++) {
-    const step = solveStep(state, damping);
-    if (step === null) {
-      damping *= 10;
-      continue;
-    }
-    const moved = move(state.poles, step, data.stepS);
-    const next = moved === null ? null : evaluate(data, moved);
-    const small = relativeSize(state.poles, step) < 1e-11;
+  for (let i = 0; i < effort.steps && damping < 1e9; i++) {
+    const step = dampedStep(state, damping);
+    const moved: Pole[] | null = step === null ? null : move(state.poles, step, data.stepS);
+    const next: State | null = moved === null ? null : evaluate(data, moved, columns);
+    const still = step !== null && relativeSize(state.poles, step) < 1e-11;
     if (next !== null && next.deviance <= state.deviance) {
+      const gained = state.deviance - next.deviance;
       state = next;
       damping = Math.max(damping / 10, 1e-12);
+      if (gained < effort.enough) break;
     } else {
       damping *= 10;
     }
-    if (small || damping > 1e9) break;
+    if (still) break;
   }
   return finish(data, state);
+}
+
+/** What a fit leaves of the records it was made from. */
+export function residualsOf(data: FitData, fit: DampedFit): Float64Array[] {
+  return data.channels.map((y, c) => {
+    const a = fit.coefficients[c]!;
+    const left = new Float64Array(y.length);
+    for (let i = 0; i < y.length; i++) left[i] = y[i]! - a[0]!;
+    for (const [k, pole] of fit.poles.entries()) {
+      subtractOscillation(left, a[1 + 2 * k]!, a[2 + 2 * k]!, pole, data.stepS);
+    }
+    return left;
+  });
 }
 
 interface State {
@@ -65,131 +87,109 @@ interface State {
   coefficients: Float64Array[];
   residual: Float64Array;
   deviance: number;
-  /** Weighted JᵀJ and Jᵀr for alpha0, omega0, … */
-  information: Matrix;
+  /** Weighted JᵀJ, row by row, and Jᵀr for alpha0, omega0, … */
+  information: Float64Array;
   gradient: Float64Array;
 }
 
 /** Everything needed for one step follows from inner products of the basis, its time-weighted copy, and the data. */
-function evaluate(data: FitData, poles: readonly Pole[]): State | null {
+function evaluate(data: FitData, poles: readonly Pole[], columns: readonly Float64Array[]): State | null {
   const n = data.channels[0]!.length;
-  const columns = basis(poles, n, data.stepS);
   const linear = 2 * poles.length + 1;
   const curved = 2 * poles.length;
-  const gram = Matrix.zeros(linear, linear);
-  const mixed = Matrix.zeros(linear, curved);
-  for (let i = 0; i < linear; i++) {
-    for (let j = i; j < linear; j++) {
-      const product = dot(columns[i]!, columns[j]!);
-      gram.set(i, j, product);
-      gram.set(j, i, product);
-    }
-    for (let j = 0; j < curved; j++) mixed.set(i, j, dot(columns[i]!, columns[linear + j]!));
-  }
-  const scales = Array.from({ length: linear }, (_, i) => 1 / Math.sqrt(gram.get(i, i)));
-  for (let i = 0; i < linear; i++)
-    for (let j = 0; j < linear; j++) gram.set(i, j, gram.get(i, j) * (scales[i]! * scales[j]!));
-  const cholesky = new CholeskyDecomposition(gram);
-  if (!cholesky.isPositiveDefinite() || illConditioned(cholesky)) return null;
+  fillBasis(columns, poles, data.stepS);
 
-  const solveGram = (right: Matrix): Matrix => {
-    const scaled = right.clone();
-    for (let i = 0; i < linear; i++) scaled.mulRow(i, scales[i]!);
-    const solution = cholesky.solve(scaled);
-    for (let i = 0; i < linear; i++) solution.mulRow(i, scales[i]!);
-    return solution;
-  };
+  const gram = new Float64Array(linear * linear);
+  const mixed = new Float64Array(curved * linear);
+  for (let i = 0; i < linear; i++) {
+    for (let j = 0; j <= i; j++) gram[i * linear + j] = dot(columns[i]!, columns[j]!);
+    for (let j = 0; j < curved; j++) mixed[j * linear + i] = dot(columns[i]!, columns[linear + j]!);
+  }
+  const factored = factorise(gram, linear);
+  if (factored === null || factored.pivot < LEAST_PIVOT) return null;
 
   // What is left of the time-weighted columns when the basis is projected out.
-  const projected = Matrix.zeros(curved, curved);
+  const projected = new Float64Array(curved * curved);
+  const solved = mixed.slice();
+  for (let j = 0; j < curved; j++) solveInto(factored, solved, j * linear);
   for (let i = 0; i < curved; i++) {
-    for (let j = i; j < curved; j++) {
-      const product = dot(columns[linear + i]!, columns[linear + j]!);
-      projected.set(i, j, product);
-      projected.set(j, i, product);
+    for (let j = 0; j <= i; j++) {
+      let product = dot(columns[linear + i]!, columns[linear + j]!);
+      for (let k = 0; k < linear; k++) product -= mixed[i * linear + k]! * solved[j * linear + k]!;
+      projected[i * curved + j] = product;
+      projected[j * curved + i] = product;
     }
   }
-  projected.sub(mixed.transpose().mmul(solveGram(mixed)));
 
-  const channelCount = data.channels.length;
-  const right = Matrix.zeros(linear, channelCount);
-  for (let c = 0; c < channelCount; c++) {
-    for (let i = 0; i < linear; i++) right.set(i, c, dot(columns[i]!, data.channels[c]!));
-  }
-  const solution = solveGram(right);
-
+  const count = data.channels.length;
   const coefficients: Float64Array[] = [];
-  const residual = new Float64Array(channelCount);
-  const information = Matrix.zeros(curved, curved);
+  const residual = new Float64Array(count);
+  const information = new Float64Array(curved * curved);
   const gradient = new Float64Array(curved);
+  const slope = new Float64Array(curved);
+  const right = new Float64Array(linear);
   let deviance = 0;
-  const error = new Float64Array(n);
-  for (let c = 0; c < channelCount; c++) {
-    const a = Float64Array.from({ length: linear }, (_, i) => solution.get(i, c));
+  for (let c = 0; c < count; c++) {
+    const y = data.channels[c]!;
+    for (let i = 0; i < linear; i++) right[i] = dot(columns[i]!, y);
+    const a = right.slice();
+    solveInto(factored, a);
+    let explained = 0;
+    for (let i = 0; i < linear; i++) explained += a[i]! * right[i]!;
+    for (let j = 0; j < curved; j++) {
+      let product = dot(columns[linear + j]!, y);
+      for (let i = 0; i < linear; i++) product -= mixed[j * linear + i]! * a[i]!;
+      slope[j] = product;
+    }
     coefficients.push(a);
-    error.set(data.channels[c]!);
-    for (let i = 0; i < linear; i++) subtract(error, columns[i]!, a[i]!);
-    residual[c] = Math.max(dot(error, error), ROUNDING * data.energy[c]!);
+    residual[c] = Math.max(data.energy[c]! - explained, ROUNDING * data.energy[c]!);
     deviance += n * Math.log(residual[c]!);
-    const weight = n / residual[c]!;
-    addInformation(information, gradient, a, projected, columns, linear, error, weight);
+    addInformation(information, gradient, a, projected, slope, n / residual[c]!);
   }
   return { poles, coefficients, residual, deviance, information, gradient };
 }
 
 /**
  * The model's derivatives are combinations of the time-weighted columns t e^(−αt) cos and t e^(−αt) sin:
- * ∂y/∂α = −(re, im) and ∂y/∂ω = (im, −re).
+ * ∂y/∂α = −(re, im) and ∂y/∂ω = (im, −re). `slope` holds the products of those columns with the residuals.
  */
 function addInformation(
-  information: Matrix,
+  information: Float64Array,
   gradient: Float64Array,
   a: Float64Array,
-  projected: Matrix,
-  columns: readonly Float64Array[],
-  linear: number,
-  error: Float64Array,
+  projected: Float64Array,
+  slope: Float64Array,
   weight: number,
 ): void {
   const size = gradient.length;
-  const left = new Float64Array(size);
-  const rightWeights = new Float64Array(size);
-  for (let k = 0; k < size; k += 2) {
-    const re = a[1 + k]!;
-    const im = a[2 + k]!;
-    left[k] = -re;
-    rightWeights[k] = -im;
-    left[k + 1] = im;
-    rightWeights[k + 1] = -re;
-    const withCos = dot(columns[linear + k]!, error);
-    const withSin = dot(columns[linear + k + 1]!, error);
-    gradient[k]! += weight * (-re * withCos - im * withSin);
-    gradient[k + 1]! += weight * (im * withCos - re * withSin);
-  }
-  for (let p = 0; p < size; p++) {
-    const row = p - (p % 2);
-    for (let q = p; q < size; q++) {
-      const column = q - (q % 2);
-      const value =
-        left[p]! * (projected.get(row, column) * left[q]! + projected.get(row, column + 1) * rightWeights[q]!) +
-        rightWeights[p]! *
-          (projected.get(row + 1, column) * left[q]! + projected.get(row + 1, column + 1) * rightWeights[q]!);
-      information.set(p, q, information.get(p, q) + weight * value);
-      if (p !== q) information.set(q, p, information.get(p, q));
+  for (let p = 0; p < size; p += 2) {
+    const reP = a[1 + p]!;
+    const imP = a[2 + p]!;
+    gradient[p]! += weight * (-reP * slope[p]! - imP * slope[p + 1]!);
+    gradient[p + 1]! += weight * (imP * slope[p]! - reP * slope[p + 1]!);
+    for (let q = 0; q < size; q += 2) {
+      const reQ = a[1 + q]!;
+      const imQ = a[2 + q]!;
+      const cc = weight * projected[p * size + q]!;
+      const cs = weight * projected[p * size + q + 1]!;
+      const sc = weight * projected[(p + 1) * size + q]!;
+      const ss = weight * projected[(p + 1) * size + q + 1]!;
+      information[p * size + q]! += reP * (cc * reQ + cs * imQ) + imP * (sc * reQ + ss * imQ);
+      information[p * size + q + 1]! += reP * (cs * reQ - cc * imQ) + imP * (ss * reQ - sc * imQ);
+      information[(p + 1) * size + q]! += reP * (sc * reQ + ss * imQ) - imP * (cc * reQ + cs * imQ);
+      information[(p + 1) * size + q + 1]! += imP * (cc * imQ - cs * reQ) + reP * (ss * reQ - sc * imQ);
     }
   }
 }
 
-function solveStep(state: State, damping: number): Float64Array | null {
+function dampedStep(state: State, damping: number): Float64Array | null {
   const size = state.gradient.length;
-  const damped = state.information.clone();
-  for (let i = 0; i < size; i++) damped.set(i, i, damped.get(i, i) * (1 + damping));
-  const inverse = inverseOf(damped);
-  if (inverse === null) return null;
-  const step = new Float64Array(size);
-  for (let i = 0; i < size; i++) {
-    for (let j = 0; j < size; j++) step[i]! += inverse.get(i, j) * state.gradient[j]!;
-  }
+  const damped = state.information.slice();
+  for (let i = 0; i < size; i++) damped[i * size + i]! *= 1 + damping;
+  const factored = factorise(damped, size);
+  if (factored === null) return null;
+  const step = state.gradient.slice();
+  solveInto(factored, step);
   return step;
 }
 
@@ -214,57 +214,40 @@ function relativeSize(poles: readonly Pole[], step: Float64Array): number {
 }
 
 function finish(data: FitData, state: State): DampedFit | null {
-  const channelCount = data.channels.length;
-  const n = data.channels[0]!.length;
+  const factored = factorise(state.information, state.gradient.length);
+  if (factored === null) return null;
   // Weights used n / RSS; unbiased noise has fewer degrees of freedom.
-  const free = n - (2 * state.poles.length + 1) - (2 * state.poles.length) / channelCount;
-  const inverse = inverseOf(state.information);
-  if (inverse === null) return null;
+  const n = data.channels[0]!.length;
+  const free = degreesOfFreedom(n, state.poles.length, data.channels.length);
   return {
     poles: [...state.poles],
     coefficients: state.coefficients,
     residual: state.residual,
-    covariance: inverse.mul(n / free),
+    covariance: inverseOf(factored).map((v) => (v * n) / free),
     deviance: state.deviance,
   };
 }
 
-function inverseOf(matrix: Matrix): Matrix | null {
-  const size = matrix.rows;
-  const scaled = matrix.clone();
-  const scales = Array.from({ length: size }, (_, i) => 1 / Math.sqrt(matrix.get(i, i)));
-  for (let i = 0; i < size; i++) {
-    for (let j = 0; j < size; j++) scaled.set(i, j, scaled.get(i, j) * (scales[i]! * scales[j]!));
-  }
-  const cholesky = new CholeskyDecomposition(scaled);
-  if (!cholesky.isPositiveDefinite()) return null;
-  const inverse = cholesky.solve(Matrix.eye(size));
-  for (let i = 0; i < size; i++) {
-    for (let j = 0; j < size; j++) inverse.set(i, j, inverse.get(i, j) * (scales[i]! * scales[j]!));
-  }
-  return inverse;
-}
-
-/** A pivot this small beside 1 means that two columns of the basis are the same to rounding. */
-function illConditioned(cholesky: CholeskyDecomposition): boolean {
-  return cholesky.lowerTriangularMatrix.diag().some((pivot) => !(pivot > 1e-5));
+/** Samples of one channel less its own unknowns and its share of the common ones. */
+export function degreesOfFreedom(samples: number, modes: number, channels: number): number {
+  return samples - (2 * modes + 1) - (2 * modes) / channels;
 }
 
 /** Columns 1, e^(−αt) cos ωt, e^(−αt) sin ωt, …, then the same oscillations times t. */
-function basis(poles: readonly Pole[], n: number, stepS: number): Float64Array[] {
-  const plain: Float64Array[] = [new Float64Array(n).fill(1)];
-  const weighted: Float64Array[] = [];
-  for (const { alpha, omega } of poles) {
+function fillBasis(columns: readonly Float64Array[], poles: readonly Pole[], stepS: number): void {
+  columns[0]!.fill(1);
+  const weighted = 2 * poles.length;
+  for (const [k, { alpha, omega }] of poles.entries()) {
+    const cosine = columns[1 + 2 * k]!;
+    const sine = columns[2 + 2 * k]!;
+    const cosineT = columns[weighted + 1 + 2 * k]!;
+    const sineT = columns[weighted + 2 + 2 * k]!;
     const decay = Math.exp(-alpha * stepS);
     const stepRe = decay * Math.cos(omega * stepS);
     const stepIm = decay * Math.sin(omega * stepS);
-    const cosine = new Float64Array(n);
-    const sine = new Float64Array(n);
-    const cosineT = new Float64Array(n);
-    const sineT = new Float64Array(n);
     let re = 1;
     let im = 0;
-    for (let i = 0; i < n; i++) {
+    for (let i = 0; i < cosine.length; i++) {
       const t = i * stepS;
       cosine[i] = re;
       sine[i] = im;
@@ -274,12 +257,30 @@ function basis(poles: readonly Pole[], n: number, stepS: number): Float64Array[]
       im = re * stepIm + im * stepRe;
       re = next;
     }
-    plain.push(cosine, sine);
-    weighted.push(cosineT, sineT);
   }
-  return [...plain, ...weighted];
 }
 
+function subtractOscillation(
+  y: Float64Array,
+  cosine: number,
+  sine: number,
+  { alpha, omega }: Pole,
+  stepS: number,
+): void {
+  const decay = Math.exp(-alpha * stepS);
+  const stepRe = decay * Math.cos(omega * stepS);
+  const stepIm = decay * Math.sin(omega * stepS);
+  let re = cosine;
+  let im = -sine;
+  for (let i = 0; i < y.length; i++) {
+    y[i]! -= re;
+    const next = re * stepRe - im * stepIm;
+    im = re * stepIm + im * stepRe;
+    re = next;
+  }
+}
+
+/** Four sums side by side: the additions need not wait for each other. */
 function dot(x: Float64Array, y: Float64Array): number {
   const n = x.length;
   const whole = n - (n % 4);
@@ -295,8 +296,4 @@ function dot(x: Float64Array, y: Float64Array): number {
   }
   for (let i = whole; i < n; i++) a += x[i]! * y[i]!;
   return a + b + (c + d);
-}
-
-function subtract(from: Float64Array, column: Float64Array, factor: number): void {
-  for (let i = 0; i < from.length; i++) from[i]! -= factor * column[i]!;
 }

@@ -1,7 +1,17 @@
-import { fitDamped, type DampedFit, type FitData } from './damped-fit.ts';
-import { decimate, decimationLoss, type Decimated } from './decimate.ts';
-import { createRealTransform, powerOfTwoFrom } from './fourier.ts';
-import { shiftPoles, signalSubspace, type Pole } from './pencil.ts';
+import { degreesOfFreedom, residualsOf, type DampedFit } from './damped-fit.ts';
+import {
+  aboutMean,
+  createGrid,
+  energyOf,
+  meanOf,
+  MOST_MODES,
+  selectModel,
+  strongestHz,
+  summedPower,
+  unitEnergy,
+  type Grid,
+} from './decay-model.ts';
+import type { Pole } from './pencil.ts';
 
 export interface DecayOptions {
   /** About where the wanted mode is, Hz; it comes first in the result. */
@@ -38,15 +48,9 @@ export type DecayIdentification =
     }
   | { modes: []; reason: string };
 
-const MOST_MODES = 6;
 const FEWEST_SAMPLES = 16;
 /** Above this ratio a pole is a passing disturbance, not a mode of a bridge. */
 const MOST_DAMPED = 0.25;
-/** Part of the record that the decimating filter may take from its end. */
-const TOLERATED_LOSS = 0.04;
-/** Samples for each cycle of the highest wanted frequency when looking for start values. */
-const START_OVERSAMPLING = 4;
-
 /**
  * Natural frequencies and damping ratios from a free decay seen by one or more channels.
  *
@@ -79,147 +83,10 @@ export function identifyDecay(
   if (live.length === 0) return none('nothing moves: all channels are constant');
 
   const band = options.bandHz ?? defaultBand(centred, rateHz, options.expectedHz);
-  const grid = refiningGrid(live, rateHz, band[1]);
-  const best = selectModel(grid, startPoles(live, rateHz, band), band);
+  const grid = createGrid(live, rateHz, band[1]);
+  const best = selectModel(grid, band);
   if (best === null) return none('no damped oscillation could be fitted');
   return report(channels, live, grid, best, { rateHz, band, wanted, expectedHz: options.expectedHz });
-}
-
-interface Grid extends FitData {
-  decimation: Decimated[];
-  rateHz: number;
-}
-
-/** Low-passed and decimated so that the fit is cheap, but not so far that the filter eats the end of the record. */
-function refiningGrid(live: readonly Float64Array[], rateHz: number, upToHz: number): Grid {
-  const seconds = live[0]!.length / rateHz;
-  let factor = startFactor(live[0]!.length, rateHz, upToHz);
-  while (factor > 1 && decimationLoss(upToHz, rateHz, factor) > TOLERATED_LOSS * seconds) factor--;
-  const decimation = live.map((y) => decimate(y, factor, upToHz, rateHz));
-  const kept = decimation.map(({ samples }) => samples);
-  return {
-    decimation,
-    channels: kept,
-    energy: Float64Array.from(kept, (y) => Math.max(energyOf(aboutMean(y)), Number.MIN_VALUE)),
-    stepS: factor / rateHz,
-    rateHz,
-  };
-}
-
-function startFactor(n: number, rateHz: number, upToHz: number): number {
-  let factor = Math.max(1, Math.floor(rateHz / (START_OVERSAMPLING * upToHz)));
-  while (factor > 1 && n / factor - decimationLoss(upToHz, rateHz, factor) * (rateHz / factor) < 2 * FEWEST_SAMPLES)
-    factor--;
-  return factor;
-}
-
-/** Candidate sets of poles, one for each assumed size of the signal subspace. */
-function startPoles(live: readonly Float64Array[], rateHz: number, band: readonly [number, number]): Pole[][] {
-  const factor = startFactor(live[0]!.length, rateHz, band[1]);
-  const stepS = factor / rateHz;
-  const records = live.map((y) => {
-    const record = aboutMean(decimate(y, factor, band[1], rateHz).samples);
-    const scale = 1 / Math.sqrt(energyOf(record) || 1);
-    return record.map((v) => v * scale);
-  });
-  const subspace = signalSubspace(records, stepS);
-  const sets: Pole[][] = [];
-  const largest = Math.min(2 * MOST_MODES, subspace.vectors.rows - 1);
-  for (let rank = 2; rank <= largest; rank++) {
-    const poles = shiftPoles(subspace, rank).map(tamed);
-    if (poles.length > 0 && distinct(poles, records[0]!.length * stepS)) sets.push(poles);
-  }
-  return sets;
-}
-
-/** Noise may put a start value on the growing side; the fit then begins from light damping. */
-function tamed({ alpha, omega }: Pole): Pole {
-  return { alpha: Math.min(Math.max(alpha, 1e-3 * omega), omega), omega };
-}
-
-/**
- * Two poles nearer than their own widths, or than half a cycle over the record, cannot be told from one mode whose
- * frequency drifts as it decays, which is how a ballasted deck behaves.
- */
-function distinct(poles: readonly Pole[], seconds: number): boolean {
-  const sorted = [...poles].sort((p, q) => p.omega - q.omega);
-  return sorted.every((pole, i) => {
-    const before = sorted[i - 1];
-    return before === undefined || pole.omega - before.omega > pole.alpha + before.alpha + Math.PI / seconds;
-  });
-}
-
-/** The number of modes that Schwarz's criterion prefers (1978), then more as long as the residuals hold one. */
-function selectModel(grid: Grid, sets: readonly Pole[][], band: readonly [number, number]): DampedFit | null {
-  const seconds = grid.channels[0]!.length * grid.stepS;
-  let best: DampedFit | null = null;
-  let bestScore = Infinity;
-  const consider = (poles: readonly Pole[]): boolean => {
-    const fit = fitDamped(grid, poles, 10);
-    if (fit === null || !distinct(fit.poles, seconds)) return false;
-    const score =
-      fit.deviance + unknowns(grid, fit.poles.length) * Math.log(grid.channels[0]!.length * grid.channels.length);
-    if (!(score < bestScore)) return false;
-    best = fit;
-    bestScore = score;
-    return true;
-  };
-  let refused = 0;
-  for (const poles of sets) {
-    if (consider(poles)) refused = 0;
-    else if (++refused > 4 && best !== null) break;
-  }
-  for (;;) {
-    const poles: readonly Pole[] = (best as DampedFit | null)?.poles ?? [];
-    if (poles.length >= MOST_MODES) break;
-    if (!consider([...poles, strongestPole(remaining(grid, best), grid.stepS, poles.length === 0 ? band : null)]))
-      break;
-  }
-  return best === null ? null : fitDamped(grid, (best as DampedFit).poles, 40);
-}
-
-function unknowns({ channels }: Grid, modes: number): number {
-  return 2 * modes + channels.length * (2 * modes + 1);
-}
-
-/** What the model leaves of each channel, scaled to unit energy so that loud channels do not hide quiet ones. */
-function remaining(grid: Grid, fit: DampedFit | null): Float64Array[] {
-  return (fit === null ? grid.channels.map(aboutMean) : residualsOf(grid, fit)).map((y) => {
-    const scale = 1 / Math.sqrt(energyOf(y) || 1);
-    return y.map((v) => v * scale);
-  });
-}
-
-function strongestPole(records: readonly Float64Array[], stepS: number, band: readonly [number, number] | null): Pole {
-  const { power, stepHz } = summedPower(records, 1 / stepS);
-  const hz = strongestHz(power, stepHz, band);
-  const omega = 2 * Math.PI * hz;
-  return { omega, alpha: Math.max(0.01 * omega, 2 / (records[0]!.length * stepS)) };
-}
-
-/** Sum of the channels' periodograms, zero-padded to at least twice their length. */
-function summedPower(records: readonly Float64Array[], rateHz: number): { power: Float64Array; stepHz: number } {
-  const size = Math.max(8, powerOfTwoFrom(2 * records[0]!.length));
-  const transform = createRealTransform(size);
-  const padded = new Float64Array(size);
-  const re = new Float64Array(size / 2 + 1);
-  const im = new Float64Array(size / 2 + 1);
-  const power = new Float64Array(size / 2 + 1);
-  for (const y of records) {
-    padded.fill(0);
-    padded.set(y);
-    transform.forward(padded, re, im);
-    for (let k = 0; k < power.length; k++) power[k]! += re[k]! * re[k]! + im[k]! * im[k]!;
-  }
-  return { power, stepHz: rateHz / size };
-}
-
-function strongestHz(power: Float64Array, stepHz: number, band: readonly [number, number] | null): number {
-  const from = Math.max(2, band === null ? 2 : Math.floor(band[0] / stepHz));
-  const to = Math.min(power.length - 2, band === null ? power.length - 2 : Math.ceil(band[1] / stepHz));
-  let at = Math.min(from, power.length - 2);
-  for (let k = at; k <= to; k++) if (power[k]! > power[at]!) at = k;
-  return at * stepHz;
 }
 
 function defaultBand(
@@ -227,15 +94,9 @@ function defaultBand(
   rateHz: number,
   expectedHz: number | undefined,
 ): readonly [number, number] {
-  const around = expectedHz ?? null;
-  const [low, high] = around === null ? [0.3, 3] : [0.6, 1.6];
-  const middle = around ?? strongestFrequency(centred, rateHz);
+  const middle = expectedHz ?? strongestHz(centred, rateHz, null);
+  const [low, high] = expectedHz === undefined ? [0.3, 3] : [0.6, 1.6];
   return [low * middle, Math.min(high * middle, 0.49 * rateHz)];
-}
-
-function strongestFrequency(records: readonly Float64Array[], rateHz: number): number {
-  const { power, stepHz } = summedPower(records, rateHz);
-  return strongestHz(power, stepHz, null);
 }
 
 interface Purpose {
@@ -254,9 +115,10 @@ function report(
 ): DecayIdentification {
   const seconds = live[0]!.length / purpose.rateHz;
   const residuals = residualsOf(grid, fit);
+  const spectrum = summedPower(residuals.map(unitEnergy), 1 / grid.stepS);
   const place = channels.map((y) => live.indexOf(y));
   const modes = fit.poles
-    .map((pole, k) => describe(pole, k, grid, fit, residuals, place))
+    .map((pole, k) => describe(pole, k, grid, fit, spectrum, place))
     .filter(({ mode }) => {
       const within = mode.frequencyHz >= purpose.band[0] && mode.frequencyHz <= purpose.band[1];
       return within && Math.abs(mode.dampingRatio) < MOST_DAMPED;
@@ -271,6 +133,8 @@ function report(
   return reasons.length === 0 ? result : { ...result, reason: reasons.join('; ') };
 }
 
+type Spectrum = ReturnType<typeof summedPower>;
+
 interface Described {
   mode: DecayMode;
   energy: number;
@@ -281,19 +145,21 @@ function describe(
   k: number,
   grid: Grid,
   fit: DampedFit,
-  residuals: readonly Float64Array[],
+  spectrum: Spectrum,
   place: readonly number[],
 ): Described {
   const { alpha, omega } = pole;
   const natural = Math.hypot(alpha, omega);
-  const inflation = whiteness(grid) * colour(residuals, omega / (2 * Math.PI), grid.stepS);
+  const seconds = grid.channels[0]!.length * grid.stepS;
+  const size = 2 * fit.poles.length;
+  const inflation = whiteness(grid) * colour(spectrum, 8 / seconds, omega / (2 * Math.PI));
   const variance = (byAlpha: number, byOmega: number): number => {
-    const a = fit.covariance.get(2 * k, 2 * k);
-    const w = fit.covariance.get(2 * k + 1, 2 * k + 1);
-    const aw = fit.covariance.get(2 * k, 2 * k + 1);
+    const a = fit.covariance[2 * k * size + 2 * k]!;
+    const aw = fit.covariance[2 * k * size + 2 * k + 1]!;
+    const w = fit.covariance[(2 * k + 1) * size + 2 * k + 1]!;
     return inflation * (byAlpha * byAlpha * a + 2 * byAlpha * byOmega * aw + byOmega * byOmega * w);
   };
-  const [gainRe, gainIm] = filterGain(grid.decimation[0]!.taps, pole, grid.rateHz);
+  const [gainRe, gainIm] = filterGain(grid.taps, pole, grid.rateHz);
   const amplitudes = new Float64Array(place.length);
   const phases = new Float64Array(place.length);
   for (const [c, at] of place.entries()) {
@@ -303,7 +169,6 @@ function describe(
     amplitudes[c] = Math.hypot(re, im) / Math.hypot(gainRe, gainIm);
     phases[c] = Math.atan2(im * gainRe - re * gainIm, re * gainRe + im * gainIm);
   }
-  const seconds = grid.channels[0]!.length * grid.stepS;
   const lasting = alpha > 0 ? -Math.expm1(-2 * alpha * seconds) / (2 * alpha) : seconds;
   return {
     mode: {
@@ -334,21 +199,14 @@ function filterGain(taps: Float64Array, { alpha, omega }: Pole, rateHz: number):
  * White noise loses some power in the transition band of the decimating filter, so the residuals' variance is a
  * little below the level that holds around the modes.
  */
-function whiteness({ decimation }: Grid): number {
-  const { factor, taps } = decimation[0]!;
+function whiteness({ factor, taps }: Grid): number {
   return 1 / (factor * energyOf(taps));
 }
 
-/** How much stronger the residuals are within eight lines around a mode than on average; 1 for white noise. */
-function colour(residuals: readonly Float64Array[], hz: number, stepS: number): number {
-  const scaled = residuals.map((y) => {
-    const scale = 1 / Math.sqrt(energyOf(y) || 1);
-    return y.map((v) => v * scale);
-  });
-  const { power, stepHz } = summedPower(scaled, 1 / stepS);
-  const reach = 8 / (residuals[0]!.length * stepS);
-  const from = Math.max(1, Math.round((hz - reach) / stepHz));
-  const to = Math.min(power.length - 1, Math.round((hz + reach) / stepHz));
+/** How much stronger the residuals are within eight lines around a mode than on average; at least 1, as for white noise. */
+function colour({ power, stepHz }: Spectrum, reachHz: number, hz: number): number {
+  const from = Math.max(1, Math.round((hz - reachHz) / stepHz));
+  const to = Math.min(power.length - 1, Math.round((hz + reachHz) / stepHz));
   return Math.max(1, meanOf(power.subarray(from, to + 1)) / meanOf(power));
 }
 
@@ -367,10 +225,8 @@ function noiseOf(
   grid: Grid,
   fit: DampedFit,
 ): Float64Array {
-  const n = grid.channels[0]!.length;
-  const modes = fit.poles.length;
-  const free = n - (2 * modes + 1) - (2 * modes) / residuals.length;
-  const gain = energyOf(grid.decimation[0]!.taps);
+  const free = degreesOfFreedom(grid.channels[0]!.length, fit.poles.length, residuals.length);
+  const gain = energyOf(grid.taps);
   return Float64Array.from(place, (at) => (at < 0 ? 0 : Math.sqrt(energyOf(residuals[at]!) / free / gain)));
 }
 
@@ -417,37 +273,6 @@ function earlyMisfit(residuals: readonly Float64Array[], channels: readonly Floa
   return early > 3 * late ? (early - late) / motion : 0;
 }
 
-function residualsOf(grid: Grid, fit: DampedFit): Float64Array[] {
-  return grid.channels.map((y, c) => {
-    const a = fit.coefficients[c]!;
-    const left = y.map((v) => v - a[0]!);
-    for (const [k, { alpha, omega }] of fit.poles.entries())
-      subtractOscillation(left, a[1 + 2 * k]!, a[2 + 2 * k]!, alpha, omega, grid.stepS);
-    return left;
-  });
-}
-
-function subtractOscillation(
-  y: Float64Array,
-  cosine: number,
-  sine: number,
-  alpha: number,
-  omega: number,
-  stepS: number,
-): void {
-  const decay = Math.exp(-alpha * stepS);
-  const stepRe = decay * Math.cos(omega * stepS);
-  const stepIm = decay * Math.sin(omega * stepS);
-  let re = cosine;
-  let im = -sine;
-  for (let i = 0; i < y.length; i++) {
-    y[i]! -= re;
-    const next = re * stepRe - im * stepIm;
-    im = re * stepIm + im * stepRe;
-    re = next;
-  }
-}
-
 function checkArguments(
   channels: readonly Float64Array[],
   rateHz: number,
@@ -468,23 +293,6 @@ function checkArguments(
 const none = (reason: string): DecayIdentification => ({ modes: [], reason });
 const hz = (value: number): string => value.toPrecision(3);
 const percent = (share: number): string => `${Math.round(100 * share)} %`;
-
-function meanOf(x: Float64Array): number {
-  let sum = 0;
-  for (const v of x) sum += v;
-  return sum / x.length;
-}
-
-function aboutMean(x: Float64Array): Float64Array {
-  const mean = meanOf(x);
-  return x.map((v) => v - mean);
-}
-
-function energyOf(x: Float64Array): number {
-  let sum = 0;
-  for (const v of x) sum += v * v;
-  return sum;
-}
 
 function energySum(records: readonly Float64Array[]): number {
   return records.reduce((sum, y) => sum + energyOf(y), 0);

@@ -6,8 +6,8 @@ export interface Decimated {
   taps: Float64Array;
 }
 
-/** Kaiser's design for −70 dB: taps = 1 + (70 − 8) / (2.285 × width), width in radians a sample. */
-const STOP_BAND_DB = 70;
+/** Kaiser's design for −50 dB: taps = 1 + (50 − 8) / (2.285 × width), width in radians a sample. */
+const STOP_BAND_DB = 50;
 const BETA = 0.1102 * (STOP_BAND_DB - 8.7);
 
 /** Seconds that the filter of `decimate` takes from the end of a record. */
@@ -16,7 +16,7 @@ export function decimationLoss(passHz: number, rateHz: number, factor: number): 
 }
 
 /**
- * Keeps every `factor`-th sample of a low-passed record. What lies below `passHz` stays free of aliases (−70 dB).
+ * Keeps every `factor`-th sample of a low-passed record. What lies below `passHz` stays free of aliases (−50 dB).
  *
  * The filter has a finite response and only whole overlaps are kept, so a sum of exponentials stays exactly a sum
  * of the same exponentials, from the first sample on: what decay identification needs. The end of the record is
