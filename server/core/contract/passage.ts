@@ -54,7 +54,7 @@ export const Phases = Type.Object({
   offMicros: MicrosType,
   freeEndMicros: MicrosType,
   /** What found them. */
-  foundBy: Type.Union([Type.Literal('axle sensors'), Type.Literal('wheel-rail noise')]),
+  foundBy: Type.Union([Type.Literal('axle sensors'), Type.Literal('wheel-rail noise'), Type.Literal('given')]),
   quality: Quality,
   notes: Type.Array(Type.String()),
 });
@@ -70,11 +70,13 @@ export const Axle = Type.Object({
 export type Axle = Static<typeof Axle>;
 
 export const Passage = Type.Object({
-  /** Bridge id and the time name of the first axle: `ottermere-20261201-051233-2`. */
+  /** Bridge id and the time name of the trigger: `ottermere-20261201-051233-2`. */
   id: Type.String(),
   bridge: Type.String(),
+  /** The window it was computed from, and the tick that set it off. */
   startMicros: MicrosType,
   endMicros: MicrosType,
+  triggerMicros: MicrosType,
   phases: Phases,
   speedMs: Measured,
   direction: Nullable(Direction),

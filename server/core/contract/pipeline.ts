@@ -12,6 +12,8 @@ export interface PipelineOutput {
   axles: AxleEvent[];
   spectra: SpectrumLine[];
   health: SensorCondition[];
+  /** Once a minute of event time for each sensor that gave data in it. */
+  vitals: SensorVitals[];
   live: LiveSamples[];
 }
 
@@ -79,4 +81,14 @@ export interface LiveSamples {
   startMicros: Micros;
   rateHz: number;
   samples: Float32Array;
+}
+
+/** Noise (r.m.s. of the quiet seconds) and offset of one sensor in the last full minute, in SI. */
+export interface SensorVitals {
+  bridge: string;
+  sensor: string;
+  micros: Micros;
+  samples: number;
+  noise: number | null;
+  offset: number | null;
 }

@@ -1,0 +1,242 @@
+import { bridgeLengthM, type BridgeDefinition } from '../contract/bridge.ts';
+import { measured, notMeasurable, type Measured } from '../contract/measure.ts';
+import type { Axle, Direction } from '../contract/passage.ts';
+import { MICROS_PER_SECOND, type Micros } from '../contract/time.ts';
+import { mad, median, quantile } from '../signal/robust.ts';
+import { microsOf, type RecordChannel } from './record.ts';
+
+/** What the axle sensors of a passage say, with hindsight. */
+export interface AxleReading {
+  count: Measured;
+  axles: Axle[];
+  speedMs: Measured;
+  direction: Direction | null;
+  /** First axle at the first bearing it meets, last axle at the last; null where they cannot be told. */
+  onMicros: Micros | null;
+  offMicros: Micros | null;
+  /** First and last pulse of any sensor, for what can be said without a second sensor. */
+  firstPulse: Micros | null;
+  lastPulse: Micros | null;
+  notes: string[];
+}
+
+export interface Pulse {
+  micros: Micros;
+  height: number;
+}
+
+/** Standing uncertainty of a sensor's place along the bridge, m: tape and eye (common practice). */
+const PLACE_ERROR_M = 0.02;
+
+export function readAxles(bridge: BridgeDefinition, record: readonly RecordChannel[]): AxleReading {
+  const sensors = record
+    .filter((channel) => channel.axles && !channel.flags.includes('flat'))
+    .map((channel) => ({ alongM: channel.sensor.alongM, id: channel.sensor.id, pulses: axlePulses(channel) }))
+    .filter(({ pulses }) => pulses.length > 0)
+    .sort((a, b) => a.alongM - b.alongM);
+  const all = sensors.flatMap(({ pulses }) => pulses.map(({ micros }) => micros));
+  const nothing: AxleReading = {
+    count: notMeasurable(
+      record.some(({ axles }) => axles) ? 'the axle sensors saw nothing' : 'the bridge has no axle sensor',
+    ),
+    axles: [],
+    speedMs: notMeasurable('no two axle sensors saw the train'),
+    direction: null,
+    onMicros: null,
+    offMicros: null,
+    firstPulse: all.length > 0 ? Math.min(...all) : null,
+    lastPulse: all.length > 0 ? Math.max(...all) : null,
+    notes: [],
+  };
+  const first = sensors[0];
+  const last = sensors.at(-1);
+  if (first === undefined || last === undefined) return nothing;
+  if (last.alongM - first.alongM < 1) return oneSensor(nothing, first.pulses, first.id);
+  return pairSensors(nothing, bridge, first, last);
+}
+
+function oneSensor(nothing: AxleReading, pulses: Pulse[], id: string): AxleReading {
+  return {
+    ...nothing,
+    count: measured(pulses.length, null, 'usable', `counted on ${id} alone`),
+    notes: [`only axle sensor ${id} saw the train`],
+  };
+}
+
+interface Place {
+  alongM: number;
+  id: string;
+  pulses: Pulse[];
+}
+
+function pairSensors(nothing: AxleReading, bridge: BridgeDefinition, low: Place, high: Place): AxleReading {
+  const { pairs, complete } = matchPulses(low.pulses, high.pulses);
+  const notes: string[] = [];
+  if (pairs.length === 0)
+    return {
+      ...oneSensor(nothing, longer(low, high).pulses, longer(low, high).id),
+      notes: ['the axle sensors do not agree'],
+    };
+  const base = high.alongM - low.alongM;
+  const delays = pairs.map(([a, b]) => (b.micros - a.micros) / MICROS_PER_SECOND);
+  const rising = median(delays) > 0;
+  const speeds = delays.map((delay) => base / Math.abs(delay));
+  const speed = base / Math.abs(median(delays));
+  const spread = pairs.length > 1 ? (1.4826 * mad(speeds)) / Math.sqrt(pairs.length) : speed * 0.02;
+  const even = pairs.length < 2 || Math.max(...speeds) / Math.min(...speeds) < 1.2;
+  const meanSpeed = even ? base / Math.abs(mean(delays)) : speed;
+  const error = Math.hypot(spread, (speed * Math.SQRT2 * PLACE_ERROR_M) / base);
+  if (!even)
+    notes.push(`speed varied from ${quantile(speeds, 0.1).toFixed(1)} to ${quantile(speeds, 0.9).toFixed(1)} m/s`);
+  if (!complete) notes.push(`${low.id} saw ${low.pulses.length} axles, ${high.id} ${high.pulses.length}`);
+  const axles = placeAxles(pairs, speeds);
+  const [entry, exit] = rising ? [low, high] : [high, low];
+  const lengthM = bridgeLengthM(bridge);
+  const moving = quantile(speeds, 0.9);
+  const near = (group: readonly number[]): number => {
+    const fast = group.filter((v) => v > moving / 2);
+    return fast.length > 0 ? median(fast) : moving;
+  };
+  const beforeM = rising ? entry.alongM : lengthM - entry.alongM;
+  const afterM = rising ? lengthM - exit.alongM : exit.alongM;
+  return {
+    count: complete
+      ? measured(pairs.length, 0)
+      : measured(Math.max(low.pulses.length, high.pulses.length), null, 'usable', notes.at(-1) ?? ''),
+    axles,
+    speedMs: even
+      ? measured(meanSpeed, error, complete ? 'good' : 'usable', complete ? undefined : notes.at(-1))
+      : measured(speed, error, 'usable', notes[0]),
+    direction: rising ? 'rising' : 'falling',
+    onMicros: Math.round(entry.pulses[0]!.micros - (beforeM / near(speeds.slice(0, 4))) * MICROS_PER_SECOND),
+    offMicros: Math.round(exit.pulses.at(-1)!.micros + (afterM / near(speeds.slice(-4))) * MICROS_PER_SECOND),
+    firstPulse: nothing.firstPulse,
+    lastPulse: nothing.lastPulse,
+    notes,
+  };
+}
+
+/**
+ * Pairs the pulses of two sensors: one to one where the numbers are equal, else by the delay that most of them share.
+ */
+export function matchPulses(
+  low: readonly Pulse[],
+  high: readonly Pulse[],
+): { pairs: [Pulse, Pulse][]; complete: boolean } {
+  if (low.length === high.length) return { pairs: low.map((pulse, i) => [pulse, high[i]!]), complete: true };
+  let best: [Pulse, Pulse][] = [];
+  for (const a of low) {
+    for (const b of high) {
+      const pairs = pairsAt(low, high, b.micros - a.micros);
+      if (pairs.length > best.length) best = pairs;
+    }
+  }
+  const enough = best.length >= 2 && best.length >= Math.min(low.length, high.length) / 2;
+  return { pairs: enough ? best : [], complete: false };
+}
+
+/** A pulse belongs to a shared delay when it lies within this share of it, s at least. */
+const DELAY_SHARE = 0.06;
+
+function pairsAt(low: readonly Pulse[], high: readonly Pulse[], delay: number): [Pulse, Pulse][] {
+  const tolerance = Math.max(8_000, Math.abs(delay) * DELAY_SHARE);
+  const pairs: [Pulse, Pulse][] = [];
+  let from = 0;
+  for (const a of low) {
+    for (let j = from; j < high.length; j++) {
+      const offBy = high[j]!.micros - a.micros - delay;
+      if (offBy > tolerance) break;
+      if (offBy < -tolerance) continue;
+      pairs.push([a, high[j]!]);
+      from = j + 1;
+      break;
+    }
+  }
+  return pairs;
+}
+
+/** Where each axle runs behind the first: distance by the mean of neighbouring speeds, good for constant speed and gentle braking. */
+function placeAxles(pairs: readonly [Pulse, Pulse][], speeds: readonly number[]): Axle[] {
+  const heights = pairs.map(([a, b]) => (a.height + b.height) / 2);
+  const usual = median(heights);
+  const axles: Axle[] = [];
+  let behind = 0;
+  let before = 0;
+  pairs.forEach(([a, b], i) => {
+    const micros = Math.round((a.micros + b.micros) / 2);
+    if (i > 0) behind += (((speeds[i]! + speeds[i - 1]!) / 2) * (micros - before)) / MICROS_PER_SECOND;
+    before = micros;
+    axles.push({ micros, behindFirstM: behind, weight: heights[i]! / usual });
+  });
+  return axles;
+}
+
+/** A pulse stands above noise and above this share of the highest; two pulses are parted by a valley below this share of the lesser. */
+const HEIGHT_SHARE = 0.12;
+const VALLEY_SHARE = 0.7;
+const SIGMAS = 8;
+
+/** Crests of the axle pulses in one channel, by a parabola through the top of each. */
+export function axlePulses(channel: RecordChannel): Pulse[] {
+  const { x } = channel;
+  const centre = median(x);
+  const noise = channel.noise ?? 1.4826 * mad(x);
+  const highest = x.reduce((most, value) => Math.max(most, value), 0) - centre;
+  const threshold = Math.max(SIGMAS * noise, HEIGHT_SHARE * highest);
+  if (highest <= threshold || highest <= 0) return [];
+  const crests: number[] = [];
+  let valley = 0;
+  for (let i = 1; i < x.length - 1; i++) {
+    const value = x[i]! - centre;
+    valley = Math.min(valley, value);
+    if (value < threshold || value < x[i - 1]! - centre || value <= x[i + 1]! - centre) continue;
+    const previous = crests.at(-1);
+    const parted = previous === undefined || valley < VALLEY_SHARE * Math.min(value, x[previous]! - centre);
+    if (parted) crests.push(i);
+    else if (value > x[previous]! - centre) crests[crests.length - 1] = i;
+    if (parted || crests.at(-1) === i) valley = value;
+  }
+  return crests.map((crest) => {
+    const top = topOf(x, crest, centre);
+    return { micros: microsOf(channel, top.index), height: top.height };
+  });
+}
+
+/** Least-squares parabola through the samples about a crest that are above two thirds of it. */
+function topOf(x: Float64Array, crest: number, centre: number): { index: number; height: number } {
+  const height = x[crest]! - centre;
+  let half = 1;
+  const above = (i: number): boolean => i >= 0 && i < x.length && x[i]! - centre > (2 / 3) * height;
+  while (above(crest - half - 1) && above(crest + half + 1)) half += 1;
+  let s0 = 0;
+  let s1 = 0;
+  let s2 = 0;
+  let s4 = 0;
+  let sy = 0;
+  let sxy = 0;
+  let sxxy = 0;
+  for (let k = -half; k <= half; k++) {
+    const y = (x[crest + k] ?? centre) - centre;
+    s0 += 1;
+    s1 += k;
+    s2 += k * k;
+    s4 += k ** 4;
+    sy += y;
+    sxy += k * y;
+    sxxy += k * k * y;
+  }
+  const bend = (s0 * sxxy - s2 * sy) / (s0 * s4 - s2 * s2);
+  const slope = sxy / s2;
+  if (bend >= 0) return { index: crest, height };
+  const shift = Math.max(-half, Math.min(half, -slope / (2 * bend)));
+  const level = (sy - bend * s2 - slope * s1) / s0;
+  return { index: crest + shift, height: level + slope * shift + bend * shift * shift };
+}
+
+function longer(a: Place, b: Place): Place {
+  return a.pulses.length >= b.pulses.length ? a : b;
+}
+
+function mean(values: readonly number[]): number {
+  return values.reduce((sum, value) => sum + value, 0) / values.length;
+}

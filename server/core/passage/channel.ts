@@ -1,0 +1,286 @@
+import { countsAxles, isDeckAcceleration, spanAt, type BridgeDefinition, type Sensor } from '../contract/bridge.ts';
+import type { SensorCondition } from '../contract/health.ts';
+import type { LevelEvent, LiveSamples, SpectrumLine } from '../contract/pipeline.ts';
+import { MICROS_PER_SECOND, sampleMicros, type Micros } from '../contract/time.ts';
+import { unitConversion } from '../contract/units.ts';
+import { highpass, lowpass } from '../signal/butterworth.ts';
+import { createCascade, filterInto, settleAt, type Cascade } from '../signal/cascade.ts';
+import { bandOfLimit } from './band.ts';
+import { closeIntake, createIntake, takeIn, type Intake, type IntakeSink } from './intake.ts';
+import { createLevelWatch, watchLevel, type LevelWatch } from './level.ts';
+import { createMemory, remember, type Memory } from './memory.ts';
+import { createPulseFinder, findPulses, type PulseFinder } from './pulse.ts';
+import { createRollingSpectrum, rollSpectrum, type RollingSpectrum } from './rolling-spectrum.ts';
+import { RULE, TICK_MICROS } from './rule.ts';
+import { createVitals, watchVitals, type Vitals } from './vitals.ts';
+
+/** Everything the pipeline keeps of one sensor. Plain data: it can be cloned, stored and carried on elsewhere. */
+export interface Channel {
+  sensor: Sensor;
+  deck: boolean;
+  axles: boolean;
+  /** Slow channels (temperature) are not waited for. */
+  slow: boolean;
+  /** Calibrated = (raw × gain) + shift, in SI, rounded to float32: the number that is stored and computed with. */
+  gain: number;
+  shift: number;
+  intake: Intake;
+  memory: Memory;
+  vitals: Vitals;
+  /** Running offset and how many samples it has seen. */
+  offset: number;
+  offsetSeen: number;
+  /** Time of sample 0 of the present run, and how many samples of it are behind us. */
+  runStart: Micros;
+  runCount: number;
+  newest: Micros | null;
+  bands: { cascade: Cascade | null; watches: LevelWatch[] }[];
+  noise: Cascade | null;
+  pulses: PulseFinder | null;
+  spectrum: RollingSpectrum | null;
+  /** Features of finished ticks that the bridge has not taken yet, oldest first. */
+  ticks: Tick[];
+  /** The tick in hand. */
+  tick: Tick | null;
+  /** Number of the newest finished tick; -1 before the first. */
+  through: number;
+  /** False while the channel lags so far that the others no longer wait. */
+  waitedFor: boolean;
+}
+
+/** What one channel did in one tenth of a second. */
+export interface Tick {
+  number: number;
+  samples: number;
+  /** Sum of squares above the noise edge, (m/s²)². */
+  noisePower: number;
+  /** Axle pulses, as times. */
+  pulses: Micros[];
+}
+
+/** Where a channel's findings go. */
+export interface ChannelSink {
+  level: (event: LevelEvent) => void;
+  live: (samples: LiveSamples) => void;
+  spectrum: (line: SpectrumLine) => void;
+  condition: (condition: SensorCondition) => void;
+  pulse: (channel: Channel, micros: Micros, height: number) => void;
+}
+
+/** Below this rate a channel is slow: it takes no part in detection. */
+const SLOW_HZ = 10;
+
+export function createChannel(bridge: BridgeDefinition, sensor: Sensor): Channel {
+  const conversion = unitConversion(sensor.unit, sensor.quantity) ?? { factor: 1, shift: 0 };
+  const deck = isDeckAcceleration(sensor);
+  const span = spanAt(bridge, sensor.alongM);
+  const limits = deck ? bridge.limits.filter((limit) => limit.spans?.includes(span.id) ?? true) : [];
+  const noiseHz = Math.min(
+    Math.max(RULE.noiseFromHz, RULE.noiseOverF1 * (span.frequenciesHz?.f1 ?? 0)),
+    0.3 * sensor.rateHz,
+  );
+  return {
+    sensor,
+    deck,
+    axles: countsAxles(sensor),
+    slow: sensor.rateHz < SLOW_HZ,
+    gain: (sensor.scale ?? 1) * conversion.factor,
+    shift: (sensor.offset ?? 0) * conversion.factor + conversion.shift,
+    intake: createIntake(sensor.rateHz),
+    memory: createMemory(sensor.rateHz),
+    vitals: createVitals(sensor),
+    offset: 0,
+    offsetSeen: 0,
+    runStart: 0,
+    runCount: 0,
+    newest: null,
+    bands: bandsOf(bridge, sensor, limits),
+    noise: deck ? createCascade(highpass(RULE.noiseOrder, noiseHz, sensor.rateHz)) : null,
+    pulses: countsAxles(sensor) ? createPulseFinder() : null,
+    spectrum: deck ? createRollingSpectrum(sensor.rateHz) : null,
+    ticks: [],
+    tick: null,
+    through: -1,
+    waitedFor: sensor.rateHz >= SLOW_HZ,
+  };
+}
+
+/** One live filter per band edge, shared by the limits that ask for it. Without a limit: the code's band, for the screen. */
+function bandsOf(bridge: BridgeDefinition, sensor: Sensor, limits: BridgeDefinition['limits']): Channel['bands'] {
+  if (!isDeckAcceleration(sensor)) return [];
+  const byEdge = new Map<number, LevelWatch[]>();
+  for (const limit of limits) {
+    const { upToHz } = bandOfLimit(bridge, limit.band, sensor);
+    byEdge.set(upToHz, [...(byEdge.get(upToHz) ?? []), createLevelWatch(limit)]);
+  }
+  if (byEdge.size === 0) byEdge.set(bandOfLimit(bridge, 'EN 1990 A2', sensor).upToHz, []);
+  return [...byEdge].map(([upToHz, watches]) => ({
+    cascade: upToHz < 0.49 * sensor.rateHz ? createCascade(lowpass(RULE.bandOrder, upToHz, sensor.rateHz)) : null,
+    watches,
+  }));
+}
+
+/** Takes raw samples of one block. */
+export function feedChannel(
+  channel: Channel,
+  bridge: string,
+  startMicros: Micros,
+  raw: Float64Array,
+  sink: ChannelSink,
+): void {
+  const samples = new Float32Array(raw.length);
+  for (let i = 0; i < raw.length; i++) samples[i] = raw[i]! * channel.gain + channel.shift;
+  const own = sinkOf(channel, bridge, sink);
+  takeIn(channel.intake, { startMicros, samples }, own);
+}
+
+/** At the end of a recording: takes what is held back and finishes the tick in hand. */
+export function closeChannel(channel: Channel, bridge: string, sink: ChannelSink): void {
+  closeIntake(channel.intake, sinkOf(channel, bridge, sink));
+  finishTick(channel);
+}
+
+function sinkOf(channel: Channel, bridge: string, sink: ChannelSink): IntakeSink {
+  return {
+    take: (samples, from, to, startMicros, afterGap) =>
+      process(channel, bridge, samples, from, to, startMicros, afterGap, sink),
+    note: (code, state, micros, detail) =>
+      sink.condition({ bridge, sensor: channel.sensor.id, code, state, micros, detail }),
+  };
+}
+
+/** Work space of `process`, grown as needed; never carries anything from one call to the next. */
+let centred = new Float64Array(0);
+let filtered = new Float64Array(0);
+
+function process(
+  channel: Channel,
+  bridge: string,
+  samples: Float32Array,
+  from: number,
+  to: number,
+  startMicros: Micros | null,
+  afterGap: boolean,
+  sink: ChannelSink,
+): void {
+  if (startMicros !== null) {
+    channel.runStart = startMicros;
+    channel.runCount = 0;
+  }
+  remember(channel.memory, samples, from, to, startMicros);
+  const base = channel.runCount - from;
+  const microsAt = (index: number): Micros => sampleMicros(channel.runStart, base + index, channel.sensor.rateHz);
+  if (centred.length < to) {
+    centred = new Float64Array(to * 2);
+    filtered = new Float64Array(to * 2);
+  }
+  watchVitals(channel.vitals, bridge, samples, from, to, microsAt, sink.condition);
+  if (channel.deck) {
+    removeOffset(channel, samples, from, to);
+    if (afterGap) settleFilters(channel, centred[from]!);
+    const settled = channel.offsetSeen >= RULE.settleSeconds * channel.sensor.rateHz;
+    channel.bands.forEach((band, b) => {
+      if (band.cascade === null) filtered.set(centred.subarray(from, to), from);
+      else filterInto(band.cascade, centred, filtered, from, to);
+      const firstWatched = settled
+        ? Math.max(from, to - (channel.offsetSeen - RULE.settleSeconds * channel.sensor.rateHz))
+        : to;
+      for (const watch of band.watches) {
+        watchLevel(watch, filtered, Math.ceil(firstWatched), to, microsAt, (event) =>
+          sink.level({ bridge, sensor: channel.sensor.id, ...event }),
+        );
+      }
+      if (b === 0) sink.live(liveOf(channel, bridge, Float32Array.from(filtered.subarray(from, to)), microsAt(from)));
+    });
+    if (channel.spectrum !== null) {
+      rollSpectrum(channel.spectrum, centred, from, to, microsAt, afterGap, (line) =>
+        sink.spectrum({ bridge, sensor: channel.sensor.id, ...line }),
+      );
+    }
+    filterInto(channel.noise!, centred, filtered, from, to);
+  } else {
+    sink.live(liveOf(channel, bridge, samples.slice(from, to), microsAt(from)));
+  }
+  gatherTicks(channel, samples, from, to, microsAt, sink);
+  channel.runCount = base + to;
+  channel.newest = microsAt(to - 1);
+}
+
+function liveOf(channel: Channel, bridge: string, samples: Float32Array, startMicros: Micros): LiveSamples {
+  return { bridge, sensor: channel.sensor.id, startMicros, rateHz: channel.sensor.rateHz, samples };
+}
+
+/**
+ * Running mean with a memory of `RULE.offsetSeconds`, a plain mean until then. It lives on over gaps: after one in the
+ * middle of a passage the first sample is no offset.
+ */
+function removeOffset(channel: Channel, samples: Float32Array, from: number, to: number): void {
+  const least = 1 / (RULE.offsetSeconds * channel.sensor.rateHz);
+  let { offset, offsetSeen } = channel;
+  for (let i = from; i < to; i++) {
+    const x = samples[i]!;
+    offsetSeen += 1;
+    offset += Math.max(1 / offsetSeen, least) * (x - offset);
+    centred[i] = x - offset;
+  }
+  channel.offset = offset;
+  channel.offsetSeen = offsetSeen;
+}
+
+function settleFilters(channel: Channel, value: number): void {
+  for (const band of channel.bands) if (band.cascade !== null) settleAt(band.cascade, value);
+  settleAt(channel.noise!, value);
+}
+
+/** Sums the features of each tick; `filtered` holds what is above the noise edge. */
+function gatherTicks(
+  channel: Channel,
+  samples: Float32Array,
+  from: number,
+  to: number,
+  microsAt: (index: number) => Micros,
+  sink: ChannelSink,
+): void {
+  let at = from;
+  while (at < to) {
+    const number = Math.floor(microsAt(at) / TICK_MICROS);
+    if (channel.tick?.number !== number) {
+      finishTick(channel);
+      channel.tick = { number, samples: 0, noisePower: 0, pulses: [] };
+    }
+    const end = firstAtOrAfter((number + 1) * TICK_MICROS, at, to, channel.sensor.rateHz, microsAt);
+    let power = channel.tick.noisePower;
+    if (channel.deck) for (let i = at; i < end; i++) power += filtered[i]! * filtered[i]!;
+    channel.tick.noisePower = power;
+    channel.tick.samples += end - at;
+    if (channel.pulses !== null) {
+      findPulses(channel.pulses, samples, at, end, channel.sensor.rateHz, (index, height) => {
+        const micros = Math.round(microsAt(at) + ((index - at) * MICROS_PER_SECOND) / channel.sensor.rateHz);
+        channel.tick!.pulses.push(micros);
+        sink.pulse(channel, micros, height);
+      });
+    }
+    at = end;
+  }
+}
+
+/** First index from `at` on whose time is not before `micros`; `to` if there is none. */
+function firstAtOrAfter(
+  micros: Micros,
+  at: number,
+  to: number,
+  rateHz: number,
+  microsAt: (index: number) => Micros,
+): number {
+  let index = Math.min(to, at + Math.max(1, Math.ceil(((micros - microsAt(at)) * rateHz) / MICROS_PER_SECOND)));
+  while (index > at + 1 && microsAt(index - 1) >= micros) index -= 1;
+  while (index < to && microsAt(index) < micros) index += 1;
+  return index;
+}
+
+function finishTick(channel: Channel): void {
+  if (channel.tick === null) return;
+  channel.ticks.push(channel.tick);
+  channel.through = channel.tick.number;
+  channel.tick = null;
+}

@@ -1,0 +1,211 @@
+import { timeName, type Micros } from '../contract/time.ts';
+import { MICROS_PER_SECOND } from '../contract/time.ts';
+import { RULE, TICK_MICROS } from './rule.ts';
+
+/**
+ * Finds stretches of time that may hold a passage, one tick of all channels at a time. It only opens and closes the
+ * window; whether a train was there, and when each axle came and went, is settled on the window itself (measure.ts).
+ */
+export interface Detector {
+  floors: Record<string, Floor>;
+  /** What is happening now; null in quiet times. */
+  open: Candidate | null;
+  /** A passage that has left and rings on. */
+  ringing: Candidate | null;
+  lastTick: number;
+  /** End of the last passage: the next window does not reach back beyond it. */
+  clearFrom: Micros;
+  /** Pulses each axle sensor gave in earlier passages: a sensor that has spoken before is believed when it is silent. */
+  proven: Record<string, boolean>;
+}
+
+/** Quiet noise power of one channel, per sample. */
+interface Floor {
+  power: number;
+  ticks: number;
+}
+
+export interface Candidate {
+  id: string;
+  onsetTick: number;
+  lastActiveTick: number;
+  /** Active ticks in a row, now and at most. */
+  row: number;
+  longestRow: number;
+  /** A train, as far as can be told live. */
+  entered: boolean;
+  pulses: Record<string, number>;
+  pulseCount: number;
+  lastPulseMicros: Micros;
+  freeUntilTick: number;
+  /** Window, once closed. */
+  windowFrom: Micros;
+}
+
+export interface TickFeatures {
+  number: number;
+  /** Noise power per sample of each deck channel that has data. */
+  powers: { sensor: string; power: number }[];
+  pulses: { sensor: string; micros: Micros }[];
+}
+
+export type DetectorEvent =
+  | { kind: 'entered' | 'left' | 'discarded'; candidate: Candidate; micros: Micros }
+  | { kind: 'window'; candidate: Candidate; fromMicros: Micros; toMicros: Micros };
+
+export function createDetector(): Detector {
+  return { floors: {}, open: null, ringing: null, lastTick: -1, clearFrom: 0, proven: {} };
+}
+
+export interface DetectorSetting {
+  bridge: string;
+  freeSeconds: number;
+  /** Sensors at which each axle leaves a pulse. */
+  axleSensors: readonly string[];
+}
+
+/** Takes the next tick of the bridge; ticks come in rising order, with holes where there was no data at all. */
+export function detect(detector: Detector, setting: DetectorSetting, tick: TickFeatures): DetectorEvent[] {
+  const events: DetectorEvent[] = [];
+  const skipped = detector.lastTick >= 0 && tick.number - detector.lastTick > RULE.quietSeconds * 10;
+  if (skipped) events.push(...interrupt(detector, setting));
+  detector.lastTick = tick.number;
+  const votes = countVotes(detector, tick);
+  const active = votes || tick.pulses.length > 0;
+  if (detector.open === null && active) {
+    const onset = tick.pulses.reduce(
+      (first, pulse) => Math.min(first, Math.floor(pulse.micros / TICK_MICROS)),
+      tick.number,
+    );
+    detector.open = createCandidate(setting.bridge, onset);
+  }
+  if (detector.open !== null) events.push(...follow(detector, setting, detector.open, tick, votes));
+  if (detector.ringing !== null && tick.number >= detector.ringing.freeUntilTick) {
+    events.push(...release(detector, detector.ringing.freeUntilTick * TICK_MICROS));
+  }
+  return events;
+}
+
+/** Nothing more will come, or not for long: what is open is closed where the data end. */
+export function interrupt(detector: Detector, setting: DetectorSetting): DetectorEvent[] {
+  const events: DetectorEvent[] = [];
+  const end = (detector.lastTick + 1) * TICK_MICROS;
+  if (detector.open !== null) events.push(...leave(detector, setting, detector.open));
+  if (detector.ringing !== null)
+    events.push(...release(detector, Math.min(end, detector.ringing.freeUntilTick * TICK_MICROS)));
+  return events;
+}
+
+function createCandidate(bridge: string, onsetTick: number): Candidate {
+  return {
+    id: `${bridge}-${timeName(onsetTick * TICK_MICROS)}`,
+    onsetTick,
+    lastActiveTick: onsetTick,
+    row: 0,
+    longestRow: 0,
+    entered: false,
+    pulses: {},
+    pulseCount: 0,
+    lastPulseMicros: 0,
+    freeUntilTick: 0,
+    windowFrom: 0,
+  };
+}
+
+/** At least two channels must agree where there are two: one failing cable is no train. Quiet channels teach their floor. */
+function countVotes(detector: Detector, tick: TickFeatures): boolean {
+  let votes = 0;
+  const least = RULE.floorLeast * RULE.floorLeast;
+  for (const { sensor, power } of tick.powers) {
+    const floor = (detector.floors[sensor] ??= { power, ticks: 0 });
+    if (power > RULE.activeRatio * Math.max(floor.power, least)) votes += 1;
+    if (detector.open !== null) continue;
+    floor.ticks = Math.min(floor.ticks + 1, 100);
+    floor.power += (Math.min(power, 4 * floor.power + least) - floor.power) / floor.ticks;
+  }
+  return votes >= Math.min(2, Math.max(1, tick.powers.length));
+}
+
+function follow(
+  detector: Detector,
+  setting: DetectorSetting,
+  candidate: Candidate,
+  tick: TickFeatures,
+  votes: boolean,
+): DetectorEvent[] {
+  candidate.row = votes ? candidate.row + 1 : 0;
+  candidate.longestRow = Math.max(candidate.longestRow, candidate.row);
+  for (const { sensor, micros } of tick.pulses) {
+    candidate.pulses[sensor] = (candidate.pulses[sensor] ?? 0) + 1;
+    candidate.pulseCount += 1;
+    candidate.lastPulseMicros = Math.max(candidate.lastPulseMicros, micros);
+  }
+  if (votes || tick.pulses.length > 0) candidate.lastActiveTick = tick.number;
+  const events: DetectorEvent[] = [];
+  if (!candidate.entered && looksLikeTrain(candidate, setting)) {
+    candidate.entered = true;
+    if (detector.ringing !== null) events.push(...release(detector, (candidate.onsetTick - 2) * TICK_MICROS));
+    candidate.windowFrom = Math.max(
+      candidate.onsetTick * TICK_MICROS - RULE.beforeSeconds * MICROS_PER_SECOND,
+      detector.clearFrom,
+    );
+    events.push({ kind: 'entered', candidate, micros: candidate.onsetTick * TICK_MICROS });
+  }
+  const quietSeconds = ((tick.number - candidate.lastActiveTick) * TICK_MICROS) / MICROS_PER_SECOND;
+  if (quietSeconds > standingSeconds(detector, setting, candidate)) events.push(...leave(detector, setting, candidate));
+  return events;
+}
+
+function looksLikeTrain(candidate: Candidate, setting: DetectorSetting): boolean {
+  const speaking = Object.keys(candidate.pulses).length;
+  return (
+    candidate.longestRow >= RULE.activeTicks ||
+    speaking >= 2 ||
+    (speaking === 1 && (candidate.pulseCount >= 4 || setting.axleSensors.length === 1))
+  );
+}
+
+/** How long quiet must last before the passage counts as over: longer while the axle count says that a train stands there. */
+function standingSeconds(detector: Detector, setting: DetectorSetting, candidate: Candidate): number {
+  if (!candidate.entered || candidate.pulseCount === 0) return RULE.quietSeconds;
+  const counts = setting.axleSensors.map((sensor) => candidate.pulses[sensor] ?? 0);
+  const most = Math.max(...counts);
+  if (counts.every((count) => count === most)) return RULE.quietSeconds;
+  const silent = setting.axleSensors.filter((sensor) => (candidate.pulses[sensor] ?? 0) === 0);
+  if (silent.length === 0) return balanced(counts) ? RULE.quietSeconds : RULE.standSeconds;
+  return silent.every((sensor) => detector.proven[sensor] === true) ? RULE.standSeconds : RULE.standUnprovenSeconds;
+}
+
+/** One pulse missed by one sensor does not keep a bridge occupied. */
+function balanced(counts: readonly number[]): boolean {
+  const most = Math.max(...counts);
+  const least = Math.min(...counts);
+  return most - least <= Math.max(1, Math.floor(most / 16));
+}
+
+/** The train has gone: a passage rings on until its free part ends; what was no train is forgotten. */
+function leave(detector: Detector, setting: DetectorSetting, candidate: Candidate): DetectorEvent[] {
+  detector.open = null;
+  if (!candidate.entered) return [];
+  for (const sensor of Object.keys(candidate.pulses)) detector.proven[sensor] = true;
+  candidate.freeUntilTick = candidate.lastActiveTick + 1 + Math.ceil(setting.freeSeconds * 10);
+  detector.ringing = candidate;
+  return [{ kind: 'left', candidate, micros: (candidate.lastActiveTick + 1) * TICK_MICROS }];
+}
+
+function release(detector: Detector, toMicros: Micros): DetectorEvent[] {
+  const candidate = detector.ringing!;
+  detector.ringing = null;
+  detector.clearFrom = (candidate.lastActiveTick + 1) * TICK_MICROS;
+  return [{ kind: 'window', candidate, fromMicros: candidate.windowFrom, toMicros }];
+}
+
+/** From when on samples may still be needed. */
+export function neededFrom(detector: Detector, nowMicros: Micros): Micros {
+  let from = nowMicros - RULE.idleSeconds * MICROS_PER_SECOND;
+  if (detector.ringing !== null) from = Math.min(from, detector.ringing.windowFrom);
+  if (detector.open !== null) {
+    from = Math.min(from, detector.open.onsetTick * TICK_MICROS - (RULE.beforeSeconds + 1) * MICROS_PER_SECOND);
+  }
+  return from;
+}

@@ -1,0 +1,251 @@
+import type { SampleBlock } from '../contract/block.ts';
+import type { BridgeDefinition } from '../contract/bridge.ts';
+import type { Passage } from '../contract/passage.ts';
+import type { PassageWindow, PipelineOutput, WindowChannel } from '../contract/pipeline.ts';
+import { bridgeLengthM } from '../contract/bridge.ts';
+import { MICROS_PER_SECOND, timeName, type Micros } from '../contract/time.ts';
+import { closeChannel, createChannel, feedChannel, type Channel, type ChannelSink } from './channel.ts';
+import {
+  createDetector,
+  detect,
+  interrupt,
+  neededFrom,
+  type Detector,
+  type DetectorEvent,
+  type DetectorSetting,
+  type TickFeatures,
+} from './detector.ts';
+import { createLiveSpeed, noteLivePulse, type LiveSpeed } from './live-speed.ts';
+import { measurePassage } from './measure.ts';
+import { forgetBefore, recall } from './memory.ts';
+import { RULE, RULE_VERSION, TICK_MICROS } from './rule.ts';
+
+/** State layout and rules; a stored state of another version is not taken up again. */
+export const PIPELINE_VERSION = `1/${RULE_VERSION}`;
+
+/**
+ * The pipeline of one bridge: samples in, measures out, in event time only. Plain data, so that it can be cloned,
+ * stored and continued elsewhere to the same bits.
+ */
+export interface PipelineState {
+  definition: BridgeDefinition;
+  definitionVersion: number;
+  channels: Channel[];
+  detector: Detector;
+  setting: DetectorSetting;
+  liveSpeed: LiveSpeed;
+  vitalsMinute: number;
+}
+
+/** A pipeline that has seen nothing yet. */
+export function createPipeline(definition: BridgeDefinition, definitionVersion: number): PipelineState {
+  const channels = definition.sensors.map((sensor) => createChannel(definition, sensor));
+  return {
+    definition,
+    definitionVersion,
+    channels,
+    detector: createDetector(),
+    setting: {
+      bridge: definition.id,
+      freeSeconds: freeSeconds(definition),
+      axleSensors: channels.filter(({ axles }) => axles).map(({ sensor }) => sensor.id),
+    },
+    liveSpeed: createLiveSpeed(),
+    vitalsMinute: -1,
+  };
+}
+
+/**
+ * Takes one block and says what follows from it. Any split of the same samples into blocks, empty ones and single
+ * samples among them, gives the same passages and level events, bit for bit.
+ *
+ * @param state changed
+ * @param block raw samples in the sensors' units; channels that the bridge does not have are passed over
+ */
+export function step(state: PipelineState, block: SampleBlock): PipelineOutput {
+  const output = emptyOutput();
+  const sink = sinkOf(state, output);
+  for (const { sensor, samples } of block.channels) {
+    const channel = state.channels.find(({ sensor: { id } }) => id === sensor);
+    if (channel !== undefined) feedChannel(channel, state.definition.id, block.startMicros, samples, sink);
+  }
+  closeTicks(state, output, false);
+  return output;
+}
+
+/** The end of a recording: everything still open is measured with the samples there are. */
+export function finish(state: PipelineState): PipelineOutput {
+  const output = emptyOutput();
+  const sink = sinkOf(state, output);
+  for (const channel of state.channels) closeChannel(channel, state.definition.id, sink);
+  closeTicks(state, output, true);
+  act(state, interrupt(state.detector, state.setting), output);
+  return output;
+}
+
+/** The passage computed again from its stored wave form. */
+export function recompute(
+  definition: BridgeDefinition,
+  definitionVersion: number,
+  stored: Passage,
+  channels: readonly WindowChannel[],
+): Passage | null {
+  const whole = stored.phases.foundBy === 'given';
+  const frame = {
+    id: stored.id,
+    triggerMicros: stored.triggerMicros,
+    fromMicros: stored.startMicros,
+    toMicros: stored.endMicros,
+    whole,
+  };
+  return measurePassage(definition, definitionVersion, frame, channels);
+}
+
+/** Takes a whole recording as one event, train or not: for tests on site and odd vehicles. */
+export function measureWhole(
+  definition: BridgeDefinition,
+  definitionVersion: number,
+  channels: readonly WindowChannel[],
+): PassageWindow | null {
+  const runs = channels.flatMap(({ runs, rateHz }) => runs.map((run) => ({ ...run, rateHz })));
+  if (runs.length === 0) return null;
+  const fromMicros = Math.min(...runs.map((run) => run.startMicros));
+  const toMicros = Math.max(
+    ...runs.map((run) => run.startMicros + Math.floor((run.samples.length * MICROS_PER_SECOND) / run.rateHz)),
+  );
+  const id = `${definition.id}-${timeName(fromMicros)}`;
+  const frame = { id, triggerMicros: fromMicros, fromMicros, toMicros, whole: true };
+  const passage = measurePassage(definition, definitionVersion, frame, channels);
+  return passage === null ? null : { passage, channels: [...channels] };
+}
+
+function emptyOutput(): PipelineOutput {
+  return { levels: [], passages: [], progress: [], axles: [], spectra: [], health: [], vitals: [], live: [] };
+}
+
+function sinkOf(state: PipelineState, output: PipelineOutput): ChannelSink {
+  return {
+    level: (event) => output.levels.push(event),
+    live: (samples) => output.live.push(samples),
+    spectrum: (line) => output.spectra.push(line),
+    condition: (condition) => output.health.push(condition),
+    pulse: (channel, micros) => {
+      const speedMs = noteLivePulse(state.liveSpeed, channel.sensor, micros);
+      output.axles.push({
+        bridge: state.definition.id,
+        passage: state.detector.open?.id ?? null,
+        sensor: channel.sensor.id,
+        micros,
+        alongM: channel.sensor.alongM,
+        speedMs,
+      });
+    },
+  };
+}
+
+/** Hands finished ticks to the detector, in order, once every channel that is waited for has passed them. */
+function closeTicks(state: PipelineState, output: PipelineOutput, all: boolean): void {
+  const taking = state.channels.filter(({ slow }) => !slow);
+  for (;;) {
+    const number = Math.min(...taking.map(({ ticks }) => ticks[0]?.number ?? Infinity));
+    if (number === Infinity) break;
+    if (!all && !complete(taking, number)) break;
+    const features = takeTick(taking, number);
+    act(state, detect(state.detector, state.setting, features), output);
+    tellVitals(state, number, output);
+  }
+  trimMemories(state);
+}
+
+/** A channel that has fallen `waitTicks` behind is not waited for until it is abreast again. */
+function complete(channels: readonly Channel[], number: number): boolean {
+  const ahead = Math.max(...channels.map(({ ticks }) => ticks.length));
+  for (const channel of channels) {
+    if (channel.through >= number) channel.waitedFor = true;
+    else if (channel.waitedFor && ahead > RULE.waitTicks) channel.waitedFor = false;
+  }
+  return channels.every((channel) => channel.through >= number || !channel.waitedFor);
+}
+
+function takeTick(channels: readonly Channel[], number: number): TickFeatures {
+  const features: TickFeatures = { number, powers: [], pulses: [] };
+  for (const channel of channels) {
+    while (channel.ticks[0] !== undefined && channel.ticks[0].number <= number) {
+      const tick = channel.ticks.shift()!;
+      if (tick.number !== number) continue;
+      if (channel.deck) features.powers.push({ sensor: channel.sensor.id, power: tick.noisePower / tick.samples });
+      for (const micros of tick.pulses) features.pulses.push({ sensor: channel.sensor.id, micros });
+    }
+  }
+  return features;
+}
+
+function act(state: PipelineState, events: readonly DetectorEvent[], output: PipelineOutput): void {
+  const bridge = state.definition.id;
+  for (const event of events) {
+    if (event.kind !== 'window') {
+      output.progress.push({ bridge, passage: event.candidate.id, kind: event.kind, micros: event.micros });
+      continue;
+    }
+    const { candidate, fromMicros, toMicros } = event;
+    const channels = cutWindow(state, fromMicros, toMicros);
+    const frame = { id: candidate.id, triggerMicros: candidate.onsetTick * TICK_MICROS, fromMicros, toMicros };
+    const passage = measurePassage(state.definition, state.definitionVersion, frame, channels);
+    if (passage === null) output.progress.push({ bridge, passage: candidate.id, kind: 'discarded', micros: toMicros });
+    else output.passages.push({ passage, channels });
+  }
+}
+
+/** A temperature may be this old and still hold for a passage. */
+const TEMPERATURE_MICROS = 15 * 60 * MICROS_PER_SECOND;
+
+/**
+ * The samples of a window. Of slow channels the newest sample from before the window is taken, since it is sure to be
+ * there whenever the window is cut.
+ */
+function cutWindow(state: PipelineState, fromMicros: Micros, toMicros: Micros): WindowChannel[] {
+  return state.channels.flatMap((channel) => {
+    const { rateHz, id } = channel.sensor;
+    if (!channel.slow) {
+      const runs = recall(channel.memory, fromMicros, toMicros);
+      return runs.length > 0 ? [{ sensor: id, rateHz, runs }] : [];
+    }
+    const last = recall(channel.memory, fromMicros - TEMPERATURE_MICROS, fromMicros).at(-1);
+    if (last === undefined) return [];
+    const index = last.samples.length - 1;
+    const startMicros = last.startMicros + Math.round((index * MICROS_PER_SECOND) / rateHz);
+    return [{ sensor: id, rateHz, runs: [{ startMicros, samples: last.samples.slice(index) }] }];
+  });
+}
+
+function trimMemories(state: PipelineState): void {
+  if (state.detector.lastTick < 0) return;
+  const now = state.detector.lastTick * TICK_MICROS;
+  const needed = neededFrom(state.detector, now);
+  for (const channel of state.channels) {
+    forgetBefore(channel.memory, channel.slow ? needed - TEMPERATURE_MICROS : needed);
+  }
+}
+
+function tellVitals(state: PipelineState, tick: number, output: PipelineOutput): void {
+  const minute = Math.floor(tick / 600);
+  if (minute === state.vitalsMinute) return;
+  state.vitalsMinute = minute;
+  const told = state.channels.filter(({ newest }) => newest !== null);
+  for (const { sensor, vitals, newest } of told) {
+    const { samples, noise, offset } = vitals;
+    output.vitals.push({ bridge: state.definition.id, sensor: sensor.id, micros: newest!, samples, noise, offset });
+  }
+}
+
+/** How long the first mode takes to ring off: four time constants of the slowest span, within bounds. */
+function freeSeconds(definition: BridgeDefinition): number {
+  const constants = definition.spans.map(({ frequenciesHz, dampingPercent }) => {
+    const f1 = frequenciesHz?.f1;
+    return f1 === undefined || dampingPercent === undefined ? 5 : 1 / (2 * Math.PI * f1 * (dampingPercent / 100));
+  });
+  const wanted = RULE.freeTimeConstants * Math.max(...constants);
+  // The longest bridge also lets its last axle roll off behind the last sensor.
+  const rollOff = bridgeLengthM(definition) / 20;
+  return Math.min(RULE.freeSecondsMost, Math.max(RULE.freeSecondsLeast, wanted)) + Math.min(rollOff, 5);
+}

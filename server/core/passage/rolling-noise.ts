@@ -1,0 +1,124 @@
+import { spanAt, type BridgeDefinition } from '../contract/bridge.ts';
+import { MICROS_PER_SECOND, type Micros } from '../contract/time.ts';
+import { highpass } from '../signal/butterworth.ts';
+import { zeroPhase } from '../signal/zero-phase.ts';
+import { quantile } from '../signal/robust.ts';
+import { trusted, type RecordChannel } from './record.ts';
+import { RULE } from './rule.ts';
+
+/**
+ * Wheel-rail noise over a passage: power above the first modes in frames of `FRAME_MICROS`, summed over the deck
+ * channels, each against its own quiet floor. It begins with the first axle on the deck and ends with the last, while
+ * the modes ring on.
+ */
+export interface RollingNoise {
+  startMicros: Micros;
+  /** Sum over channels of (power / floor), per frame. */
+  total: Float64Array;
+  /** Power of each channel per frame, (m/s²)². */
+  channels: { alongM: number; power: Float64Array; floor: number }[];
+}
+
+export const FRAME_MICROS = 20_000;
+
+export function rollingNoise(
+  bridge: BridgeDefinition,
+  record: readonly RecordChannel[],
+  triggerMicros: Micros,
+): RollingNoise | null {
+  const deck = record.filter((channel) => channel.deck && channel.x.length > channel.rateHz);
+  const good = deck.filter(trusted);
+  const used = good.length > 0 ? good : deck.filter((channel) => !channel.flags.includes('flat'));
+  const first = used[0];
+  if (first === undefined) return null;
+  const startMicros = Math.max(...used.map((channel) => channel.startMicros));
+  const frames = Math.min(
+    ...used.map((channel) =>
+      Math.floor(
+        ((channel.x.length / channel.rateHz) * MICROS_PER_SECOND - (startMicros - channel.startMicros)) / FRAME_MICROS,
+      ),
+    ),
+  );
+  if (frames < 10) return null;
+  const quietFrames = Math.floor((triggerMicros - startMicros) / FRAME_MICROS) - 25;
+  const channels = used.map((channel) => {
+    const power = framePower(bridge, channel, startMicros, frames);
+    const quiet = power.subarray(0, Math.max(0, quietFrames));
+    const least = RULE.floorLeast * RULE.floorLeast;
+    const floor = Math.max(quiet.length >= 10 ? quantile(quiet, 0.5) : quantile(power, 0.05), least);
+    return { alongM: channel.sensor.alongM, power, floor };
+  });
+  const total = new Float64Array(frames);
+  for (const { power, floor } of channels) for (let i = 0; i < frames; i++) total[i]! += power[i]! / floor;
+  for (let i = 0; i < frames; i++) total[i]! /= channels.length;
+  return { startMicros, total, channels };
+}
+
+function framePower(
+  bridge: BridgeDefinition,
+  channel: RecordChannel,
+  startMicros: Micros,
+  frames: number,
+): Float64Array {
+  const f1 = spanAt(bridge, channel.sensor.alongM).frequenciesHz?.f1 ?? 0;
+  const edge = Math.min(Math.max(RULE.noiseFromHz, RULE.noiseOverF1 * f1), 0.3 * channel.rateHz);
+  const y = zeroPhase(highpass(RULE.noiseOrder / 2, edge, channel.rateHz), channel.x);
+  const power = new Float64Array(frames);
+  const perFrame = (channel.rateHz * FRAME_MICROS) / MICROS_PER_SECOND;
+  const offset = ((startMicros - channel.startMicros) * channel.rateHz) / MICROS_PER_SECOND;
+  for (let f = 0; f < frames; f++) {
+    const from = Math.max(0, Math.floor(offset + f * perFrame));
+    const to = Math.min(y.length, Math.max(from + 1, Math.floor(offset + (f + 1) * perFrame)));
+    let sum = 0;
+    for (let i = from; i < to; i++) sum += y[i]! * y[i]!;
+    power[f] = sum / Math.max(1, to - from);
+  }
+  return power;
+}
+
+export interface NoiseSpan {
+  onMicros: Micros;
+  offMicros: Micros;
+  /** Longest time without a break in which noise was near its level, s: a hammer rings off at once, a train rolls. */
+  sustainedSeconds: number;
+  /** Level over the quiet floor, power ratio. */
+  ratio: number;
+}
+
+/** Level of a rolling train: this quantile of the frames above the floor. */
+const LEVEL_QUANTILE = 0.6;
+/** On the deck the noise is above this share of its level; on the approach it is 10 to 25 dB lower. */
+const DECK_SHARE = 0.2;
+const SUSTAIN_SHARE = 0.1;
+
+/** Where the noise says that axles were on the deck; null where nothing rises above the floor. */
+export function noiseSpan(noise: RollingNoise): NoiseSpan | null {
+  const smooth = smoothed(noise.total);
+  const above = smooth.filter((value) => value > RULE.activeRatio);
+  if (above.length < 3) return null;
+  const level = quantile(above, LEVEL_QUANTILE);
+  const deck = Math.max(DECK_SHARE * level, RULE.activeRatio / 2);
+  let first = smooth.findIndex((value) => value > deck);
+  let last = smooth.findLastIndex((value) => value > deck);
+  if (first < 0 || last <= first) return null;
+  first = Math.max(first, 0);
+  last = Math.min(last + 1, smooth.length);
+  let longest = 0;
+  let row = 0;
+  const sustain = SUSTAIN_SHARE * Math.max(...smooth);
+  for (const value of smooth) {
+    row = value > Math.max(sustain, RULE.activeRatio) ? row + 1 : 0;
+    longest = Math.max(longest, row);
+  }
+  return {
+    onMicros: noise.startMicros + first * FRAME_MICROS,
+    offMicros: noise.startMicros + last * FRAME_MICROS,
+    sustainedSeconds: (longest * FRAME_MICROS) / MICROS_PER_SECOND,
+    ratio: level,
+  };
+}
+
+/** Mean over three frames. */
+function smoothed(x: Float64Array): Float64Array {
+  return x.map((value, i) => ((x[i - 1] ?? value) + value + (x[i + 1] ?? value)) / 3);
+}
