@@ -81,6 +81,7 @@ export function aPassage(wish: PassageWish = {}): Passage {
     bridge,
     startMicros,
     endMicros: onMicros + 15 * MICROS_PER_SECOND,
+    triggerMicros: onMicros,
     phases: {
       onMicros,
       offMicros: onMicros + 6 * MICROS_PER_SECOND,

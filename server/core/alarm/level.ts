@@ -10,7 +10,7 @@ const DAY_MICROS = 86_400 * MICROS_PER_SECOND;
 /** A passage whose last axle has left is over for the desk after this long, should its record not come. */
 const AFTER_LEAVING_MICROS = 30 * MICROS_PER_SECOND;
 /** The detector needs some of the train's noise before it speaks: crossings this long before its onset are the train's. */
-const BEFORE_ONSET_MICROS = 2 * MICROS_PER_SECOND;
+const BEFORE_ONSET_MICROS = 5 * MICROS_PER_SECOND;
 /** The detector has spoken by then. */
 const DETECTION_MICROS = 10 * MICROS_PER_SECOND;
 

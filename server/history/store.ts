@@ -1,0 +1,260 @@
+import type {
+  AlarmQuery,
+  Day,
+  DayQuery,
+  PassagePage,
+  PassageQuery,
+  PassageRow,
+  SpectraView,
+} from '#core/contract/api.ts';
+import type { Alarm } from '#core/contract/alarm.ts';
+import type { BridgeDefinition } from '#core/contract/bridge.ts';
+import type { Complaint } from '#core/contract/errors.ts';
+import type { Passage } from '#core/contract/passage.ts';
+import type { SpectrumLine, WindowChannel } from '#core/contract/pipeline.ts';
+import type { Micros } from '#core/contract/time.ts';
+import { REMEMBERED_CLOSED, type NoData, type PassageAbove } from '#core/alarm/state.ts';
+import {
+  alarmOf,
+  alarmsOf,
+  alarmsOfPassage,
+  deskAlarmsOf,
+  noDataOf,
+  openAlarmsOf,
+  passagesAboveOf,
+  saveNoDataOf,
+  upsertAlarms,
+} from './alarms.ts';
+import { openArchive, placeOf, type Archive, type StoredDefinition } from './archive.ts';
+import { openDuckDb, type Ask, type Database } from './database.ts';
+import { daysOf } from './days.ts';
+import { loadDefinitions, type Definitions } from './definitions.ts';
+import { openSound } from './opening.ts';
+import { alikeOf, hasPassage, insertPassage, lastOf, neighboursOf, pageOf, passageOf } from './passages.ts';
+import { dueWaveforms, thin, type RetentionRules, type Thinned } from './retention.ts';
+import { markFilled } from './schema.ts';
+import { createSpectra } from './spectra.ts';
+import { createWrites } from './writes.ts';
+
+export interface HistoryOptions {
+  /** The database file; its folder is made where it is missing. */
+  file: string;
+  archiveFolder: string;
+  /** Wall clock. */
+  clock: () => Micros;
+  report: (complaint: Complaint) => void;
+  /** Writes held at most; beyond, the caller waits. */
+  maxPending?: number;
+  /** How the file is opened: DuckDB where absent. */
+  openDatabase?: (file: string) => Promise<Database>;
+  /** Pause between tries of a failed write, for tests. */
+  pause?: (ms: number, signal: AbortSignal) => Promise<void>;
+}
+
+export interface Commit {
+  passage: Passage;
+  channels: readonly WindowChannel[];
+  /** Alarms that the passage's record changed or raised. */
+  alarms: readonly Alarm[];
+}
+
+/** All that is remembered: definitions, passages with their wave forms, alarms, and when nobody was looking. */
+export interface History {
+  /** Stores a definition unless its text is that of the newest version. @returns its version, from 1 */
+  saveDefinition(definition: BridgeDefinition, text: string, micros: Micros): Promise<number>;
+  /** The newest of each bridge. */
+  definitions(): StoredDefinition[];
+  definitionAt(bridge: string, version: number): StoredDefinition | null;
+  versions(bridge: string): { version: number; sinceMicros: Micros }[];
+
+  /**
+   * Stores a passage with its wave form and alarms. When it resolves, all of it is durable: first the archive file, then
+   * passage and alarms in one transaction. A passage that is there already stays as it is (`already`); its alarms are
+   * stored all the same. A disk that refuses is tried again until it takes it.
+   *
+   * @throws Error where the definition version was never saved: a mistake of the caller
+   */
+  commitPassage(commit: Commit): Promise<{ already: boolean }>;
+  saveAlarms(alarms: readonly Alarm[]): Promise<void>;
+  saveNoData(noData: NoData): Promise<void>;
+  /** Writes handed in and not yet done. */
+  pendingWrites(): number;
+
+  passage(id: string): Promise<{ passage: Passage; hasWaveform: boolean } | null>;
+  passages(query: PassageQuery): Promise<PassagePage>;
+  neighbours(id: string): Promise<{ earlier: string | null; later: string | null }>;
+  alike(passage: Passage, limit?: number): Promise<PassageRow[]>;
+  lastPassages(): Promise<PassageRow[]>;
+  /** @param timeZone IANA name; that of the bridge's newest definition where absent, else UTC */
+  days(query: DayQuery, timeZone?: string): Promise<Day[]>;
+  passagesAbove(bridge: string, sinceMicros: Micros): Promise<PassageAbove[]>;
+
+  openAlarms(): Promise<Alarm[]>;
+  /** What the desk of a bridge starts with: open alarms and the newest closed ones. */
+  deskAlarms(bridge: string): Promise<Alarm[]>;
+  alarms(query: AlarmQuery): Promise<Alarm[]>;
+  alarm(id: string): Promise<Alarm | null>;
+  alarmsOfPassage(passage: string): Promise<Alarm[]>;
+  noData(bridge: string, fromMicros: Micros, toMicros: Micros): Promise<NoData[]>;
+
+  /** Null where there is no such passage, or retention has thinned its wave form. */
+  waveform(id: string): Promise<WindowChannel[] | null>;
+  /** Path of the Parquet file, on the same condition. */
+  waveformFile(id: string): Promise<string | null>;
+  applyRetention(rules: RetentionRules, nowMicros: Micros): Promise<Thinned>;
+
+  addSpectrum(line: SpectrumLine): void;
+  spectra(bridge: string, sensor: string): SpectraView | null;
+
+  /** Waits for the writes that are held and lets go of the files. Idempotent. */
+  close(): Promise<void>;
+}
+
+const MAX_PENDING = 64;
+const ALIKE = 12;
+
+/** @throws SpanbeatError STORE_LOCKED, STORE_NEWER, STORE_WRITE or DISK_FULL, see `openSound` */
+export async function openHistory(options: HistoryOptions): Promise<History> {
+  const { file, archiveFolder, clock, report, maxPending = MAX_PENDING, openDatabase = openDuckDb, pause } = options;
+  const { database, toFill } = await openSound(file, openDatabase, clock(), report);
+  const archive = await openArchive(archiveFolder);
+  const writes = createWrites({
+    limit: maxPending,
+    report,
+    recover: () => database.revive(),
+    ...(pause === undefined ? {} : { pause }),
+  });
+  // Files are written in a line of their own, so that an alarm never waits for a wave form.
+  const files = createWrites({ limit: maxPending, report, ...(pause === undefined ? {} : { pause }) });
+  const write = <T>(work: (ask: Ask) => Promise<T>): Promise<T> => writes.run(() => database.transaction(work));
+  const definitions = await loadDefinitions(database.ask, write);
+  if (toFill) await fillFromArchive(archive, definitions, write, report);
+  return assemble({ ...options, database, archive, definitions, write, writes, files });
+}
+
+interface Parts {
+  clock: () => Micros;
+  database: Database;
+  archive: Archive;
+  definitions: Definitions;
+  write: <T>(work: (ask: Ask) => Promise<T>) => Promise<T>;
+  writes: ReturnType<typeof createWrites>;
+  files: ReturnType<typeof createWrites>;
+}
+
+function assemble({ clock, database, archive, definitions, write, writes, files }: Parts): History {
+  const { ask } = database;
+  const spectra = createSpectra();
+  let closing: Promise<void> | null = null;
+
+  const withWaveform = async (id: string): Promise<Passage | null> => {
+    const stored = await passageOf(ask, id);
+    return stored?.hasWaveform === true ? stored.passage : null;
+  };
+
+  return {
+    saveDefinition: (definition, text, micros) => definitions.save(definition, text, micros),
+    definitions: () => definitions.all(),
+    definitionAt: (bridge, version) => definitions.at(bridge, version),
+    versions: (bridge) => definitions.versions(bridge),
+
+    async commitPassage({ passage, channels, alarms }) {
+      const version = passage.provenance.definitionVersion;
+      const definition = definitions.at(passage.bridge, version);
+      if (definition === null) throw new Error(`definition ${version} of ${passage.bridge} was never saved`);
+      if (!(await hasPassage(ask, passage.id))) {
+        await files.run(() => archive.write({ passage, definition }, channels));
+      }
+      return write(async (ask) => {
+        const inserted = await insertPassage(
+          ask,
+          passage,
+          channels.some(({ runs }) => runs.length > 0),
+        );
+        await upsertAlarms(ask, alarms);
+        return { already: !inserted };
+      });
+    },
+    saveAlarms: (alarms) => write((ask) => upsertAlarms(ask, alarms)),
+    saveNoData: (noData) => write((ask) => saveNoDataOf(ask, noData)),
+    pendingWrites: () => writes.pending() + files.pending(),
+
+    passage: (id) => passageOf(ask, id),
+    passages: (query) => pageOf(ask, query),
+    neighbours: (id) => neighboursOf(ask, id),
+    alike: (passage, limit = ALIKE) => alikeOf(ask, passage, limit),
+    lastPassages: () => lastOf(ask),
+    days: (query, timeZone = definitions.newest(query.bridge)?.definition.timeZone ?? 'UTC') =>
+      daysOf(ask, query, timeZone, clock()),
+    passagesAbove: (bridge, sinceMicros) => passagesAboveOf(ask, bridge, sinceMicros),
+
+    openAlarms: () => openAlarmsOf(ask),
+    deskAlarms: (bridge) => deskAlarmsOf(ask, bridge, REMEMBERED_CLOSED),
+    alarms: (query) => alarmsOf(ask, query),
+    alarm: (id) => alarmOf(ask, id),
+    alarmsOfPassage: (passage) => alarmsOfPassage(ask, passage),
+    noData: (bridge, fromMicros, toMicros) => noDataOf(ask, bridge, fromMicros, toMicros),
+
+    async waveform(id) {
+      const passage = await withWaveform(id);
+      return passage === null ? null : archive.read(placeOf(passage));
+    },
+    async waveformFile(id) {
+      const passage = await withWaveform(id);
+      return passage === null ? null : archive.path(placeOf(passage));
+    },
+    async applyRetention(rules, nowMicros) {
+      const timeZoneOf = (bridge: string): string => definitions.newest(bridge)?.definition.timeZone ?? 'UTC';
+      const due = await dueWaveforms(ask, rules, nowMicros, timeZoneOf);
+      return thin(due, {
+        archive,
+        passage: async (id) => (await passageOf(ask, id))?.passage ?? null,
+        definitionAt: (bridge, version) => definitions.at(bridge, version),
+        mark: async (id) => {
+          await write((ask) => ask('UPDATE passages SET has_waveform = false WHERE id = $1', [id]));
+        },
+      });
+    },
+
+    addSpectrum: (line) => spectra.add(line),
+    spectra: (bridge, sensor) => spectra.view(bridge, sensor),
+
+    close() {
+      closing ??= (async () => {
+        await files.close();
+        await writes.close();
+        archive.close();
+        database.close();
+      })();
+      return closing;
+    },
+  };
+}
+
+/** Sheets a transaction when a database is filled. */
+const FILL_AT_ONCE = 200;
+
+/** Definitions and passages as the archive's files tell them. Alarms are not in it. */
+async function fillFromArchive(
+  archive: Archive,
+  definitions: Definitions,
+  write: Parts['write'],
+  report: (complaint: Complaint) => void,
+): Promise<void> {
+  let held: { passage: Passage; hasWaveform: boolean }[] = [];
+  const flush = async (): Promise<void> => {
+    const batch = held;
+    held = [];
+    await write(async (ask) => {
+      for (const { passage, hasWaveform } of batch) await insertPassage(ask, passage, hasWaveform);
+    });
+  };
+  const damaged = (path: string, reason: string): void =>
+    report({ code: 'STORE_CORRUPT', where: path, detail: reason });
+  for await (const { passage, definition, hasWaveform } of archive.sheets(damaged)) {
+    await definitions.restore(definition);
+    if (held.push({ passage, hasWaveform }) >= FILL_AT_ONCE) await flush();
+  }
+  await flush();
+  await write(markFilled);
+}
