@@ -1,0 +1,32 @@
+import { untrack } from 'svelte';
+import type { BridgeView } from '#core/contract/api.ts';
+import { api } from './api.ts';
+import { Asked } from './state.svelte.ts';
+import { zoneOf } from './time.ts';
+
+/** Definitions of bridges, each asked once and kept for all places; asked anew when the server runs anew. */
+const kept = new Map<string, Asked<BridgeView>>();
+
+export function viewOf(bridge: string): Asked<BridgeView> {
+  const found = kept.get(bridge);
+  if (found) return found;
+  const asked = new Asked<BridgeView>();
+  kept.set(bridge, asked);
+  // Asking changes state, which a derived value that first needs the bridge may not do while it is computed.
+  queueMicrotask(() => askAgain(bridge));
+  return asked;
+}
+
+export function askAgain(bridge: string): void {
+  void untrack(() => kept.get(bridge)?.ask((signal) => api.bridge(bridge, { signal })));
+}
+
+export function askAllAgain(): void {
+  for (const bridge of kept.keys()) askAgain(bridge);
+}
+
+/** IANA zone of a bridge; UTC until its definition is known. */
+export function zoneOfBridge(bridge: string | null): string {
+  if (bridge === null) return 'UTC';
+  return zoneOf(viewOf(bridge).value?.definition.timeZone);
+}

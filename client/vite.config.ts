@@ -1,0 +1,31 @@
+import { svelte } from '@sveltejs/vite-plugin-svelte';
+import { defineConfig } from 'vite';
+
+/** The server that the development page talks to. */
+const SERVER = 'http://127.0.0.1:8600';
+
+export default defineConfig({
+  root: import.meta.dirname,
+  plugins: [svelte()],
+  build: {
+    outDir: 'dist',
+    emptyOutDir: true,
+    target: 'es2023',
+    // Type is never inlined: the page's policy lets fonts and pictures come from its own server only.
+    assetsInlineLimit: 0,
+    rolldownOptions: {
+      treeshake: {
+        // The contract builds its schemas when it is loaded. The page uses its types and functions, not the schemas.
+        manualPureFunctions: ['Type', 'Nullable', 'Cyclic'],
+      },
+    },
+  },
+  server: {
+    host: '127.0.0.1',
+    proxy: {
+      '/api': SERVER,
+      '/metrics': SERVER,
+      '/live': { target: SERVER, ws: true },
+    },
+  },
+});
