@@ -1,3 +1,5 @@
+import { kaiser } from './kaiser.ts';
+
 /** A record with fewer samples a second, and the filter it went through. */
 export interface Decimated {
   /** Sample m is the sum of taps[j] × x[m × factor + j]: it looks forwards only. */
@@ -55,20 +57,9 @@ function lowpassTaps(count: number, edge: number): Float64Array {
   for (let j = 0; j < count; j++) {
     const t = j - middle;
     const sinc = t === 0 ? 2 * edge : Math.sin(2 * Math.PI * edge * t) / (Math.PI * t);
-    taps[j] = sinc * besselI0(BETA * Math.sqrt(1 - (t / middle) ** 2));
+    taps[j] = sinc * kaiser(t / middle, BETA);
     sum += taps[j]!;
   }
   for (let j = 0; j < count; j++) taps[j]! /= sum;
   return taps;
-}
-
-/** Modified Bessel function of the first kind, order 0, by its power series (Abramowitz and Stegun 9.6.10). */
-export function besselI0(z: number): number {
-  let term = 1;
-  let sum = 1;
-  for (let k = 1; term > sum * 1e-17; k++) {
-    term *= (z / (2 * k)) ** 2;
-    sum += term;
-  }
-  return sum;
 }

@@ -1,3 +1,5 @@
+import { kaiser } from './kaiser.ts';
+
 /** The largest magnitude of a signal, also between its samples. */
 export interface TruePeak {
   /** Signed value at the peak, in the unit of the samples. */
@@ -140,7 +142,7 @@ const KERNEL = ((): Float64Array => {
     for (let k = 0; k < 2 * HALF; k++) {
       const t = k - HALF + 1 - p / PHASES;
       const sinc = t === 0 ? 1 : Math.sin(Math.PI * t) / (Math.PI * t);
-      const tap = Math.abs(t) < HALF ? sinc * besselI0(BETA * Math.sqrt(1 - (t / HALF) ** 2)) : 0;
+      const tap = sinc * kaiser(t / HALF, BETA);
       taps[row + k] = tap;
       sum += tap;
     }
@@ -148,14 +150,3 @@ const KERNEL = ((): Float64Array => {
   }
   return taps;
 })();
-
-/** Modified Bessel function of the first kind, order 0, by its power series (Abramowitz and Stegun 9.6.10). */
-function besselI0(z: number): number {
-  let term = 1;
-  let sum = 1;
-  for (let k = 1; term > sum * 1e-17; k++) {
-    term *= (z / (2 * k)) ** 2;
-    sum += term;
-  }
-  return sum;
-}
