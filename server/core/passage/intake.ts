@@ -136,13 +136,14 @@ function hold(intake: Intake, piece: Piece, sink: IntakeSink): void {
 }
 
 function releaseHeld(intake: Intake, sink: IntakeSink, all: boolean): void {
+  let gap = all;
   while (intake.held.length > 0) {
     const expected = expectedMicros(intake)!;
     const stepMicros = MICROS_PER_SECOND / intake.rateHz;
     const first = intake.held[0]!;
     if (first.startMicros - expected <= TOLERANCE_SAMPLES * stepMicros) {
       intake.held.shift();
-      if (!all && intake.held.length === 0) sink.note('disorder', 'happened', first.startMicros, 'a block came late');
+      if (!gap && intake.held.length === 0) sink.note('disorder', 'happened', first.startMicros, 'a block came late');
       settle(intake, first, sink);
       continue;
     }
@@ -153,6 +154,7 @@ function releaseHeld(intake: Intake, sink: IntakeSink, all: boolean): void {
     const missing = Math.round((first.startMicros - expected) / stepMicros);
     sink.note('gap', 'happened', expected, `${missing} samples missing (${(missing / intake.rateHz).toFixed(3)} s)`);
     intake.held.shift();
+    gap = true;
     begin(intake, first, sink);
   }
 }

@@ -124,6 +124,7 @@ function watchShape(
 ): void {
   const flatRun = Math.ceil(FLAT_SECONDS * vitals.rateHz);
   const slow = 1 / vitals.rateHz;
+  const learnt = vitals.rateHz;
   const { lowEnd, highEnd } = vitals;
   let { last, beforeLast, equal, atEnd, roughness } = vitals;
   for (let i = from; i < to; i++) {
@@ -144,15 +145,15 @@ function watchShape(
       atEnd = 0;
     }
     const bend = Math.abs(last - (beforeLast + value) / 2);
-    if (
-      bend > SPIKE_RATIO * roughness &&
-      roughness > 0 &&
-      bend > Math.abs(value - beforeLast) * 4 &&
-      vitals.samples > vitals.rateHz
-    ) {
+    const seen = vitals.samples + i - from;
+    if (seen > learnt && roughness > 0 && bend > SPIKE_RATIO * roughness && bend > Math.abs(value - beforeLast) * 4) {
       begin(vitals, 'spike', microsAt(i), `a single sample stands out by ${bend.toFixed(3)}`, note);
     }
-    if (bend === bend) roughness += slow * (Math.min(bend, 4 * roughness + 1e-9) - roughness);
+    // The first two samples have no neighbours. Later neither a spike nor a stuck value teaches what is usual.
+    if (seen >= 2 && equal < 3) {
+      const taught = seen > learnt ? Math.min(bend, 4 * roughness) : bend;
+      roughness += Math.max(1 / (seen - 1), slow) * (taught - roughness);
+    }
     beforeLast = last;
     last = value;
   }
