@@ -23,8 +23,10 @@ export const Structure = Type.Union([
   Type.Literal('masonry arch'),
   Type.Literal('other'),
 ]);
+export type Structure = Static<typeof Structure>;
 
 export const TrackType = Type.Union([Type.Literal('ballasted'), Type.Literal('direct fastened')]);
+export type TrackType = Static<typeof TrackType>;
 
 export const Span = Type.Object(
   {
@@ -174,8 +176,7 @@ export function chainageKmAt(bridge: Pick<BridgeDefinition, 'spans' | 'chainageK
 
 /** The span a position lies on: the one that contains it, else the nearest. */
 export function spanAt(bridge: Pick<BridgeDefinition, 'spans'>, alongM: number): Span {
-  const distance = (span: Span): number =>
-    Math.max(span.startM - alongM, alongM - span.startM - span.lengthM, 0);
+  const distance = (span: Span): number => Math.max(span.startM - alongM, alongM - span.startM - span.lengthM, 0);
   return bridge.spans.reduce((best, span) => (distance(span) < distance(best) ? span : best));
 }
 
