@@ -117,22 +117,34 @@ function pairSensors(nothing: AxleReading, bridge: BridgeDefinition, low: Place,
 }
 
 /**
- * Pairs the pulses of two sensors: one to one where the numbers are equal, else by the delay that most of them share.
+ * Pairs the pulses of two sensors: one to one where their numbers are equal and the delays agree, else by the delay
+ * that three quarters of the shorter list share. A train that stood on the bridge has delays of all kinds, so equal
+ * numbers without a shared delay are still paired one to one.
  */
 export function matchPulses(
   low: readonly Pulse[],
   high: readonly Pulse[],
 ): { pairs: [Pulse, Pulse][]; complete: boolean } {
-  if (low.length === high.length) return { pairs: low.map((pulse, i) => [pulse, high[i]!]), complete: true };
+  const direct: [Pulse, Pulse][] = low.length === high.length ? low.map((pulse, i) => [pulse, high[i]!]) : [];
+  const delays = direct.map(([a, b]) => b.micros - a.micros);
+  const oneWay = delays.length > 0 && Math.min(...delays) * Math.max(...delays) > 0;
+  const alike = oneWay && Math.max(...delays.map(Math.abs)) < 1.5 * Math.min(...delays.map(Math.abs));
+  if (alike) return { pairs: direct, complete: true };
+  const shared = bestShared(low, high);
+  if (shared.length >= Math.max(2, 0.75 * Math.min(low.length, high.length))) return { pairs: shared, complete: false };
+  return oneWay ? { pairs: direct, complete: true } : { pairs: [], complete: false };
+}
+
+function bestShared(low: readonly Pulse[], high: readonly Pulse[]): [Pulse, Pulse][] {
   let best: [Pulse, Pulse][] = [];
   for (const a of low) {
     for (const b of high) {
+      if (b.micros === a.micros) continue;
       const pairs = pairsAt(low, high, b.micros - a.micros);
       if (pairs.length > best.length) best = pairs;
     }
   }
-  const enough = best.length >= 2 && best.length >= Math.min(low.length, high.length) / 2;
-  return { pairs: enough ? best : [], complete: false };
+  return best;
 }
 
 /** A pulse belongs to a shared delay when it lies within this share of it, s at least. */
