@@ -12,25 +12,25 @@ const DEFAULT_LIMIT = 200;
  */
 export async function upsertAlarms(ask: Ask, alarms: readonly Alarm[]): Promise<void> {
   for (const alarm of alarms) {
-    await ask(
-      `INSERT INTO alarms (id, bridge, kind, rule, state, severity, raised_micros, passage, steps, json)
-       VALUES ($1, $2, $3, $4, $5, $6, $7, $8, $9, $10)
-       ON CONFLICT (id) DO UPDATE SET state = excluded.state, severity = excluded.severity, passage = excluded.passage,
-         steps = excluded.steps, json = excluded.json
-       WHERE excluded.steps >= alarms.steps`,
-      [
-        alarm.id,
-        alarm.bridge,
-        alarm.kind,
-        alarm.rule,
-        alarm.state,
-        alarm.severity,
-        alarm.raisedMicros,
-        alarm.passage,
-        alarm.steps.length,
-        JSON.stringify(alarm),
-      ],
-    );
+    const { id, bridge, kind, rule, state, severity, raisedMicros, passage, steps } = alarm;
+    const [known] = await ask('SELECT steps FROM alarms WHERE id = $1', [id]);
+    const json = JSON.stringify(alarm);
+    if (known === undefined) {
+      await ask(
+        `INSERT INTO alarms (id, bridge, kind, rule, state, severity, raised_micros, passage, steps, json)
+         VALUES ($1, $2, $3, $4, $5, $6, $7, $8, $9, $10)`,
+        [id, bridge, kind, rule, state, severity, raisedMicros, passage, steps.length, json],
+      );
+    } else if (Number(known['steps']) <= steps.length) {
+      await ask('UPDATE alarms SET state = $2, severity = $3, passage = $4, steps = $5, json = $6 WHERE id = $1', [
+        id,
+        state,
+        severity,
+        passage,
+        steps.length,
+        json,
+      ]);
+    }
   }
 }
 

@@ -73,7 +73,6 @@ export async function openArchive(folder: string): Promise<Archive> {
   const instance = await DuckDBInstance.create(':memory:', { threads: '2', memory_limit: '512MB' });
   const writer = await instance.connect();
   const reader = await instance.connect();
-  await writer.run(`CREATE TABLE runs (${COLUMNS})`);
   let last: Promise<unknown> = Promise.resolve();
   let closed = false;
 
@@ -128,11 +127,12 @@ async function writeFile(
   channels: readonly WindowChannel[],
 ): Promise<void> {
   await mkdir(dirname(path), { recursive: true });
-  await connection.run('DELETE FROM runs');
+  // A new table each time: deleted rows of a table in memory would be kept.
+  await connection.run(`CREATE OR REPLACE TABLE runs (${COLUMNS})`);
   await appendRuns(connection, channels);
   const aside = `${path}.part`;
   await connection.run(`COPY runs TO ${quoted(aside)} (${FORMAT}, KV_METADATA ${metadataOf(sheet)})`);
-  await connection.run('DELETE FROM runs');
+  await connection.run('DROP TABLE runs');
   await sync(aside);
   await rename(aside, path);
   // The name is durable when its folder is; a new month's or year's folder when its parents are.

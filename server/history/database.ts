@@ -1,4 +1,9 @@
-import { DuckDBInstance, type DuckDBConnection } from '@duckdb/node-api';
+import {
+  DuckDBInstance,
+  type DuckDBConnection,
+  type DuckDBPreparedStatement,
+  type DuckDBResult,
+} from '@duckdb/node-api';
 
 export type SqlValue = string | number | boolean | null;
 export type Row = Record<string, SqlValue>;
@@ -36,10 +41,10 @@ export async function openDuckDb(file: string): Promise<Database> {
   return {
     ask: (sql, values) => rowsOf(open.reader, sql, values),
     async transaction(work) {
-      const { writer } = open;
+      const { writer, prepared } = open;
       await writer.run('BEGIN TRANSACTION');
       try {
-        const result = await work((sql, values) => rowsOf(writer, sql, values));
+        const result = await work((sql, values) => preparedRows(writer, prepared, sql, values));
         await writer.run('COMMIT');
         return result;
       } catch (failure) {
@@ -71,15 +76,33 @@ interface Open {
   /** Apart, so that a long query does not hold up a commit. */
   reader: DuckDBConnection;
   writer: DuckDBConnection;
+  /** Of the writer, by their text: our statements are few, and planning one takes longer than running it. */
+  prepared: Map<string, DuckDBPreparedStatement>;
 }
 
 async function connect(file: string): Promise<Open> {
-  const instance = await DuckDBInstance.create(file, { threads: '2', memory_limit: MEMORY_LIMIT });
-  return { instance, reader: await instance.connect(), writer: await instance.connect() };
+  // One thread: a commit is a few rows, and handing it to more costs longer than it takes.
+  const instance = await DuckDBInstance.create(file, { threads: '1', memory_limit: MEMORY_LIMIT });
+  return { instance, reader: await instance.connect(), writer: await instance.connect(), prepared: new Map() };
 }
 
 async function rowsOf(connection: DuckDBConnection, sql: string, values: readonly SqlValue[] = []): Promise<Row[]> {
-  const result = await connection.run(sql, [...values]);
+  return fetched(await connection.run(sql, [...values]));
+}
+
+async function preparedRows(
+  connection: DuckDBConnection,
+  prepared: Map<string, DuckDBPreparedStatement>,
+  sql: string,
+  values: readonly SqlValue[] = [],
+): Promise<Row[]> {
+  const statement = prepared.get(sql) ?? (await connection.prepare(sql));
+  if (values.length > 0) prepared.set(sql, statement); // the others are run once, to bring up the schema
+  statement.bind([...values]);
+  return fetched(await statement.run());
+}
+
+async function fetched(result: DuckDBResult): Promise<Row[]> {
   const names = result.columnNames();
   const rows: Row[] = [];
   for (;;) {

@@ -12,13 +12,17 @@ const ROW_COLUMNS = `p.id, p.bridge, p.on_micros, p.peak, p.sensor, p.severity, 
 const FROM_WITH_ALARM = `FROM passages p LEFT JOIN
   (SELECT passage, min(id) AS alarm FROM alarms WHERE passage IS NOT NULL GROUP BY passage) a ON a.passage = p.id`;
 
-/** Puts a passage in. @returns false where it is there already, and then nothing has changed */
+/**
+ * Puts a passage in. Asking first is several times faster than `ON CONFLICT`, and safe since one writer writes at a time.
+ *
+ * @returns false where it is there already, and then nothing has changed
+ */
 export async function insertPassage(ask: Ask, passage: Passage, hasWaveform: boolean): Promise<boolean> {
-  const inserted = await ask(
+  if (await hasPassage(ask, passage.id)) return false;
+  await ask(
     `INSERT INTO passages (id, bridge, on_micros, start_micros, end_micros, definition_version, peak, sensor, limit_id,
        severity, of_gravest, speed_ms, direction, axles, f1_hz, zeta1, temperature_c, quality, has_waveform, json)
-     VALUES ($1, $2, $3, $4, $5, $6, $7, $8, $9, $10, $11, $12, $13, $14, $15, $16, $17, $18, $19, $20)
-     ON CONFLICT (id) DO NOTHING RETURNING id`,
+     VALUES ($1, $2, $3, $4, $5, $6, $7, $8, $9, $10, $11, $12, $13, $14, $15, $16, $17, $18, $19, $20)`,
     [
       passage.id,
       passage.bridge,
@@ -42,7 +46,7 @@ export async function insertPassage(ask: Ask, passage: Passage, hasWaveform: boo
       JSON.stringify(passage),
     ],
   );
-  return inserted.length > 0;
+  return true;
 }
 
 export async function hasPassage(ask: Ask, id: string): Promise<boolean> {

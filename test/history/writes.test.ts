@@ -14,14 +14,15 @@ describe('the line of writes', () => {
   test('runs them one at a time in the order they came', async () => {
     const writes = createWrites({ limit: 3, report: () => undefined });
     const seen: string[] = [];
+    const names = ['a', 'b', 'c', 'd', 'e'];
     const work = (name: string) => async (): Promise<string> => {
       seen.push(`${name} begins`);
       await new Promise((resolve) => setImmediate(resolve));
       seen.push(`${name} ends`);
       return name;
     };
-    expect(await Promise.all(['a', 'b', 'c', 'd', 'e'].map((name) => writes.run(work(name))))).toEqual([...'abcde']);
-    expect(seen).toEqual([...'abcde'].flatMap((name) => [`${name} begins`, `${name} ends`]));
+    expect(await Promise.all(names.map((name) => writes.run(work(name))))).toEqual(names);
+    expect(seen).toEqual(names.flatMap((name) => [`${name} begins`, `${name} ends`]));
   });
 
   test('holds no more than its limit: the next one waits for room', async () => {
