@@ -1,7 +1,7 @@
 import type { Alarm, AlarmState, AlarmStep } from '#core/contract/alarm.ts';
 import type { BridgeDefinition } from '#core/contract/bridge.ts';
 import type { Levels } from '#core/contract/severity.ts';
-import { fixed } from './figure.ts';
+import { fixed } from '../format.ts';
 
 /** The words of an alarm: what it is about, its value against its limit, its steps. */
 
@@ -9,7 +9,11 @@ export const LIMIT_NAMES = { AL: 'alert limit', IL: 'intervention limit', IAL: '
 
 export const GROUPS: readonly { state: AlarmState; title: string; meaning: string }[] = [
   { state: 'unacknowledged', title: 'Unacknowledged', meaning: 'needs an answer' },
-  { state: 'returned to normal, unacknowledged', title: 'Returned to normal', meaning: 'unacknowledged, needs an answer' },
+  {
+    state: 'returned to normal, unacknowledged',
+    title: 'Returned to normal',
+    meaning: 'unacknowledged, needs an answer',
+  },
   { state: 'acknowledged', title: 'Acknowledged', meaning: 'answered, still abnormal' },
   { state: 'normal', title: 'Normal', meaning: 'back to normal and answered' },
 ];

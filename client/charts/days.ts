@@ -113,3 +113,16 @@ export function nearestMark(marks: readonly Mark[], layout: DayLayout, x: number
   }
   return best;
 }
+
+/** Civil day `by` days later. `shiftDay('2026-03-01', -1) // '2026-02-28'` */
+export function shiftDay(day: string, by: number): string {
+  return new Date(Date.parse(`${day}T00:00:00Z`) + by * 86_400_000).toISOString().slice(0, 10);
+}
+
+/** The instant at which a civil day begins in a time zone. */
+export function midnight(day: string, timeZone: string): Micros {
+  const asUtc = Date.parse(`${day}T00:00:00Z`) * 1000;
+  // The offset just before midnight may not be that of midnight; a second look settles it.
+  const near = asUtc - offsetMinutes(asUtc, timeZone) * 60_000_000;
+  return asUtc - offsetMinutes(near, timeZone) * 60_000_000;
+}

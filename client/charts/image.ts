@@ -102,7 +102,9 @@ async function fontFaces(): Promise<string> {
     rules.map(async (rule) => {
       const url = /url\("?([^")]+)"?\)/.exec(rule.style.getPropertyValue('src'))?.[1];
       if (!url) return '';
-      const data = url.startsWith('data:') ? url : await asDataUrl(new URL(url, rule.parentStyleSheet?.href ?? location.href).href);
+      const data = url.startsWith('data:')
+        ? url
+        : await asDataUrl(new URL(url, rule.parentStyleSheet?.href ?? location.href).href);
       const { style } = rule;
       return `@font-face{font-family:${style.getPropertyValue('font-family')};font-weight:${style.getPropertyValue('font-weight')};src:url(${data})}`;
     }),

@@ -4,7 +4,7 @@ import { severityOf } from '#core/contract/severity.ts';
 import type { Decay } from './decay.ts';
 import { limitLines } from './limit-line.ts';
 import type { PlotSpec } from './plot.ts';
-import { plotColumns, type Wave } from './wave.ts';
+import { plotColumns, valueAt, type Wave } from './wave.ts';
 
 const UNITS: Readonly<Record<Sensor['quantity'], string>> = {
   acceleration: 'm/s²',
@@ -89,9 +89,11 @@ export function waveformSpec(definition: BridgeDefinition, passage: Passage, sen
 /** The free decay on a logarithmic axis with its envelope, and the line of the stored f1 and ζ1. */
 export function decaySpec(decay: Decay): PlotSpec {
   const strongest = Math.max(...decay.envelope.map((point) => point.amplitude), 1e-6);
-  const from = Math.max(10 ** Math.floor(Math.log10(strongest / 200)), 1e-4);
+  const from = Math.max(10 ** Math.floor(Math.log10(strongest / 100)), 1e-4);
   const end = decay.seconds.at(-1) ?? 1;
-  const envelopeAt = new Map(decay.envelope.map(({ second, amplitude }) => [nearest(decay.seconds, second), amplitude]));
+  const envelopeAt = new Map(
+    decay.envelope.map(({ second, amplitude }) => [nearest(decay.seconds, second), amplitude]),
+  );
   const { fit } = decay;
   return {
     x: { values: decay.seconds, title: 'time after the last axle, s', digits: 3, from: 0, to: end },
@@ -163,7 +165,9 @@ export function spectrumSpec(
     x: { values: hertz, title: 'frequency, Hz', digits: 2, from: 0, to: upToHz },
     y: { title: '(m/s²)/√Hz', digits: 3, unit: '(m/s²)/√Hz', from, to, log: true },
     series: [
-      ...(lines.forced ? [{ label: 'forced', values: floor(forced), colour: 'ink3' as const, width: 0.95, tag: 'forced' }] : []),
+      ...(lines.forced
+        ? [{ label: 'forced', values: floor(forced), colour: 'ink3' as const, width: 0.95, tag: 'forced' }]
+        : []),
       ...(lines.free
         ? [{ label: 'free decay', values: floor(free), colour: 'ink' as const, width: 1.9, tag: 'free decay' }]
         : []),
@@ -172,32 +176,39 @@ export function spectrumSpec(
   };
 }
 
-/** Two passages of one channel, aligned at the first axle: the later above, the earlier below, on one scale. */
-export function comparisonSpecs(
+/** Two passages of one channel, aligned at the first axle, on one scale: this one above, the other below. */
+export function comparisonSpec(
   definition: BridgeDefinition,
   sensor: Sensor,
-  pair: readonly { passage: Passage; wave: Wave; tag: string; colour: 'ink' | 'select' }[],
-): PlotSpec[] {
-  const spans = pair.map(({ passage }) => (passage.phases.freeEndMicros - passage.phases.onMicros) / 1e6);
+  here: { passage: Passage; wave: Wave; tag: string },
+  other: { passage: Passage; wave: Wave; tag: string },
+): PlotSpec {
+  const length = ({ phases }: Passage): number => (phases.freeEndMicros - phases.onMicros) / 1e6;
   const from = -0.5;
-  const to = Math.max(...spans) + 0.5;
-  const lines = limitLines(limitOf(definition, sensor)?.levels);
-  const columns = pair.map(({ passage, wave }) => {
-    const zero = passage.phases.onMicros;
-    return plotColumns(wave, zero, zero + from * 1e6, zero + to * 1e6);
-  });
-  const greatest = columns.reduce(
-    (most, { values }) => values.reduce<number>((high, value) => Math.max(high, Math.abs(value ?? 0)), most),
+  const to = Math.max(length(here.passage), length(other.passage)) + 0.5;
+  const zero = here.passage.phases.onMicros;
+  const otherZero = other.passage.phases.onMicros;
+  // One time axis for both: samples that this passage's record does not reach are still asked of the other.
+  const count = Math.floor((to - from) * here.wave.rateHz);
+  const seconds = Array.from({ length: count }, (_, i) => from + i / here.wave.rateHz);
+  const values = seconds.map((second) => valueAt(here.wave, zero + second * 1e6));
+  const otherValues = seconds.map((second) => valueAt(other.wave, otherZero + second * 1e6));
+  const greatest = [...values, ...otherValues].reduce<number>(
+    (most, value) => Math.max(most, Math.abs(value ?? 0)),
     1e-6,
   );
-  const reach = Math.max(greatest * 1.12, ...lines.filter(({ value }) => value < greatest * 1.5).map(({ value }) => value * 1.1));
+  const lines = limitLines(limitOf(definition, sensor)?.levels).filter(({ value }) => value < greatest * 1.35);
+  const reach = Math.max(greatest, ...lines.map(({ value }) => value)) * 1.12;
   const unit = UNITS[sensor.quantity];
-  return pair.map(({ tag, colour }, i) => ({
-    x: { values: columns[i]!.seconds, title: 'time after the first axle, s', digits: 3, from, to },
-    y: { title: `${sensor.id}, ${unit}`, digits: 2, unit, from: -reach, to: reach },
-    series: [{ label: tag, values: columns[i]!.values, colour, width: 0.95, tag }],
-    limits: { lines: lines.filter(({ value }) => value < reach), both: true },
-  }));
+  return {
+    x: { values: seconds, title: 'time after the first axle, s', digits: 3, from, to },
+    y: { title: `${sensor.id}, ${unit}`, digits: 2, unit, from: -reach, to: reach, lanes: 2 },
+    series: [
+      { label: here.tag, values, colour: 'ink', width: 0.95, tag: here.tag },
+      { label: other.tag, values: otherValues, colour: 'select', width: 0.95, tag: other.tag, lane: 1 },
+    ],
+    limits: { lines, both: true },
+  };
 }
 
 /** Index of the value nearest to one, in rising values. */

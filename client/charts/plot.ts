@@ -7,7 +7,16 @@ import { logTicks, ticks } from './scale.ts';
 /** A plot with one horizontal axis. Values are plain arrays with `null` where there is no value. */
 export interface PlotSpec {
   x: { values: readonly number[]; title: string; digits: number; from: number; to: number };
-  y: { title: string; digits: number; unit: string; from: number; to: number; log?: boolean };
+  y: {
+    title: string;
+    digits: number;
+    unit: string;
+    from: number;
+    to: number;
+    log?: boolean;
+    /** Strips of the same scale, one above the other; one unless said. */
+    lanes?: number;
+  };
   series: PlotSeries[];
   /** Limits drawn across, at plus and minus where `both`. */
   limits?: { lines: LimitLine[]; both: boolean };
@@ -29,6 +38,8 @@ export interface PlotSeries {
   silent?: boolean;
   /** Written at the right end of the trace. */
   tag?: string;
+  /** Strip it is drawn in, from the top; the first unless said. */
+  lane?: number;
 }
 
 export interface PlotReport {
@@ -119,18 +130,22 @@ function within(spec: PlotSpec, min: number, max: number): { min: number; max: n
 }
 
 function dataOf(spec: PlotSpec): uPlot.AlignedData {
-  return [spec.x.values as number[], ...spec.series.map((series) => series.values as (number | null)[])];
+  const columns = spec.series.map((series) => {
+    const down = laneOffset(spec, series.lane ?? 0);
+    if (down === 0) return series.values as (number | null)[];
+    return series.values.map((value) => (value === null ? null : value - down));
+  });
+  return [spec.x.values as number[], ...columns];
 }
+
+/** How far a lane lies below the first one, in units of the vertical axis. */
+const laneOffset = ({ y }: PlotSpec, lane: number): number => lane * (y.to - y.from);
+
+const lanesOf = ({ y }: PlotSpec): number[] => Array.from({ length: y.lanes ?? 1 }, (_, lane) => lane);
 
 const RIGHT_OF_LIMITS = 66;
 
-function build(
-  host: HTMLElement,
-  spec: () => PlotSpec,
-  ink: () => Ink,
-  height: number,
-  report: PlotReport,
-): uPlot {
+function build(host: HTMLElement, spec: () => PlotSpec, ink: () => Ink, height: number, report: PlotReport): uPlot {
   const type = `12px ${ink().narrow}`;
   const ratio = (): number => devicePixelRatio;
   const axis = {
@@ -147,7 +162,10 @@ function build(
     padding: [spec().shades || spec().uprights ? 20 : 22, spec().limits?.lines.length ? RIGHT_OF_LIMITS : 8, 16, 0],
     scales: {
       x: { time: false, range: (_u, min, max) => [min, max] },
-      y: { range: () => [spec().y.from, spec().y.to], ...(spec().y.log ? { distr: 3 as const, log: 10 as const } : {}) },
+      y: {
+        range: () => [spec().y.from - laneOffset(spec(), lanesOf(spec()).length - 1), spec().y.to],
+        ...(spec().y.log ? { distr: 3 as const, log: 10 as const } : {}),
+      },
     },
     axes: [
       {
@@ -159,9 +177,19 @@ function build(
       {
         ...axis,
         size: 42,
-        splits: (u, _i, min, max) =>
-          spec().y.log ? logTicks(min, max, u.height / 22) : ticks(min, max, u.height / 42),
-        values: (_u, splits) => splits.map(plain),
+        splits: (u, _i, min, max) => {
+          const { y } = spec();
+          if (y.log) return logTicks(min, max, u.height / 22);
+          const lanes = lanesOf(spec());
+          return lanes
+            .flatMap((lane) =>
+              ticks(y.from, y.to, u.height / lanes.length / 42).map((tick) => tick - laneOffset(spec(), lane)),
+            )
+            .toSorted((a, b) => a - b);
+        },
+        // uPlot would thin the figures of a logarithmic axis once more.
+        filter: (_u, splits) => splits,
+        values: (_u, splits) => splits.map((split) => plain(inLane(spec(), split))),
       },
     ],
     series: [{}, ...spec().series.map((series, i) => seriesOf(series, i, spec, ink))],
@@ -258,7 +286,12 @@ function drawOver(u: uPlot, spec: PlotSpec, ink: Ink, ratio: number): void {
   lines.forEach(({ severity, value }, i) => {
     context.strokeStyle = ink.ink3;
     context.setLineDash([...DASHES[severity]]);
-    for (const sign of spec.limits?.both ? [1, -1] : [1]) line(context, box.left, y(sign * value), box.right, y(sign * value));
+    for (const lane of lanesOf(spec)) {
+      for (const sign of spec.limits?.both ? [1, -1] : [1]) {
+        const at = y(sign * value - laneOffset(spec, lane));
+        line(context, box.left, at, box.right, at);
+      }
+    }
     const at = Math.max(box.top + 4 + i * 14, Math.min(y(value), box.bottom - (lines.length - 1 - i) * 14));
     context.setLineDash([]);
     context.lineWidth = 0.7;
@@ -305,7 +338,8 @@ function drawMark(
   if (px < box.left - 1 || px > box.right + 1) return;
   context.lineWidth = 1.35;
   const colour = mark.severity ? ink.signal : ink.ink;
-  if (mark.severity) drawLozenge(context, { x: px, y: py, r: 6, severity: mark.severity }, { line: colour, paper: ink.paper });
+  if (mark.severity)
+    drawLozenge(context, { x: px, y: py, r: 6, severity: mark.severity }, { line: colour, paper: ink.paper });
   else {
     context.beginPath();
     context.arc(px, py, 3.2, 0, 7);
@@ -335,8 +369,13 @@ function tagSeries(
   while (last > 0 && (series.values[last] == null || spec.x.values[last]! > max)) last--;
   const value = series.values[last];
   if (value == null) return;
-  const at = Math.max(box.top + 10, Math.min(box.bottom - 6, y(value) - 10));
-  write(series.tag, [Math.min(box.right, x(spec.x.values[last]!)) - 2, at], ink[series.colour], 'right', 500);
+  const at = Math.max(box.top + 10, Math.min(box.bottom - 6, y(value - laneOffset(spec, series.lane ?? 0)) - 12));
+  const right = Math.min(box.right, x(spec.x.values[last]!)) - 2;
+  u.ctx.font = `500 12px ${ink.narrow}`;
+  const width = u.ctx.measureText(series.tag).width;
+  u.ctx.fillStyle = ink.paper;
+  u.ctx.fillRect(right - width - 3, at - 11, width + 6, 15);
+  write(series.tag, [right, at], ink[series.colour], 'right', 500);
 }
 
 function line(context: CanvasRenderingContext2D, x1: number, y1: number, x2: number, y2: number): void {
@@ -344,6 +383,13 @@ function line(context: CanvasRenderingContext2D, x1: number, y1: number, x2: num
   context.moveTo(x1, y1);
   context.lineTo(x2, y2);
   context.stroke();
+}
+
+/** The value that a place on the axis stands for in its own lane. */
+function inLane(spec: PlotSpec, split: number): number {
+  const { from, to } = spec.y;
+  const lane = spec.y.lanes ? Math.max(0, Math.floor((to - split) / (to - from) - 1e-9)) : 0;
+  return Number((split + laneOffset(spec, lane)).toPrecision(6));
 }
 
 /** A tick's figure, with a true minus sign. */

@@ -1,4 +1,10 @@
-import { bridgeLengthM, countsAxles, isDeckAcceleration, type BridgeDefinition, type Sensor } from '#core/contract/bridge.ts';
+import {
+  bridgeLengthM,
+  countsAxles,
+  isDeckAcceleration,
+  type BridgeDefinition,
+  type Sensor,
+} from '#core/contract/bridge.ts';
 import type { Passage } from '#core/contract/passage.ts';
 import type { Micros } from '#core/contract/time.ts';
 import { linear, type Scale } from './scale.ts';
@@ -83,10 +89,9 @@ export function traceScales(
   const gap = Math.min(110, (gaps.length > 0 ? Math.min(...gaps) : 6) * layout.pixelsPerMetre);
   const peak = Math.max(0.1, ...deck.map((sensor) => greatest(waves.get(sensor.id))));
   const axles = new Map(
-    drawn.filter((sensor) => !isDeckAcceleration(sensor)).map((sensor) => [
-      sensor.id,
-      Math.min(22, gap * 0.4) / Math.max(1e-9, greatest(waves.get(sensor.id))),
-    ]),
+    drawn
+      .filter((sensor) => !isDeckAcceleration(sensor))
+      .map((sensor) => [sensor.id, Math.min(22, gap * 0.4) / Math.max(1e-9, greatest(waves.get(sensor.id)))]),
   );
   return { acceleration: (gap * 0.52) / peak, axles };
 }

@@ -36,10 +36,12 @@ export function ticks(from: number, to: number, aim: number): number[] {
   if (!(to > from)) return [];
   const rough = (to - from) / Math.max(1, aim);
   const power = 10 ** Math.floor(Math.log10(rough));
-  const step = [1, 2, 5, 10].map((factor) => factor * power).find((candidate) => candidate >= rough * 0.999) ?? power * 10;
+  const step =
+    [1, 2, 5, 10].map((factor) => factor * power).find((candidate) => candidate >= rough * 0.999) ?? power * 10;
   const digits = Math.max(0, -Math.floor(Math.log10(step) + 1e-9));
   const found: number[] = [];
-  for (let k = Math.ceil(from / step - 1e-9); k * step <= to + step * 1e-9; k++) found.push(Number((k * step).toFixed(digits)));
+  for (let k = Math.ceil(from / step - 1e-9); k * step <= to + step * 1e-9; k++)
+    found.push(Number((k * step).toFixed(digits)));
   return found;
 }
 

@@ -15,9 +15,11 @@ const LIMIT_SAMPLES = 144_000_000;
 /** Joins the runs of each sensor onto one grid. A frame may hold several runs of a sensor, parted by gaps. */
 export function wavesOf(frame: Frame): Map<string, Wave> {
   const waves = new Map<string, Wave>();
-  for (const [sensor, runs] of Map.groupBy(frame.header.channels, (channel) => channel.sensor)) {
+  for (const sensor of new Set(frame.header.channels.map((channel) => channel.sensor))) {
+    const runs = frame.header.channels.filter((channel) => channel.sensor === sensor);
     const first = runs.reduce((earliest, run) => (run.startMicros < earliest.startMicros ? run : earliest));
-    const at = (run: (typeof runs)[number]): number => Math.round((run.startMicros - first.startMicros) / first.stepMicros);
+    const at = (run: (typeof runs)[number]): number =>
+      Math.round((run.startMicros - first.startMicros) / first.stepMicros);
     const count = Math.max(...runs.map((run) => at(run) + run.count));
     if (!(count > 0) || count > LIMIT_SAMPLES) continue;
     const samples = new Float32Array(count).fill(Number.NaN);

@@ -1,0 +1,52 @@
+import { bridgeLengthM, chainageKmAt, type BridgeDefinition } from '#core/contract/bridge.ts';
+import type { Passage } from '#core/contract/passage.ts';
+import { LIMIT_NAMES } from './alarm-words.ts';
+import { chainage, fixed, speed } from '../format.ts';
+import { clockIn, dateIn, offsetIn } from '../time.ts';
+
+/** What crossed, as a title: `32 axles, 44.3 m/s`. */
+export function titleOf(passage: Passage): string {
+  const axles = passage.axleCount.value;
+  const fast = passage.speedMs.value;
+  const train = axles === null ? 'Train, axles not counted' : `${fixed(axles, 0)} axles`;
+  return `${train}, ${fast === null ? 'speed not measurable' : `${speed(fast)} m/s`}`;
+}
+
+/** `towards km 41.331`: the end of the bridge that the train went to. */
+export function towards(passage: Passage, definition: BridgeDefinition): string {
+  if (passage.direction === null) return 'direction not measurable';
+  const end = passage.direction === 'rising' ? bridgeLengthM(definition) : 0;
+  return `towards km ${chainage(chainageKmAt(definition, end))}`;
+}
+
+/** `Tue 4 Nov 2025, 07:46:12 local (UTC+1), 06:46:12 UTC` */
+export function timeOf(passage: Passage, zone: string): string {
+  const at = passage.phases.onMicros;
+  if (zone === 'UTC') return `${dateIn(at)}, ${clockIn(at)} UTC`;
+  return `${dateIn(at, zone)}, ${clockIn(at, zone)} local (${offsetIn(at, zone)}), ${clockIn(at)} UTC`;
+}
+
+/** The passage against its limits in one sentence. */
+export function verdictOf(passage: Passage): string {
+  const { measured, severity, limit } = passage.peak;
+  if (measured.value === null) return `Peak deck acceleration not measurable: ${measured.reason}`;
+  if (severity !== null) return `Above the ${LIMIT_NAMES[severity]}`;
+  return passage.peak.ofGravest === null && limit === null ? 'No limit holds here' : 'Below all limits';
+}
+
+/** The low-pass that the limits look through, as it was realised. */
+export function filterWords({ filter }: Passage['provenance']): string {
+  return `${filter.kind}, order ${filter.order}, up to ${fixed(filter.upToHz, 1)} Hz, ${filter.phase} phase, by ${filter.rule}`;
+}
+
+export function phaseWords({ phases }: Passage): string {
+  const quality = phases.quality === 'good' ? '' : `, ${phases.quality}`;
+  const notes = phases.notes.length > 0 ? `: ${phases.notes.join('; ')}` : '';
+  return `found by ${phases.foundBy}${quality}${notes}`;
+}
+
+/** `400 Hz`, or all rates where they differ. */
+export function rateWords(passage: Passage): string {
+  const rates = [...new Set(passage.channels.map(({ rateHz }) => rateHz))].toSorted((a, b) => b - a);
+  return rates.map((rate) => `${fixed(rate, Number.isInteger(rate) ? 0 : 2)} Hz`).join(', ');
+}
