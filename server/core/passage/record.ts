@@ -179,20 +179,24 @@ function isClipped(sensor: Sensor, x: Float64Array): boolean {
   return false;
 }
 
+/** A spike bends the trace this many times more than the r.m.s. bend of the samples about it, and by at least so much, m/s². */
+const SPIKE_RATIO = 8;
+const SPIKE_LEAST = 0.05;
+/** The samples about it: from the third to this one on each side. */
+const SPIKE_REACH = 20;
+
 /**
- * A single sample that stands out from the line between its neighbours by far more than any other bend of the second
- * about it: no deck on earth does that, a loose cable does.
+ * A single sample that stands out from the line between its neighbours far more than any other near it: no deck does
+ * that, a loose cable does. For normal noise the chance of a false one is below 1e-14 a sample.
  */
 function hasSpikes(x: Float64Array): boolean {
-  for (let i = 2; i < x.length - 2; i++) {
-    const bend = Math.abs(x[i]! - (x[i - 1]! + x[i + 1]!) / 2);
-    if (bend < 0.05) continue;
-    const about = Math.max(
-      Math.abs(x[i - 1]! - x[i - 2]!),
-      Math.abs(x[i + 2]! - x[i + 1]!),
-      Math.abs(x[i + 1]! - x[i - 1]!),
-    );
-    if (bend > 12 * (about + 0.01)) return true;
+  const bend = (i: number): number => x[i]! - (x[i - 1]! + x[i + 1]!) / 2;
+  for (let i = SPIKE_REACH + 1; i < x.length - SPIKE_REACH - 1; i++) {
+    const here = Math.abs(bend(i));
+    if (here < SPIKE_LEAST) continue;
+    let squares = 0;
+    for (let k = 3; k <= SPIKE_REACH; k++) squares += bend(i - k) ** 2 + bend(i + k) ** 2;
+    if (here > SPIKE_RATIO * Math.sqrt(squares / (2 * (SPIKE_REACH - 2)))) return true;
   }
   return false;
 }
