@@ -2,7 +2,15 @@ import { bridgeLengthM, countsAxles, type BridgeDefinition, type Sensor } from '
 import { MICROS_PER_SECOND, type Micros } from '#core/contract/time.ts';
 import { HISTORY, STRETCHES, type Deck, type RunningTrain } from './deck.ts';
 import { trackOf, type BridgeModel } from './model.ts';
-import { ANTI_ALIAS, noiseKernel, noiseMap, noisePower, NoiseShaper, type NoiseKernel, type NoiseMap } from './noise.ts';
+import {
+  ANTI_ALIAS,
+  noiseKernel,
+  noiseMap,
+  noisePower,
+  NoiseShaper,
+  type NoiseKernel,
+  type NoiseMap,
+} from './noise.ts';
 import { blowPower, type FaultEvent, type SceneEvent } from './nuisance.ts';
 import type { BridgeParameters } from './parameters.ts';
 import type { PassageEvent } from './passage.ts';
@@ -122,14 +130,28 @@ export class Channel {
     let value = 0;
     let index = from;
     for (let j = from; j <= to; j++) {
-      let sum = 0;
-      for (const { mode, factor } of this.felt) sum += factor * deck.acceleration[mode]![j]!;
-      if (Math.abs(sum) > value) {
-        value = Math.abs(sum);
+      const here = Math.abs(this.accelerationAt(deck, j));
+      if (here > value) {
+        value = here;
         index = j;
       }
     }
-    return { value, index };
+    return { value: this.crest(deck, index), index };
+  }
+
+  /** Height of the parabola through a step and its neighbours. */
+  private crest(deck: Deck, index: number): number {
+    const last = deck.stepsPerSlot + HISTORY;
+    const [a, b, c] = [index - 1, index, Math.min(index + 1, last)].map((j) => Math.abs(this.accelerationAt(deck, j)));
+    const bend = a! - 2 * b! + c!;
+    return b! < a! || b! < c! || bend === 0 ? b! : b! - (a! - c!) ** 2 / (8 * bend);
+  }
+
+  /** The deck's acceleration at this sensor, all modes, at one step. */
+  private accelerationAt(deck: Deck, j: number): number {
+    let sum = 0;
+    for (const { mode, factor } of this.felt) sum += factor * deck.acceleration[mode]![j]!;
+    return sum;
   }
 
   private feel(deck: Deck): void {
@@ -173,12 +195,7 @@ export class Channel {
   }
 
   /** Wheel–rail noise and the ringing of blows. */
-  private hear(
-    deck: Deck,
-    trains: readonly RunningTrain[],
-    events: readonly SceneEvent[],
-    slotMicros: number,
-  ): void {
+  private hear(deck: Deck, trains: readonly RunningTrain[], events: readonly SceneEvent[], slotMicros: number): void {
     const { power } = this;
     power.fill(0);
     for (const train of trains) {

@@ -1,7 +1,21 @@
 import { MICROS_PER_SECOND, type Micros } from '#core/contract/time.ts';
-import { createOscillators, run, tuneToAmplitude, type AmplitudeLaw, type Oscillators } from '#core/mechanics/modal-step.ts';
+import {
+  createOscillators,
+  run,
+  tuneToAmplitude,
+  type AmplitudeLaw,
+  type Oscillators,
+} from '#core/mechanics/modal-step.ts';
 import type { BridgeModel, ModelMode } from './model.ts';
-import { blowForceN, pointFactor, walkerForce, windRms, type BlowEvent, type WalkerEvent, type WindEvent } from './nuisance.ts';
+import {
+  blowForceN,
+  pointFactor,
+  walkerForce,
+  windRms,
+  type BlowEvent,
+  type WalkerEvent,
+  type WindEvent,
+} from './nuisance.ts';
 import type { BridgeParameters } from './parameters.ts';
 import { trace, type Course, type PassageEvent } from './passage.ts';
 import { RandomStream } from './random.ts';
@@ -9,9 +23,9 @@ import { RandomStream } from './random.ts';
 /** Shape tables have this many intervals; linear between them a third mode is right to 3e-6. */
 const TABLE = 2048;
 /** Time between two tunings of the modes, s. */
-const STRETCH_S = 0.004;
+const STRETCH_S = 0.005;
 /** Stretches in a slot: what is computed at a time, about 0.1 s. */
-export const STRETCHES = 25;
+export const STRETCHES = 20;
 /** Entries kept before a slot, for interpolation. */
 export const HISTORY = 2;
 /** Below this a mode at rest is left at rest, m. */
@@ -24,6 +38,17 @@ export interface RunningTrain {
   /** Way and speed of its first axle at the steps of the slot. */
   wayM: Float64Array;
   speedMs: Float64Array;
+}
+
+export interface DeckSettings {
+  model: BridgeModel;
+  parameters: BridgeParameters;
+  seed: number;
+  startMicros: Micros;
+  /** Steps per second. */
+  rateHz: number;
+  /** Whether displacements are wanted beside accelerations. */
+  displaces: boolean;
 }
 
 export interface DeckEvents {
@@ -49,6 +74,7 @@ export class Deck {
 
   private readonly model: BridgeModel;
   private readonly ambientMs2: number;
+  private readonly displaces: boolean;
   private readonly unsprungMass: boolean;
   private readonly startMicros: Micros;
   private readonly oscillators: Oscillators;
@@ -65,9 +91,10 @@ export class Deck {
   private readonly share: Float64Array;
   private lawSecond = -1;
 
-  constructor(model: BridgeModel, parameters: BridgeParameters, seed: number, startMicros: Micros, rateHz: number) {
+  constructor({ model, parameters, seed, startMicros, rateHz, displaces }: DeckSettings) {
     this.model = model;
     this.ambientMs2 = parameters.ambientMs2;
+    this.displaces = displaces;
     this.unsprungMass = parameters.structure.unsprungMass;
     this.startMicros = startMicros;
     this.stepS = 1 / rateHz;
@@ -197,8 +224,7 @@ export class Deck {
     const table = this.tables[m]!;
     const added = this.added[m]!;
     for (let s = 0; s < STRETCHES; s++) {
-      const j = (s + 0.5) * this.stepsPerStretch;
-      const near = Math.floor(j);
+      const near = Math.floor((s + 0.5) * this.stepsPerStretch);
       if (near >= from && near <= to) added[s] = added[s]! + ratio * table[this.cell[near]!]! ** 2;
     }
   }
@@ -260,11 +286,11 @@ export class Deck {
     const { oscillators, stepsPerStretch: n, stepS } = this;
     const force = this.forces[m]!;
     const acceleration = this.acceleration[m]!.subarray(HISTORY);
-    const displacement = this.displacement[m]!.subarray(HISTORY);
+    const displacement = this.displaces ? this.displacement[m]!.subarray(HISTORY) : null;
     const still = Math.abs(oscillators.re[m]!) < ASLEEP_M && Math.abs(oscillators.im[m]!) < ASLEEP_M;
     if (still && force.every((value) => value === 0)) {
       acceleration.fill(0, 1);
-      displacement.fill(0, 1);
+      displacement?.fill(0, 1);
       return;
     }
     const law = this.laws[m]!;

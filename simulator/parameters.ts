@@ -112,13 +112,10 @@ export interface ParameterChanges {
 }
 
 /** Parameters of an ordinary bridge of this kind; each part may be replaced. */
-export function bridgeParameters(
-  definition: BridgeDefinition,
-  changes: ParameterChanges = {},
-): BridgeParameters {
+export function bridgeParameters(definition: BridgeDefinition, changes: ParameterChanges = {}): BridgeParameters {
   const ballasted = definition.spans.some((span) => span.track === 'ballasted');
   return {
-    ballast: { softening: ballasted ? 0.006 : 0.001, dampingRise: ballasted ? 0.003 : 0.0005, ...changes.ballast },
+    ballast: { softening: ballasted ? 0.004 : 0.001, dampingRise: ballasted ? 0.003 : 0.0005, ...changes.ballast },
     climate: {
       meanC: 9,
       yearlyC: 9,
@@ -151,7 +148,10 @@ export function bridgeParameters(
  * Parameters under which the model is the linear textbook beam, without noise of any kind: for comparison with closed
  * forms.
  */
-export function cleanParameters(definition: BridgeDefinition, modes: { bending: number; torsion: number }): BridgeParameters {
+export function cleanParameters(
+  definition: BridgeDefinition,
+  modes: { bending: number; torsion: number },
+): BridgeParameters {
   const silent = { noiseRms: 0, bits: 0 };
   return bridgeParameters(definition, {
     ballast: { softening: 0, dampingRise: 0 },

@@ -48,8 +48,12 @@ export interface SimulationOptions {
   keepClean?: boolean;
 }
 
-/** Slowest internal rate; the real one is a multiple of the fastest channel's. */
-const INTERNAL_HZ = 2000;
+/**
+ * Slowest internal rate, a multiple of the fastest channel's. Stepping is exact for a force that is linear within a
+ * step, and the weight of an axle changes smoothly, so a millisecond does; where the samples of some channel fall
+ * between the steps, half of it keeps the interpolation right.
+ */
+const INTERNAL_HZ = { aligned: 1000, between: 2000 } as const;
 
 export function createBridgeSimulation(options: SimulationOptions): BridgeSimulation {
   return new Simulation(options);
@@ -69,10 +73,10 @@ class Simulation implements BridgeSimulation {
   constructor({ definition, parameters, seed, startMicros, keepClean = false }: SimulationOptions) {
     this.startMicros = startMicros;
     this.model = createModel(definition, parameters, seed);
-    const fastest = Math.max(...definition.sensors.map((sensor) => sensor.rateHz));
-    const internalHz = fastest * Math.max(1, Math.ceil(INTERNAL_HZ / fastest));
-    this.deck = new Deck(this.model, parameters, seed, startMicros, internalHz);
     const rates = [...new Set(definition.sensors.map((sensor) => sensor.rateHz))];
+    const internalHz = internalRateHz(rates);
+    const displaces = definition.sensors.some((each) => each.quantity === 'displacement' || each.quantity === 'strain');
+    this.deck = new Deck({ model: this.model, parameters, seed, startMicros, rateHz: internalHz, displaces });
     this.groups = rates.map((rateHz) => rateGroup(rateHz, internalHz, this.deck.stepsPerSlot));
     this.channels = definition.sensors.map(
       (sensor) =>
@@ -214,6 +218,13 @@ class Simulation implements BridgeSimulation {
 function overlaps(event: Exclude<SceneEvent, PassageEvent>, fromMicros: number, toMicros: number): boolean {
   const { fromMicros: from, toMicros: to } = extent(event);
   return from < toMicros && to > fromMicros;
+}
+
+function internalRateHz(rates: readonly number[]): number {
+  const fastest = Math.max(...rates);
+  const multiple = (leastHz: number): number => fastest * Math.max(1, Math.ceil(leastHz / fastest));
+  const aligned = multiple(INTERNAL_HZ.aligned);
+  return rates.every((rate) => aligned % rate === 0) ? aligned : multiple(INTERNAL_HZ.between);
 }
 
 function rateGroup(rateHz: number, internalHz: number, stepsPerSlot: number): RateGroup {

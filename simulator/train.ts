@@ -60,8 +60,8 @@ function onBogies(
   return { lengthM, axlesM, ...rest };
 }
 
-const LOCOMOTIVE = onBogies(18.9, 10.4, 2.9, { axleLoadKn: 208, unsprungKg: 2600, roughness: 1.2 });
-const COACH = onBogies(26.4, 19.0, 2.5, { axleLoadKn: 112, unsprungKg: 1500, roughness: 1 });
+const LOCOMOTIVE = onBogies(19.6, 12.0, 2.9, { axleLoadKn: 202, unsprungKg: 2600, roughness: 1.2 });
+const COACH = onBogies(26.4, 19.6, 2.6, { axleLoadKn: 108, unsprungKg: 1500, roughness: 1 });
 const RAILCAR = onBogies(22.8, 15.6, 2.4, { axleLoadKn: 118, unsprungKg: 1600, roughness: 0.9 });
 const FREIGHT_LOCOMOTIVE = onBogies(19.4, 10.6, 2.9, { axleLoadKn: 214, unsprungKg: 2700, roughness: 1.4 });
 const TAMPER = onBogies(21.6, 14.2, 1.9, { axleLoadKn: 152, unsprungKg: 1700, roughness: 1.6 });
