@@ -153,6 +153,10 @@ export const BridgeDefinition = Type.Object(
     chainageKm: Type.Number({ minimum: 0, maximum: 100_000 }),
     /** IANA name; days and printed local times follow it. UTC where absent. */
     timeZone: Type.Optional(Type.String({ minLength: 1, maxLength: 64 })),
+    /** What the bridge leads over, for its drawing. */
+    crosses: Type.Optional(
+      Type.Union([Type.Literal('water'), Type.Literal('road'), Type.Literal('railway'), Type.Literal('land')]),
+    ),
     spans: Type.Array(Span, { minItems: 1, maxItems: 100 }),
     loggers: Type.Array(Logger, { minItems: 1, maxItems: 64 }),
     sensors: Type.Array(Sensor, { minItems: 1, maxItems: 256 }),
