@@ -14,31 +14,21 @@ import { sensorMessage } from './wording.ts';
  */
 export const ALARMING: readonly ConditionCode[] = ['silent', 'flat', 'noise high', 'rate wrong', 'twin channel'];
 
-/** Conditions of one sensor that are remembered; one a code. */
-const REMEMBERED = 32;
-
 /** A condition of a sensor began, happened or ended. */
 export function onCondition(state: DeskState, condition: SensorCondition, takenMicros: Micros): DeskState {
   const before = state.conditions[condition.sensor] ?? [];
   const others = before.filter(({ code }) => code !== condition.code);
-  const now = condition.state === 'ended' ? others : [...others, condition].slice(-REMEMBERED);
-  const known = before.find(({ code }) => code === condition.code);
-  const news = known === undefined || known.micros !== condition.micros || known.state !== condition.state;
-  const next =
-    condition.state === 'ended'
-      ? withConditions(state, condition.sensor, now)
-      : news
-        ? withConditions(state, condition.sensor, now)
-        : state;
-  if (condition.state === 'ended') return returned(next, condition, takenMicros);
-  const doubted = doubtLevels(next, condition);
+  if (condition.state === 'ended') {
+    return returned(withConditions(state, condition.sensor, others), condition, takenMicros);
+  }
+  const doubted = doubtLevels(withConditions(state, condition.sensor, [...others, condition]), condition);
   return condition.state === 'began' && ALARMING.includes(condition.code)
     ? raised(doubted, condition, takenMicros)
     : doubted;
 }
 
+/** One a code, so there are never more than there are codes. */
 function withConditions(state: DeskState, sensor: string, conditions: SensorCondition[]): DeskState {
-  if (conditions.length === 0 && state.conditions[sensor] === undefined) return state;
   return { ...state, conditions: { ...state.conditions, [sensor]: conditions } };
 }
 
@@ -65,7 +55,7 @@ function raised(state: DeskState, condition: SensorCondition, takenMicros: Micro
 }
 
 function returned(state: DeskState, { sensor, micros }: SensorCondition, takenMicros: Micros): DeskState {
-  const lasting = (state.conditions[sensor] ?? []).some((one) => one.state === 'began' && ALARMING.includes(one.code));
+  const lasting = state.conditions[sensor]!.some((one) => one.state === 'began' && ALARMING.includes(one.code));
   if (lasting) return state;
   return sensorAlarms(state, sensor)
     .filter((alarm) => isActive(alarm) && alarm.raisedMicros <= micros)

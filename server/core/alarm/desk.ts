@@ -53,6 +53,9 @@ export function openDesk({ definition, alarms = [], above = [], newest = {}, now
     loggers: Object.fromEntries(
       Object.entries(newest).map(([logger, newestMicros]) => [logger, { newestMicros, heardMicros: nowMicros }]),
     ),
+    silences: Object.fromEntries(
+      alarms.filter((alarm) => alarm.kind === 'no data' && isActive(alarm)).map(({ rule, id }) => [rule, id]),
+    ),
   });
 }
 
@@ -133,8 +136,12 @@ function onAcknowledge(
   const alarm = state.alarms[id];
   if (alarm === undefined) return refused(state, 'NOT_FOUND', id, 'the desk has no alarm of this id');
   if (!mayAcknowledge(alarm)) {
-    const by = alarm.acknowledged === null ? '' : `, acknowledged by ${alarm.acknowledged.by}`;
-    return refused(state, 'ALARM_STATE', id, `it is "${alarm.state}"${by}`);
+    return refused(
+      state,
+      'ALARM_STATE',
+      id,
+      `it is "${alarm.state}", answered by ${alarm.acknowledged?.by ?? 'nobody'}`,
+    );
   }
   return quiet(withAlarm(state, acknowledge(alarm, by, note, nowMicros)));
 }

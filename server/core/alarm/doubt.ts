@@ -29,8 +29,7 @@ export function withTrain(alarm: Alarm): Alarm {
 
 /** The alarm with the conditions of its sensor, as far as they are known by now, said as doubt. */
 export function conditionsDoubt(state: DeskState, alarm: Alarm): Alarm {
-  if (alarm.sensor === null) return alarm;
-  const sensor = alarm.sensor;
+  const sensor = alarm.sensor ?? '';
   return (state.conditions[sensor] ?? [])
     .filter((condition) => condition.state === 'began' || alarm.raisedMicros - condition.micros <= MOMENT_MICROS)
     .reduce((doubted, condition) => withDoubt(doubted, `${sensor} is marked "${condition.code}"`), alarm);

@@ -92,7 +92,7 @@ function onReturned(state: DeskState, event: LevelEvent, takenMicros: Micros): D
 /** With no passage there will be no record, so what can be said about a lone sensor is said now. */
 function aloneDoubt(state: DeskState, alarm: Alarm): Alarm {
   if (alarm.passage !== null || alarm.sensors.length > 1) return alarm;
-  return said(state, withDoubt(alarm, `${NO_TRAIN} and only ${alarm.sensor ?? 'one sensor'} passed`));
+  return said(state, withDoubt(alarm, `${NO_TRAIN} and only ${alarm.sensors.join()} passed`));
 }
 
 function onEntered(state: DeskState, event: PassageProgress, takenMicros: Micros): DeskState {

@@ -125,7 +125,8 @@ function alarmOf(state: DeskState, limit: string, passage: Passage): Alarm | nul
     (alarm) =>
       alarm.passage === null && alarm.raisedMicros >= passage.startMicros && alarm.raisedMicros <= passage.endMicros,
   );
-  return within.toSorted((a, b) => (b.liveValue ?? 0) - (a.liveValue ?? 0))[0] ?? null;
+  const value = ({ liveValue }: Alarm): number => liveValue ?? 0;
+  return within.toSorted((a, b) => value(b) - value(a))[0] ?? null;
 }
 
 function remembered(state: DeskState, limit: string, passage: Passage, record: RecordOfLimit): DeskState {

@@ -1,7 +1,7 @@
 import type { Alarm } from '../contract/alarm.ts';
 import { MICROS_PER_SECOND, type Micros } from '../contract/time.ts';
-import { escalate, giveBack, isActive, raise } from './life.ts';
-import { trimmed, withAlarm, type DeskEffect, type DeskState, type DeskStep, type NoData } from './state.ts';
+import { escalate, giveBack, raise } from './life.ts';
+import { trimmed, withAlarm, type DeskEffect, type DeskState, type DeskStep } from './state.ts';
 import { noDataMessage } from './wording.ts';
 
 /** A logger is silent after this long where its definition says nothing, s. */
@@ -19,19 +19,17 @@ export function onHeard(
   const alarm = silenceOf(state, logger);
   const newestMicros = alarm === null ? Math.max(before?.newestMicros ?? 0, toMicros) : toMicros;
   const heard = { ...state, loggers: { ...state.loggers, [logger]: { newestMicros, heardMicros: nowMicros } } };
-  const bridge = state.definition.id;
+  const after = silentAfterMicros(state, logger);
   if (alarm !== null) {
-    const fromSilence = before?.newestMicros ?? alarm.raisedMicros - silentAfterMicros(state, logger);
+    const lastMicros = before?.newestMicros ?? alarm.raisedMicros - after;
+    const silences = Object.fromEntries(Object.entries(state.silences).filter(([silent]) => silent !== logger));
     return {
-      state: withAlarm(heard, giveBack(alarm, Math.max(fromMicros, alarm.raisedMicros), nowMicros)),
-      effects: noData({ bridge, logger, fromMicros: fromSilence, toMicros: fromMicros }),
+      state: withAlarm({ ...heard, silences }, giveBack(alarm, Math.max(fromMicros, alarm.raisedMicros), nowMicros)),
+      effects: [noData(state, logger, lastMicros, fromMicros)],
     };
   }
-  const hole = before !== undefined && fromMicros - before.newestMicros > silentAfterMicros(state, logger);
-  return {
-    state: heard,
-    effects: hole ? noData({ bridge, logger, fromMicros: before.newestMicros, toMicros: fromMicros }) : [],
-  };
+  const hole = before !== undefined && fromMicros - before.newestMicros > after;
+  return { state: heard, effects: hole ? [noData(state, logger, before.newestMicros, fromMicros)] : [] };
 }
 
 /**
@@ -50,8 +48,10 @@ export function onTick(state: DeskState, nowMicros: Micros): DeskStep {
     if (alarm !== null) {
       next = withAlarm(next, prolonged(alarm, nowMicros, after));
     } else if (heard !== undefined && nowMicros - heard.heardMicros > after) {
-      next = trimmed(withAlarm(next, raised(state, logger, heard.newestMicros, after, nowMicros)));
-      effects.push(...noData({ bridge: state.definition.id, logger, fromMicros: heard.newestMicros, toMicros: null }));
+      const silence = raised(state, logger, heard.newestMicros, after, nowMicros);
+      next = { ...next, silences: { ...next.silences, [logger]: silence.id } };
+      next = trimmed(withAlarm(next, silence));
+      effects.push(noData(state, logger, heard.newestMicros, null));
     }
   }
   return { state: next, effects };
@@ -59,10 +59,8 @@ export function onTick(state: DeskState, nowMicros: Micros): DeskStep {
 
 /** The alarm of a logger's silence that lasts, or null. */
 export function silenceOf(state: DeskState, logger: string): Alarm | null {
-  return (
-    Object.values(state.alarms).find((alarm) => alarm.kind === 'no data' && alarm.rule === logger && isActive(alarm)) ??
-    null
-  );
+  const id = state.silences[logger];
+  return id === undefined ? null : (state.alarms[id] ?? null);
 }
 
 function raised(state: DeskState, logger: string, newestMicros: Micros, after: Micros, takenMicros: Micros): Alarm {
@@ -76,8 +74,8 @@ function raised(state: DeskState, logger: string, newestMicros: Micros, after: M
 
 /** Counted on the wall clock from when the alarm was raised, so that a restart of the server does not begin anew. */
 function prolonged(alarm: Alarm, nowMicros: Micros, after: Micros): Alarm {
-  const raisedTaken = alarm.steps[0]?.takenMicros ?? nowMicros;
-  if (nowMicros - raisedTaken + after < GRAVE_SILENCE * after) return alarm;
+  const lastedMicros = nowMicros - alarm.steps[0]!.takenMicros + after;
+  if (lastedMicros < GRAVE_SILENCE * after) return alarm;
   const micros = alarm.raisedMicros + (GRAVE_SILENCE - 1) * after;
   return escalate(alarm, { micros, takenMicros: nowMicros, severity: 'IL', value: null, sensor: null });
 }
@@ -87,10 +85,8 @@ function silentAfterMicros(state: DeskState, logger: string): Micros {
   return (defined ?? DEFAULT_SILENT_AFTER_S) * MICROS_PER_SECOND;
 }
 
-/** Nothing where the clock was set back over the hole. */
-function noData(interval: NoData): DeskEffect[] {
-  const empty = interval.toMicros !== null && interval.toMicros <= interval.fromMicros;
-  return empty
-    ? [{ kind: 'no data', noData: { ...interval, toMicros: interval.fromMicros } }]
-    : [{ kind: 'no data', noData: interval }];
+/** Empty, but not turned round, where the logger's clock was set back meanwhile. */
+function noData(state: DeskState, logger: string, fromMicros: Micros, toMicros: Micros | null): DeskEffect {
+  const end = toMicros === null ? null : Math.max(fromMicros, toMicros);
+  return { kind: 'no data', noData: { bridge: state.definition.id, logger, fromMicros, toMicros: end } };
 }

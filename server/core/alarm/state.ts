@@ -21,6 +21,8 @@ export interface DeskState {
   readonly conditions: Readonly<Record<string, readonly SensorCondition[]>>;
   /** By logger; a logger that was never heard is not in it. */
   readonly loggers: Readonly<Record<string, LoggerHeard>>;
+  /** Logger → id of the alarm of its silence, while that lasts. */
+  readonly silences: Readonly<Record<string, string>>;
 }
 
 export interface CurrentPassage {

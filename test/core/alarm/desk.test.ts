@@ -376,6 +376,27 @@ describe('silence of a logger', () => {
     expect(only(next(again, tick, DAWN + 102 * S).state).severity).toBe('IL');
   });
 
+  test('lasts 30 s where the definition does not say, and ends as an empty interval where the clock was set back', () => {
+    const definition = aDefinition({ loggers: [{ id: 'north' }] });
+    const known = openDesk({ definition, newest: { north: DAWN }, nowMicros: DAWN });
+    expect(next(known, tick, DAWN + 30 * S).effects).toEqual([]);
+    const raised = next(known, tick, DAWN + 30 * S + 1).state;
+    const back = next(raised, heard(DAWN - 500 * S), DAWN + 40 * S);
+    expect(back.effects[0]).toEqual({
+      kind: 'no data',
+      noData: { bridge: 'ottermere', logger: 'north', fromMicros: DAWN, toMicros: DAWN },
+    });
+    expect(only(back.state)).toMatchObject({ state: 'returned to normal, unacknowledged' });
+    expect(back.state.silences).toEqual({});
+  });
+
+  test('known only from its stored alarm ends with an interval from silentAfterS before it', () => {
+    const raised = next(next(fresh(), heard(DAWN), DAWN + S).state, tick, DAWN + 12 * S).state;
+    const again = openDesk({ definition: aDefinition(), alarms: alarmsOf(raised), nowMicros: DAWN + 50 * S });
+    const back = next(again, heard(DAWN + 60 * S), DAWN + 61 * S);
+    expect(back.effects[0]).toMatchObject({ noData: { fromMicros: DAWN + S, toMicros: DAWN + 60 * S } });
+  });
+
   test('that was noticed by nobody still leaves its interval', () => {
     const first = next(fresh(), heard(DAWN), DAWN + S).state;
     const hole = next(first, heard(DAWN + 30 * S), DAWN + 2 * S);
@@ -403,6 +424,20 @@ describe('a sensor that cannot be trusted', () => {
     expect(only(whole).state).toBe('returned to normal, unacknowledged');
     const again = run([condition('A1', 'flat', 'began', DAWN + 9 * S)], whole);
     expect(only(again).state).toBe('unacknowledged');
+  });
+
+  test('is not announced again by a replay', () => {
+    const events = [condition('A1', 'flat', 'began', DAWN), condition('A1', 'flat', 'ended', DAWN + S)];
+    const once = run([...events, condition('A1', 'silent', 'began', DAWN + 5 * S)]);
+    expect(run(events, once).alarms).toEqual(once.alarms);
+    const answered = run([...events, acknowledge('ottermere-A1-20261201-051233-2')]);
+    expect(run([condition('A1', 'flat', 'began', DAWN)], fresh(alarmsOf(answered))).alarms).toEqual(answered.alarms);
+    const later = run([condition('A1', 'flat', 'began', DAWN + 9 * S)], answered);
+    expect(alarmsOf(later).map(({ state }) => state)).toEqual(['normal', 'unacknowledged']);
+  });
+
+  test('that the definition does not know has its alarm too', () => {
+    expect(only(run([condition('Z9', 'silent', 'began', DAWN)])).rule).toBe('Z9');
   });
 
   test('is not announced twice when its whole logger is silent', () => {
@@ -444,6 +479,22 @@ describe('the desk', () => {
   test('refuses by assertion what belongs to another bridge', () => {
     const passage = aPassage({ bridge: 'fennick' });
     expect(() => next(fresh(), { kind: 'passage', passage }, DAWN)).toThrow(/fennick/);
+  });
+
+  test('keeps the excursions of the alarms it still holds when it drops others', () => {
+    const closed = Array.from({ length: 501 }, (_, i) =>
+      anAlarm(DAWN - (i + 1) * S, 'AL', { state: 'normal', returnedMicros: DAWN - (i + 0.5) * S }),
+    );
+    const state = run([passed('A1', 'AL', 2.3, DAWN), passed('A2', 'AL', 2.3, DAWN + 1)], fresh(closed));
+    expect(alarmsOf(state)).toHaveLength(501);
+    expect(state.excursions).toEqual({ 'ottermere-ballast-20261201-051233-2': { A1: null, A2: null } });
+  });
+
+  test('forgets what left or was discarded without being known', () => {
+    const state = run([progress('left', DAWN), progress('discarded', DAWN)]);
+    expect(state).toEqual(fresh());
+    const on = run([progress('entered', DAWN), progress('left', DAWN + S)]);
+    expect(run([progress('left', DAWN + S), progress('discarded', DAWN, 'another')], on)).toEqual(on);
   });
 
   test('takes a new definition', () => {
