@@ -215,10 +215,9 @@ function coarser({ channels, energy, stepS }: FitData, upToHz: number): FitData 
 
 /** Candidate sets of poles below `upToHz`, one for each assumed size of the signal subspace; no set twice. */
 function startPoles({ channels, stepS }: FitData, upToHz: number): Pole[][] {
-  const subspace = signalSubspace(channels.map(unitEnergy), stepS);
+  const subspace = signalSubspace(channels.map(unitEnergy), stepS, 2 * MOST_MODES);
   const sets: Pole[][] = [];
-  const largest = Math.min(2 * MOST_MODES, subspace.vectors.rows - 1);
-  for (let rank = 2; rank <= largest; rank++) {
+  for (let rank = 2; rank <= subspace.rank; rank++) {
     const poles = shiftPoles(subspace, rank)
       .map(tamed)
       .filter(({ omega }) => omega < 2 * Math.PI * upToHz)

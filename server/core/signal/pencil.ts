@@ -1,4 +1,4 @@
-import { EigenvalueDecomposition, Matrix, solve } from 'ml-matrix';
+import { EigenvalueDecomposition, Matrix } from 'ml-matrix';
 
 /** A damped oscillation exp(−alpha t) cos(omega t + phase): rates per second, both in rad/s. */
 export interface Pole {
@@ -7,49 +7,62 @@ export interface Pole {
 }
 
 /** Longest run of samples compared with each other; more costs time and finds nothing new. */
-const LONGEST_RUN = 64;
+const LONGEST_RUN = 48;
 
-/** The signal subspace of records that share their poles. */
+/** The signal subspace of records that share their poles, as far as shift invariance asks. */
 export interface Subspace {
-  /** Columns by falling energy. */
-  vectors: Matrix;
+  /** How many vectors there are at most. */
+  rank: number;
+  /** Product of the vectors without their last and without their first element: rank × rank. */
+  shifted: Matrix;
+  /** Last element of each vector. */
+  last: Float64Array;
   stepS: number;
 }
 
 /**
  * Signal subspace of all channels together: eigenvectors of the summed covariance of their Hankel matrices.
  *
- * @param channels records of one length
+ * @param channels records of one length, at least 4 samples
  * @param stepS time between samples
+ * @param rank vectors wanted; fewer come where the records are short
  */
-export function signalSubspace(channels: readonly Float64Array[], stepS: number): Subspace {
-  const n = channels[0]?.length ?? 0;
-  const run = Math.min(LONGEST_RUN, Math.floor(n / 2));
+export function signalSubspace(channels: readonly Float64Array[], stepS: number, rank: number): Subspace {
+  const run = Math.min(LONGEST_RUN, Math.floor(channels[0]!.length / 2));
   const covariance = Matrix.zeros(run, run);
   for (const y of channels) addHankelCovariance(covariance, y, run);
-  const decomposition = new EigenvalueDecomposition(covariance, { assumeSymmetric: true });
-  // ml-matrix gives rising eigenvalues
-  const order = Array.from({ length: run }, (_, i) => run - 1 - i);
-  const all = Array.from({ length: run }, (_, i) => i);
-  return { vectors: decomposition.eigenvectorMatrix.selection(all, order), stepS };
+  const { eigenvectorMatrix } = new EigenvalueDecomposition(covariance, { assumeSymmetric: true });
+  const count = Math.min(rank, run - 1);
+  // ml-matrix gives rising eigenvalues: the strongest vectors stand last
+  const vectors = Array.from({ length: count }, (_, k) => Float64Array.from(eigenvectorMatrix.getColumn(run - 1 - k)));
+  const shifted = Matrix.zeros(count, count);
+  for (let i = 0; i < count; i++) {
+    for (let j = 0; j < count; j++) {
+      let product = 0;
+      for (let m = 0; m + 1 < run; m++) product += vectors[i]![m]! * vectors[j]![m + 1]!;
+      shifted.set(i, j, product);
+    }
+  }
+  return { rank: count, shifted, last: Float64Array.from(vectors, (v) => v[run - 1]!), stepS };
 }
 
 /**
  * Oscillating poles of the first `rank` subspace vectors, by their invariance under a shift of one sample
  * (Hua and Sarkar 1990, matrix pencil; Roy and Kailath 1989, ESPRIT). Exact for a noiseless sum of `rank`
  * exponentials; real poles (offset, drift) are left out.
+ *
+ * The vectors are orthonormal, so the normal matrix of the shift equation is 1 − l lᵀ with l their last elements, and
+ * its inverse is 1 + l lᵀ / (1 − lᵀl).
  */
-export function shiftPoles({ vectors, stepS }: Subspace, rank: number): Pole[] {
-  const rows = vectors.rows;
-  const upper = vectors.subMatrix(0, rows - 2, 0, rank - 1);
-  const lower = vectors.subMatrix(1, rows - 1, 0, rank - 1);
-  const transposed = upper.transpose();
-  const gram = transposed.mmul(upper);
-  let shift: Matrix;
-  try {
-    shift = solve(gram, transposed.mmul(lower));
-  } catch {
-    return []; // singular: the subspace is smaller than the rank asked for
+export function shiftPoles({ shifted, last, stepS }: Subspace, rank: number): Pole[] {
+  let left = 1;
+  for (let i = 0; i < rank; i++) left -= last[i]! * last[i]!;
+  if (left < 1e-9) return [];
+  const shift = shifted.subMatrix(0, rank - 1, 0, rank - 1);
+  for (let j = 0; j < rank; j++) {
+    let product = 0;
+    for (let i = 0; i < rank; i++) product += last[i]! * shifted.get(i, j);
+    for (let i = 0; i < rank; i++) shift.set(i, j, shift.get(i, j) + (last[i]! * product) / left);
   }
   const { realEigenvalues, imaginaryEigenvalues } = new EigenvalueDecomposition(shift);
   const poles: Pole[] = [];
