@@ -29,6 +29,7 @@ import { openArchive, placeOf, type Archive, type StoredDefinition } from './arc
 import { openDuckDb, type Ask, type Database } from './database.ts';
 import { daysOf } from './days.ts';
 import { loadDefinitions, type Definitions } from './definitions.ts';
+import { createLedger, type Entry, type Ledger } from './ledger.ts';
 import { openSound } from './opening.ts';
 import { alikeOf, hasPassage, insertPassage, lastOf, neighboursOf, pageOf, passageOf } from './passages.ts';
 import { dueWaveforms, thin, type RetentionRules, type Thinned } from './retention.ts';
@@ -128,22 +129,30 @@ export async function openHistory(options: HistoryOptions): Promise<History> {
   const files = createWrites({ limit: maxPending, report, ...(pause === undefined ? {} : { pause }) });
   const write = <T>(work: (ask: Ask) => Promise<T>): Promise<T> => writes.run(() => database.transaction(work));
   const definitions = await loadDefinitions(database.ask, write);
-  if (toFill) await fillFromArchive(archive, definitions, write, report);
-  return assemble({ ...options, database, archive, definitions, write, writes, files });
+  const ledger = createLedger(archiveFolder);
+  if (toFill) await fillFromArchive({ archive, ledger, definitions, write }, report);
+  return assemble({ clock, database, archive, ledger, definitions, write, writes, files });
 }
 
 interface Parts {
   clock: () => Micros;
   database: Database;
   archive: Archive;
+  ledger: Ledger;
   definitions: Definitions;
   write: <T>(work: (ask: Ask) => Promise<T>) => Promise<T>;
   writes: ReturnType<typeof createWrites>;
   files: ReturnType<typeof createWrites>;
 }
 
-function assemble({ clock, database, archive, definitions, write, writes, files }: Parts): History {
+function assemble({ clock, database, archive, ledger, definitions, write, writes, files }: Parts): History {
   const { ask } = database;
+  /** Written down in the ledger, then done in the database; both in their turn and until they succeed. */
+  const noted = <T>(entries: Entry[], work: (ask: Ask) => Promise<T>): Promise<T> =>
+    writes.run(async () => {
+      await ledger.append(entries);
+      return database.transaction(work);
+    });
   const spectra = createSpectra();
   let closing: Promise<void> | null = null;
 
@@ -165,7 +174,7 @@ function assemble({ clock, database, archive, definitions, write, writes, files 
       if (!(await hasPassage(ask, passage.id))) {
         await files.run(() => archive.write({ passage, definition }, channels));
       }
-      return write(async (ask) => {
+      return noted(entriesOf(alarms), async (ask) => {
         const inserted = await insertPassage(
           ask,
           passage,
@@ -175,8 +184,8 @@ function assemble({ clock, database, archive, definitions, write, writes, files 
         return { already: !inserted };
       });
     },
-    saveAlarms: (alarms) => write((ask) => upsertAlarms(ask, alarms)),
-    saveNoData: (noData) => write((ask) => saveNoDataOf(ask, noData)),
+    saveAlarms: (alarms) => noted(entriesOf(alarms), (ask) => upsertAlarms(ask, alarms)),
+    saveNoData: (noData) => noted([{ noData }], (ask) => saveNoDataOf(ask, noData)),
     pendingWrites: () => writes.pending() + files.pending(),
 
     passage: (id) => passageOf(ask, id),
@@ -231,30 +240,41 @@ function assemble({ clock, database, archive, definitions, write, writes, files 
   };
 }
 
-/** Sheets a transaction when a database is filled. */
+const entriesOf = (alarms: readonly Alarm[]): Entry[] => alarms.map((alarm) => ({ alarm }));
+
+/** Sheets or entries a transaction when a database is filled. */
 const FILL_AT_ONCE = 200;
 
-/** Definitions and passages as the archive's files tell them. Alarms are not in it. */
+/** Definitions and passages as the archive's files tell them, alarms and times without data as the ledger does. */
 async function fillFromArchive(
-  archive: Archive,
-  definitions: Definitions,
-  write: Parts['write'],
+  { archive, ledger, definitions, write }: Pick<Parts, 'archive' | 'ledger' | 'definitions' | 'write'>,
   report: (complaint: Complaint) => void,
 ): Promise<void> {
-  let held: { passage: Passage; hasWaveform: boolean }[] = [];
-  const flush = async (): Promise<void> => {
-    const batch = held;
-    held = [];
-    await write(async (ask) => {
-      for (const { passage, hasWaveform } of batch) await insertPassage(ask, passage, hasWaveform);
-    });
-  };
   const damaged = (path: string, reason: string): void =>
     report({ code: 'STORE_CORRUPT', where: path, detail: reason });
-  for await (const { passage, definition, hasWaveform } of archive.sheets(damaged)) {
-    await definitions.restore(definition);
-    if (held.push({ passage, hasWaveform }) >= FILL_AT_ONCE) await flush();
+  for await (const sheets of batches(archive.sheets(damaged))) {
+    for (const { definition } of sheets) await definitions.restore(definition);
+    await write(async (ask) => {
+      for (const { passage, hasWaveform } of sheets) await insertPassage(ask, passage, hasWaveform);
+    });
   }
-  await flush();
+  for await (const entries of batches(ledger.entries(damaged))) {
+    await write(async (ask) => {
+      for (const entry of entries) {
+        if ('alarm' in entry) await upsertAlarms(ask, [entry.alarm]);
+        else await saveNoDataOf(ask, entry.noData);
+      }
+    });
+  }
   await write(markFilled);
+}
+
+async function* batches<T>(items: AsyncIterable<T>): AsyncGenerator<T[]> {
+  let batch: T[] = [];
+  for await (const item of items) {
+    if (batch.push(item) < FILL_AT_ONCE) continue;
+    yield batch;
+    batch = [];
+  }
+  if (batch.length > 0) yield batch;
 }

@@ -1,5 +1,5 @@
 import { existsSync } from 'node:fs';
-import { mkdtemp, readdir, readFile, rm, writeFile } from 'node:fs/promises';
+import { appendFile, mkdir, mkdtemp, readdir, readFile, rm, writeFile } from 'node:fs/promises';
 import { tmpdir } from 'node:os';
 import { join } from 'node:path';
 import { afterEach, beforeEach, describe, expect, test } from 'vitest';
@@ -372,13 +372,25 @@ describe('a database that cannot be used', () => {
     await store.saveDefinition(aDefinition({ name: 'Renamed' }), `${YAML}#`, DAWN);
     const second = await commit(store, { onMicros: DAWN + HOUR, version: 2 });
     await store.applyRetention({ keepAllDays: 30, keepHighestPerDay: 0 }, DAWN);
+    const alarm = anAlarm(DAWN, 'AL', { passage: whole.id });
+    const answered = { ...alarm, state: 'acknowledged' as const, steps: [...alarm.steps, ...alarm.steps] };
+    await store.saveAlarms([alarm]);
+    await store.saveAlarms([answered]);
+    const hole = { bridge: 'ottermere', logger: 'north', fromMicros: DAWN, toMicros: DAWN + HOUR };
+    await store.saveNoData({ ...hole, toMicros: null });
+    await store.saveNoData(hole);
     await store.close();
+    await appendFile(join(folder, 'archive/ottermere/ledger.jsonl'), '{"alarm":{"id":"cut sho');
     const garbage = Buffer.from('this is no database'.repeat(1000));
     await writeFile(join(folder, 'history.duckdb'), garbage);
     await writeFile(join(folder, 'archive/ottermere/2026/12/broken.parquet'), 'PAR1');
 
     const again = await history();
-    expect(complaints.map(({ code }) => code)).toEqual(['STORE_CORRUPT', 'STORE_CORRUPT']);
+    expect(complaints.map(({ code }) => code)).toEqual(['STORE_CORRUPT', 'STORE_CORRUPT', 'STORE_CORRUPT']);
+    expect(complaints[2]?.where).toContain('ledger.jsonl');
+    expect(await again.openAlarms()).toEqual([answered]);
+    expect(await again.noData('ottermere', 0, DAWN + DAY)).toEqual([hole]);
+    await again.saveAlarms([anAlarm(DAWN + HOUR)]);
     expect(complaints[1]?.where).toContain('broken.parquet');
     const aside = (await readdir(folder)).find((name) => name.includes('damaged-20261202-051233-2'));
     expect(await readFile(join(folder, aside ?? ''))).toEqual(garbage);
@@ -423,6 +435,24 @@ describe('a database that cannot be used', () => {
     await rm(join(folder, 'history.duckdb'));
     expect(await (await history()).passage(passage.id)).toEqual({ passage, hasWaveform: true });
     expect(complaints).toEqual([]);
+  });
+});
+
+describe('a disk that refuses', () => {
+  test('is tried again until it takes the wave form, and the commit waits for it', async () => {
+    await mkdir(join(folder, 'archive'));
+    await writeFile(join(folder, 'archive/ottermere'), 'in the way');
+    const pauses: number[] = [];
+    const store = await begun({
+      pause: async (ms) => {
+        expect((await store.passages({})).total).toBe(0);
+        if (pauses.push(ms) === 3) await rm(join(folder, 'archive/ottermere'));
+      },
+    });
+    const passage = await commit(store);
+    expect(pauses).toEqual([100, 200, 400]);
+    expect(complaints.map(({ code }) => code)).toEqual(['STORE_WRITE', 'STORE_WRITE', 'STORE_WRITE']);
+    expect(await store.waveform(passage.id)).not.toBeNull();
   });
 });
 

@@ -78,6 +78,10 @@ export const ERRORS = {
     what: 'no space is left for the journal or the history',
     remedy: 'free space; blocks are not acknowledged meanwhile, so the broker keeps them',
   },
+  JOURNAL_WRITE: {
+    what: 'the journal could not be written',
+    remedy: 'check the disk; blocks are not acknowledged meanwhile, so the broker keeps them',
+  },
   JOURNAL_TAIL: {
     what: "the journal's last record was cut by a crash",
     remedy: 'nothing: it was not acknowledged and comes again',
@@ -92,7 +96,7 @@ export const ERRORS = {
   },
   STORE_CORRUPT: {
     what: 'the history database cannot be opened',
-    remedy: 'it is set aside unchanged and a new one begun; restore from backup or from the archive',
+    remedy: 'it is set aside unchanged and a new one is filled from the archive; check the disk',
   },
   STORE_LOCKED: { what: 'another process has the history open', remedy: 'stop the other server on this data folder' },
   STORE_NEWER: {
@@ -100,6 +104,18 @@ export const ERRORS = {
     remedy: 'start the newer version, or choose another data folder',
   },
   STORE_WRITE: { what: 'the history could not be written', remedy: 'check the disk; writing is tried again' },
+  WORKER_FAILED: {
+    what: 'a worker that runs pipelines stopped',
+    remedy: 'nothing: it is started again from its snapshot and the journal; report it if it comes back',
+  },
+  SETTINGS_INVALID: {
+    what: 'a setting does not meet its expectation',
+    remedy: 'correct the setting named; see --help',
+  },
+  PORT_REFUSED: {
+    what: 'the port or address cannot be listened on',
+    remedy: 'choose an address of this machine and a port above 1023',
+  },
   SNAPSHOT_UNUSABLE: {
     what: "the pipeline's snapshot is of another version or damaged",
     remedy: 'nothing: the journal is replayed from its beginning',
@@ -114,6 +130,11 @@ export const ERRORS = {
   VIEWER_SLOW: {
     what: 'the viewer could not keep up and was dropped',
     remedy: 'it connects again by itself; choose fewer channels',
+  },
+  REQUESTS_TOO_MANY: { what: 'requests come faster than they are taken', remedy: 'wait a minute' },
+  SERVER_FAULT: {
+    what: 'the server made a mistake',
+    remedy: 'see its log and report it; nothing that was stored is lost',
   },
   VIEWERS_TOO_MANY: { what: 'the limit of viewers is reached', remedy: 'close other pages or raise the limit' },
   ALARM_STATE: { what: 'the alarm is not in a state that allows this', remedy: 'load the alarm again' },
