@@ -1,3 +1,4 @@
+import { untrack } from 'svelte';
 import type { RequestFailed } from './api.ts';
 import { Asked } from './state.svelte.ts';
 
@@ -10,18 +11,25 @@ export interface Loaded<T> {
   again(): void;
 }
 
+type Request<T> = (signal: AbortSignal) => Promise<T>;
+
+interface Manner {
+  /** Whether the old answer stays while the next request runs; false where it would be mistaken for the new one. */
+  keep?: boolean;
+  /** Reads whatever else should make it ask again. */
+  when?: () => unknown;
+}
+
 /**
  * Asks whenever what `ask` reads changes.
  *
  * @param ask reads reactive values and returns the request, or null where there is nothing to ask for
- * @param keep whether the old answer stays while the next request runs; false where it would be mistaken for the new one
  */
-export function loaded<T>(ask: () => ((signal: AbortSignal) => Promise<T>) | null, keep = true): Loaded<T> {
+export function loaded<T>(ask: () => Request<T> | null, { keep = true, when }: Manner = {}): Loaded<T> {
   const asked = new Asked<T>();
-  let attempt = $state(0);
 
   $effect(() => {
-    void attempt;
+    when?.();
     const request = ask();
     if (!request || !keep) asked.clear();
     if (request) void asked.ask(request);
@@ -38,7 +46,8 @@ export function loaded<T>(ask: () => ((signal: AbortSignal) => Promise<T>) | nul
       return asked.waiting;
     },
     again() {
-      attempt++;
+      const request = untrack(ask);
+      if (request) void asked.ask(request);
     },
   };
 }

@@ -2,6 +2,7 @@ import type { Alarm, AlarmState, AlarmStep } from '#core/contract/alarm.ts';
 import type { BridgeDefinition } from '#core/contract/bridge.ts';
 import type { Levels } from '#core/contract/severity.ts';
 import { fixed } from '../format.ts';
+import { clockTenthsIn } from '../time.ts';
 
 /** The words of an alarm: what it is about, its value against its limit, its steps. */
 
@@ -73,4 +74,12 @@ export function stepWords(step: AlarmStep): string {
 export function delayWords(step: AlarmStep): string {
   const seconds = (step.takenMicros - step.micros) / 1e6;
   return seconds >= 0.05 && seconds < 3600 ? `taken ${fixed(seconds, seconds < 10 ? 1 : 0)} s later` : '';
+}
+
+/** An alarm in one line, for a print: `Alarm IL raised 06:46:13.4 UTC, acknowledged by M. Orrell: told desk 2` */
+export function alarmLine(alarm: Alarm): string {
+  const answer = alarm.acknowledged
+    ? `acknowledged by ${alarm.acknowledged.by}${alarm.acknowledged.note ? `: ${alarm.acknowledged.note}` : ''}`
+    : alarm.state;
+  return `Alarm ${alarm.severity} raised ${clockTenthsIn(alarm.raisedMicros)} UTC, ${answer}`;
 }

@@ -1,4 +1,4 @@
-import { isDeckAcceleration, type BridgeDefinition, type Limit, type Sensor } from '#core/contract/bridge.ts';
+import { isDeckAcceleration, spanAt, type BridgeDefinition, type Limit, type Sensor } from '#core/contract/bridge.ts';
 import type { Passage } from '#core/contract/passage.ts';
 import { severityOf } from '#core/contract/severity.ts';
 import type { Decay } from './decay.ts';
@@ -174,6 +174,25 @@ export function spectrumSpec(
     ],
     uprights: [...(f1Hz === null ? [] : [{ at: f1Hz, label: `f1 ${f1Hz.toFixed(2)}` }]), ...known],
   };
+}
+
+/** Frequencies that the definition gives for a sensor's span, for the lines of a spectrum; each value once. */
+export function knownFrequencies(
+  definition: BridgeDefinition,
+  sensorId: string,
+  upToHz: number,
+): { at: number; label: string }[] {
+  const sensor = definition.sensors.find(({ id }) => id === sensorId);
+  const frequencies = sensor ? spanAt(definition, sensor.alongM).frequenciesHz : undefined;
+  const names = [
+    ['torsion', frequencies?.torsion],
+    ['f2', frequencies?.f2],
+    ['f3', frequencies?.f3],
+  ] as const;
+  return names.flatMap(([label, at], i) => {
+    if (at === undefined || at > upToHz || names.slice(0, i).some(([, earlier]) => earlier === at)) return [];
+    return [{ at, label: `${at.toFixed(1)} ${label}` }];
+  });
 }
 
 /** Two passages of one channel, aligned at the first axle, on one scale: this one above, the other below. */

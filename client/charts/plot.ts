@@ -2,7 +2,7 @@ import uPlot from 'uplot';
 import type { Severity } from '#core/contract/severity.ts';
 import { onThemeChange, readInk, type Ink } from './ink.ts';
 import { DASHES, drawLozenge, type LimitLine } from './limit-line.ts';
-import { logTicks, ticks } from './scale.ts';
+import { labelRows, logTicks, ticks } from './scale.ts';
 
 /** A plot with one horizontal axis. Values are plain arrays with `null` where there is no value. */
 export interface PlotSpec {
@@ -144,6 +144,8 @@ const laneOffset = ({ y }: PlotSpec, lane: number): number => lane * (y.to - y.f
 const lanesOf = ({ y }: PlotSpec): number[] => Array.from({ length: y.lanes ?? 1 }, (_, lane) => lane);
 
 const RIGHT_OF_LIMITS = 66;
+// eslint-disable-next-line @typescript-eslint/no-unsafe-enum-assignment -- uPlot's const enum cannot be read by erasable syntax
+const LOGARITHMIC: uPlot.Scale.Distr.Logarithmic = 3;
 
 function build(host: HTMLElement, spec: () => PlotSpec, ink: () => Ink, height: number, report: PlotReport): uPlot {
   const type = `12px ${ink().narrow}`;
@@ -164,7 +166,7 @@ function build(host: HTMLElement, spec: () => PlotSpec, ink: () => Ink, height: 
       x: { time: false, range: (_u, min, max) => [min, max] },
       y: {
         range: () => [spec().y.from - laneOffset(spec(), lanesOf(spec()).length - 1), spec().y.to],
-        ...(spec().y.log ? { distr: 3 as const, log: 10 as const } : {}),
+        ...(spec().y.log ? { distr: LOGARITHMIC, log: 10 as const } : {}),
       },
     },
     axes: [
@@ -302,14 +304,19 @@ function drawOver(u: uPlot, spec: PlotSpec, ink: Ink, ratio: number): void {
     write(`${severity} ${value.toFixed(2)}`, [box.right + 25, at + 4], ink.ink2, 'left');
   });
 
-  for (const { at, label } of spec.uprights ?? []) {
+  const uprights = (spec.uprights ?? []).toSorted((a, b) => a.at - b.at);
+  context.font = `500 12px ${ink.narrow}`;
+  const rows = labelRows(
+    uprights.map(({ at, label }) => ({ at: x(at), width: context.measureText(label).width + 12 })),
+  );
+  for (const [i, { at, label }] of uprights.entries()) {
     const px = x(at);
     if (px < box.left || px > box.right) continue;
     context.strokeStyle = ink.ink;
     context.lineWidth = 0.7;
     context.setLineDash([...DASHES.chain]);
     line(context, px, box.top - 4, px, box.bottom);
-    write(label, [px + 5, box.top + 6], ink.ink, 'left', 500);
+    write(label, [px + 5, box.top + 6 + 14 * rows[i]!], ink.ink, 'left', 500);
   }
 
   context.setLineDash([]);

@@ -8,12 +8,17 @@ import {
 import type { Passage } from '#core/contract/passage.ts';
 import type { Micros } from '#core/contract/time.ts';
 import { linear, type Scale } from './scale.ts';
+import { layoutSection, LEAST_WIDTH, type SectionLayout } from './section-layout.ts';
 import type { Wave } from './wave.ts';
 
 /** Geometry of a record section: position along the bridge to the right, time downwards. */
 export interface RecordLayout {
   width: number;
+  /** Of the field of traces, without the section above it. */
   height: number;
+  /** The bridge above the field, to the same scale and axis, and how high it stands. */
+  section: SectionLayout;
+  head: number;
   /** Metres along the bridge at the left and right edge. */
   fromM: number;
   toM: number;
@@ -41,15 +46,53 @@ export function layoutRecord(
   const pixelsPerMetre = (width - before - after) / length;
   const fromM = -before / pixelsPerMetre;
   const toM = length + after / pixelsPerMetre;
+  const x = linear(fromM, toM, 0, width);
+  const section = sectionAbove(bridge, { width, pixelsPerMetre, fromM, toM, x });
   return {
     width,
     height,
+    section,
+    head: section.height,
     fromM,
     toM,
     pixelsPerMetre,
     left: narrow ? 30 : 44,
-    x: linear(fromM, toM, 0, width),
+    x,
     y: linear(seconds.from, seconds.to, 0, height),
+  };
+}
+
+/** Room above the rail for wheels, and below the soffit for balloons, px. */
+const LEAST_WHEEL_ROOM = 16;
+const BALLOON_DROP = 27;
+
+/** The long section at the record's own scale, without water, dimension and chainage. */
+function sectionAbove(
+  bridge: BridgeDefinition,
+  {
+    width,
+    pixelsPerMetre: pxPerM,
+    fromM,
+    toM,
+    x,
+  }: Pick<RecordLayout, 'width' | 'pixelsPerMetre' | 'fromM' | 'toM' | 'x'>,
+): SectionLayout {
+  const usual = layoutSection(bridge, LEAST_WIDTH);
+  const top = Math.max(LEAST_WHEEL_ROOM, 1.15 * pxPerM);
+  const y = (belowM: number): number => top + belowM * pxPerM;
+  const balloonY = y(usual.soffitM) + Math.max(BALLOON_DROP, 0.6 * pxPerM + 12);
+  return {
+    ...usual,
+    pxPerM,
+    width,
+    x,
+    y,
+    fromM,
+    toM,
+    balloonY,
+    floor: balloonY + 2,
+    height: balloonY + 16,
+    fine: pxPerM >= 12,
   };
 }
 
@@ -125,8 +168,24 @@ export function axleLines(bridge: BridgeDefinition, passage: Passage, fromM: num
   }));
 }
 
-/** Where the axles stand at a time, metres along the bridge. */
-export function axlePositions(bridge: BridgeDefinition, passage: Passage, micros: Micros): number[] {
+/** Wheels of a bogie stand closer than this. */
+const BOGIE_M = 3.4;
+
+/** Where the axles stand at a time, metres along the bridge, and which two neighbours share a bogie. */
+export function axlesAt(
+  bridge: BridgeDefinition,
+  passage: Passage,
+  micros: Micros,
+): { at: number[]; bogies: [number, number][] } {
+  const at = axlePositions(bridge, passage, micros);
+  const bogies: [number, number][] = [];
+  for (let i = 1; i < at.length; i++) {
+    if (Math.abs(at[i]! - at[i - 1]!) < BOGIE_M) bogies.push([at[i - 1]!, at[i]!]);
+  }
+  return { at, bogies };
+}
+
+function axlePositions(bridge: BridgeDefinition, passage: Passage, micros: Micros): number[] {
   const speed = signedSpeed(passage);
   if (speed === null) return [];
   const base = axleBaseM(bridge);

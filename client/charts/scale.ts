@@ -62,3 +62,25 @@ export function logTicks(from: number, to: number, room = 8): number[] {
   }
   return found;
 }
+
+/**
+ * The greatest of 1, 2, 5 times a power of ten that is not above a value, for scale bars.
+ *
+ * @example roundDown(4.2) // 2
+ */
+export function roundDown(value: number): number {
+  const power = 10 ** Math.floor(Math.log10(value));
+  const factor = [5, 2, 1].find((candidate) => candidate * power <= value * 1.0000001) ?? 1;
+  return Number((factor * power).toPrecision(3));
+}
+
+/** Rows for labels along an axis, so that none runs into the one before it; they start at rising places. */
+export function labelRows(labels: readonly { at: number; width: number }[]): number[] {
+  const ends: number[] = [];
+  return labels.map(({ at, width }) => {
+    const free = ends.findIndex((end) => end < at);
+    const row = free < 0 ? ends.length : free;
+    ends[row] = at + width;
+    return row;
+  });
+}
