@@ -197,3 +197,17 @@ export function isDeckAcceleration(sensor: Sensor): boolean {
 export function countsAxles(sensor: Sensor): boolean {
   return sensor.quantity === 'axle detector' || sensor.countsAxles === true;
 }
+
+/** Axle sensors this far apart across the deck belong to different tracks, m; tracks lie 3.5 m apart and more. */
+const TRACK_APART_M = 1.2;
+
+/** The axle sensors of each track, in order of position; sensors of one track lie about the same line. */
+export function axleTracks(bridge: Pick<BridgeDefinition, 'sensors'>): Sensor[][] {
+  const tracks: Sensor[][] = [];
+  for (const sensor of bridge.sensors.filter(countsAxles).sort((a, b) => a.alongM - b.alongM)) {
+    const own = tracks.find(([first]) => Math.abs((first!.acrossM ?? 0) - (sensor.acrossM ?? 0)) < TRACK_APART_M);
+    if (own === undefined) tracks.push([sensor]);
+    else own.push(sensor);
+  }
+  return tracks;
+}

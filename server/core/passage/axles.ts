@@ -1,4 +1,4 @@
-import { bridgeLengthM, type BridgeDefinition } from '../contract/bridge.ts';
+import { axleTracks, bridgeLengthM, type BridgeDefinition, type Sensor } from '../contract/bridge.ts';
 import { measured, notMeasurable, type Measured } from '../contract/measure.ts';
 import type { Axle, Direction } from '../contract/passage.ts';
 import { MICROS_PER_SECOND, type Micros } from '../contract/time.ts';
@@ -28,31 +28,70 @@ export interface Pulse {
 /** Standing uncertainty of a sensor's place along the bridge, m: tape and eye (common practice). */
 const PLACE_ERROR_M = 0.02;
 
+/** Reads the axle sensors of each track; two tracks that both saw axles are two trains at once, and that is said. */
 export function readAxles(bridge: BridgeDefinition, record: readonly RecordChannel[]): AxleReading {
-  const sensors = record
-    .filter((channel) => channel.axles && !channel.flags.includes('flat'))
+  const seen = axleTracks(bridge)
+    .map((track) => readTrack(bridge, placesOf(track, record)))
+    .filter((reading) => reading !== null);
+  const [only, other] = seen;
+  if (only === undefined) return nothingSeen(record.some(({ axles }) => axles));
+  return other === undefined ? only : together(seen);
+}
+
+function placesOf(track: readonly Sensor[], record: readonly RecordChannel[]): Place[] {
+  return record
+    .filter((channel) => track.some(({ id }) => id === channel.sensor.id) && !channel.flags.includes('flat'))
     .map((channel) => ({ alongM: channel.sensor.alongM, id: channel.sensor.id, pulses: axlePulses(channel) }))
     .filter(({ pulses }) => pulses.length > 0)
     .sort((a, b) => a.alongM - b.alongM);
-  const all = sensors.flatMap(({ pulses }) => pulses.map(({ micros }) => micros));
-  const nothing: AxleReading = {
-    count: notMeasurable(
-      record.some(({ axles }) => axles) ? 'the axle sensors saw nothing' : 'the bridge has no axle sensor',
-    ),
+}
+
+function readTrack(bridge: BridgeDefinition, places: readonly Place[]): AxleReading | null {
+  const first = places[0];
+  const last = places.at(-1);
+  if (first === undefined || last === undefined) return null;
+  const all = places.flatMap(({ pulses }) => pulses.map(({ micros }) => micros));
+  const nothing = { ...nothingSeen(true), firstPulse: Math.min(...all), lastPulse: Math.max(...all) };
+  if (last.alongM - first.alongM < 1) return oneSensor(nothing, first.pulses, first.id);
+  return pairSensors(nothing, bridge, first, last);
+}
+
+function nothingSeen(sensors: boolean): AxleReading {
+  return {
+    count: notMeasurable(sensors ? 'the axle sensors saw nothing' : 'the bridge has no axle sensor'),
     axles: [],
     speedMs: notMeasurable('no two axle sensors saw the train'),
     direction: null,
     onMicros: null,
     offMicros: null,
-    firstPulse: all.length > 0 ? Math.min(...all) : null,
-    lastPulse: all.length > 0 ? Math.max(...all) : null,
+    firstPulse: null,
+    lastPulse: null,
     notes: [],
   };
-  const first = sensors[0];
-  const last = sensors.at(-1);
-  if (first === undefined || last === undefined) return nothing;
-  if (last.alongM - first.alongM < 1) return oneSensor(nothing, first.pulses, first.id);
-  return pairSensors(nothing, bridge, first, last);
+}
+
+/** Trains on several tracks at once: one occupation of the bridge, from the first axle to the last. */
+function together(readings: readonly AxleReading[]): AxleReading {
+  const times = (pick: (reading: AxleReading) => Micros | null): Micros[] =>
+    readings.map(pick).filter((micros) => micros !== null);
+  const whole = readings.every(({ onMicros, offMicros }) => onMicros !== null && offMicros !== null);
+  const words = readings.map(({ count, direction, speedMs }) => {
+    const speed = speedMs.value === null ? 'at unknown speed' : `at ${speedMs.value.toFixed(1)} m/s`;
+    return `${count.value ?? 'some'} axles ${direction === null ? '' : `towards ${direction} chainage `}${speed}`;
+  });
+  const reason = `${readings.length} trains at once: ${words.join('; ')}`;
+  const axles = readings.reduce((sum, { count }) => sum + (count.value ?? 0), 0);
+  return {
+    count: measured(axles, null, 'usable', reason),
+    axles: readings.flatMap((reading) => reading.axles).sort((a, b) => a.micros - b.micros),
+    speedMs: notMeasurable(reason),
+    direction: null,
+    onMicros: whole ? Math.min(...times(({ onMicros }) => onMicros)) : null,
+    offMicros: whole ? Math.max(...times(({ offMicros }) => offMicros)) : null,
+    firstPulse: Math.min(...times(({ firstPulse }) => firstPulse)),
+    lastPulse: Math.max(...times(({ lastPulse }) => lastPulse)),
+    notes: [reason, ...readings.flatMap(({ notes }) => notes)],
+  };
 }
 
 function oneSensor(nothing: AxleReading, pulses: Pulse[], id: string): AxleReading {
@@ -192,7 +231,8 @@ const SIGMAS = 8;
 export function axlePulses(channel: RecordChannel): Pulse[] {
   const { x } = channel;
   const centre = median(x);
-  const noise = channel.noise ?? 1.4826 * mad(x);
+  // Most of a passage is between axles, and the quiet part may hold the first of a creeping train: the lesser is true.
+  const noise = Math.min(channel.noise ?? Infinity, 1.4826 * mad(x));
   const highest = x.reduce((most, value) => Math.max(most, value), 0) - centre;
   const threshold = Math.max(SIGMAS * noise, HEIGHT_SHARE * highest);
   if (highest <= threshold || highest <= 0) return [];

@@ -60,8 +60,8 @@ export function createDetector(): Detector {
 export interface DetectorSetting {
   bridge: string;
   freeSeconds: number;
-  /** Sensors at which each axle leaves a pulse. */
-  axleSensors: readonly string[];
+  /** Ids of the sensors at which each axle leaves a pulse, track by track. */
+  axleTracks: readonly (readonly string[])[];
 }
 
 /** Takes the next tick of the bridge; ticks come in rising order, with holes where there was no data at all. */
@@ -161,26 +161,31 @@ function looksLikeTrain(candidate: Candidate, setting: DetectorSetting): boolean
   return (
     candidate.longestRow >= RULE.activeTicks ||
     speaking >= 2 ||
-    (speaking === 1 && (candidate.pulseCount >= 4 || setting.axleSensors.length === 1))
+    (speaking === 1 && (candidate.pulseCount >= 4 || setting.axleTracks.flat().length === 1))
   );
 }
 
 /** How long quiet must last before the passage counts as over: longer while the axle count says that a train stands there. */
 function standingSeconds(detector: Detector, setting: DetectorSetting, candidate: Candidate): number {
-  if (!candidate.entered || candidate.pulseCount === 0) return RULE.quietSeconds;
-  const counts = setting.axleSensors.map((sensor) => candidate.pulses[sensor] ?? 0);
-  const most = Math.max(...counts);
-  if (counts.every((count) => count === most)) return RULE.quietSeconds;
-  const silent = setting.axleSensors.filter((sensor) => (candidate.pulses[sensor] ?? 0) === 0);
-  if (silent.length === 0) return balanced(counts) ? RULE.quietSeconds : RULE.standSeconds;
-  return silent.every((sensor) => detector.proven[sensor] === true) ? RULE.standSeconds : RULE.standUnprovenSeconds;
+  if (candidate.pulseCount === 0) return RULE.quietSeconds;
+  if (!candidate.entered) return RULE.pulseWaitSeconds;
+  return Math.max(...setting.axleTracks.map((track) => trackStanding(detector, candidate, track)));
 }
 
-/** One pulse missed by one sensor does not keep a bridge occupied. */
+/** The same for one track: as many axles must leave as have come. */
+function trackStanding(detector: Detector, candidate: Candidate, track: readonly string[]): number {
+  const counts = track.map((sensor) => candidate.pulses[sensor] ?? 0);
+  if (Math.max(...counts) === 0 || balanced(counts)) return RULE.quietSeconds;
+  const silent = track.filter((sensor) => (candidate.pulses[sensor] ?? 0) === 0);
+  const believed = silent.every((sensor) => detector.proven[sensor] === true);
+  return believed ? RULE.standSeconds : RULE.standUnprovenSeconds;
+}
+
+/** A pulse missed now and then does not keep a bridge occupied. */
 function balanced(counts: readonly number[]): boolean {
   const most = Math.max(...counts);
   const least = Math.min(...counts);
-  return most - least <= Math.max(1, Math.floor(most / 16));
+  return least > 0 && most - least <= Math.max(1, Math.floor(most / 16));
 }
 
 /** The train has gone: a passage rings on until its free part ends; what was no train is forgotten. */

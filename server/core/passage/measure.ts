@@ -83,7 +83,7 @@ type FoundPhases = Omit<Phases, 'freeEndMicros'>;
 
 /** Rolling for this long makes a train where no axle sensor speaks; a single blow rings for less. */
 const SUSTAINED_SECONDS = 0.3;
-/** The same where axle sensors are there but say nothing: they are rather believed. */
+/** The same where one axle sensor is there but says nothing; two that say nothing are believed. */
 const SUSTAINED_UNHEARD_SECONDS = 0.8;
 
 function findPhases(
@@ -95,10 +95,12 @@ function findPhases(
   if (axles.onMicros !== null && axles.offMicros !== null && axles.offMicros > axles.onMicros) {
     return byAxles(axles, axles.onMicros, axles.offMicros, span);
   }
-  const unheard = record.some((channel) => channel.axles && !channel.flags.includes('flat'));
-  const least = unheard && axles.firstPulse === null ? SUSTAINED_UNHEARD_SECONDS : SUSTAINED_SECONDS;
-  if (span !== null && span.sustainedSeconds >= least) {
-    const notes = unheard ? ['the axle sensors did not see the whole train'] : [];
+  const listening = record.filter((channel) => channel.axles && !channel.flags.includes('flat')).length;
+  const heard = axles.firstPulse !== null;
+  const least = listening === 0 || heard ? SUSTAINED_SECONDS : SUSTAINED_UNHEARD_SECONDS;
+  const denied = listening >= 2 && !heard;
+  if (span !== null && !denied && span.sustainedSeconds >= least) {
+    const notes = listening > 0 ? ['the axle sensors did not see the whole train'] : [];
     return {
       onMicros: span.onMicros,
       offMicros: span.offMicros,

@@ -3,89 +3,140 @@ import type { Passage } from '../contract/passage.ts';
 import { MICROS_PER_SECOND, type Micros } from '../contract/time.ts';
 import { FRAME_MICROS, type RollingNoise } from './rolling-noise.ts';
 
+type NoiseSpeed = Pick<Passage, 'speedMs' | 'direction'>;
+
 /** Speeds that are looked for, m/s: a shunting engine to a high-speed train. */
-const SLOWEST = 2;
+const SLOWEST = 3;
 const FASTEST = 110;
-/** The noise envelopes must agree at least so well at the best delay. */
-const AGREEMENT_LEAST = 0.5;
+/** Steps of slowness on each side of zero. */
+const STEPS = 600;
+/** The aligned traces must hold at least this share of the power of the single ones, beyond what chance gives. */
+const SEMBLANCE_LEAST = 0.35;
+/** Of several alignments about as good (a train is periodic), the fastest is taken. */
+const ABOUT_AS_GOOD = 0.93;
 
 /**
- * Speed from accelerometers alone: each wheel is loudest as it passes a sensor, so the noise envelope of one sensor is
- * that of another, delayed. One straight line through place and delay over all sensors, by the mean correlation of the
- * logarithmic envelopes over a fine grid of slowness.
+ * Speed from accelerometers alone: each wheel is loudest as it passes a sensor, so the noise of one sensor is that of
+ * another, delayed. All traces of logarithmic noise power, each less the mean over the sensors (which hear the whole
+ * train at once), are aligned for a slowness and stacked; the best semblance (Neidell and Taner 1971) gives the speed,
+ * leaving out each sensor in turn gives its standard error.
  */
-export function noiseSpeed(
-  noise: RollingNoise,
-  onMicros: Micros,
-  offMicros: Micros,
-): Pick<Passage, 'speedMs' | 'direction'> {
-  const none = (reason: string): Pick<Passage, 'speedMs' | 'direction'> => ({
-    speedMs: notMeasurable(reason),
-    direction: null,
-  });
+export function noiseSpeed(noise: RollingNoise, onMicros: Micros, offMicros: Micros): NoiseSpeed {
   const places = noise.channels.map(({ alongM }) => alongM);
   const spread = Math.max(...places) - Math.min(...places);
-  if (spread < 2) return none('no axle sensors, and the deck sensors are too close together');
-  const from = Math.max(0, Math.floor((onMicros - noise.startMicros) / FRAME_MICROS) - 10);
-  const to = Math.min(noise.total.length, Math.ceil((offMicros - noise.startMicros) / FRAME_MICROS) + 10);
-  if (to - from < 20) return none('the passage is too short for a speed from noise');
-  const envelopes = noise.channels.map(({ power, floor, alongM }) => ({
-    alongM,
-    y: standardised(power, floor, from, to),
-  }));
-  let best = { score: -1, slowness: 0 };
-  const steps = 400;
-  const low = 1 / FASTEST;
-  const high = 1 / SLOWEST;
-  for (let k = -steps; k <= steps; k++) {
-    if (k === 0) continue;
-    const slowness = Math.sign(k) * low * (high / low) ** ((Math.abs(k) - 1) / (steps - 1));
-    const score = agreement(envelopes, slowness);
-    if (score > best.score) best = { score, slowness };
-  }
-  if (best.score < AGREEMENT_LEAST) return none('the deck sensors do not hear the train one after the other');
-  const speed = 1 / Math.abs(best.slowness);
-  // A frame is the resolution of a delay over the whole spread.
-  const error = (speed * speed * FRAME_MICROS) / MICROS_PER_SECOND / spread / Math.sqrt(envelopes.length);
+  if (new Set(places).size < 2 || spread < 3)
+    return none('no axle sensors, and the deck sensors are too close together');
+  const traces = tracesOf(noise, onMicros, offMicros);
+  const seconds = (traces[0]!.y.length * FRAME_MICROS) / MICROS_PER_SECOND;
+  if (seconds < 0.6) return none('the passage is too short for a speed from noise');
+  const best = bestSlowness(traces, seconds);
+  if (best === null) return none('the deck sensors do not hear the train one after the other');
+  const error = slownessError(traces, seconds, best, spread);
+  const speed = 1 / Math.abs(best);
+  const standardError = speed * speed * error;
+  if (standardError > 0.2 * speed) return none('the deck sensors do not agree on a speed');
   return {
-    speedMs: measured(speed, error, 'usable', 'from wheel-rail noise; no axle sensors'),
-    direction: best.slowness > 0 ? 'rising' : 'falling',
+    speedMs: measured(speed, standardError, 'usable', 'from wheel-rail noise; no two axle sensors saw the train'),
+    direction: best > 0 ? 'rising' : 'falling',
   };
 }
 
-/** Logarithm of power over floor, mean 0 and mean square 1. */
-function standardised(power: Float64Array, floor: number, from: number, to: number): Float64Array {
-  const y = power.slice(from, to).map((value) => Math.log(1 + value / floor));
-  const mean = y.reduce((sum, value) => sum + value, 0) / y.length;
-  const deviation = Math.sqrt(y.reduce((sum, value) => sum + (value - mean) ** 2, 0) / y.length) || 1;
-  return y.map((value) => (value - mean) / deviation);
+function none(reason: string): NoiseSpeed {
+  return { speedMs: notMeasurable(reason), direction: null };
 }
 
-/** Mean correlation of all pairs at the delays that a slowness implies, by straight lines between frames. */
-function agreement(envelopes: readonly { alongM: number; y: Float64Array }[], slowness: number): number {
-  let sum = 0;
-  let pairs = 0;
-  for (let i = 0; i < envelopes.length; i++) {
-    for (let j = i + 1; j < envelopes.length; j++) {
-      const a = envelopes[i]!;
-      const b = envelopes[j]!;
-      if (Math.abs(b.alongM - a.alongM) < 1) continue;
-      const delay = ((b.alongM - a.alongM) * slowness * MICROS_PER_SECOND) / FRAME_MICROS;
-      sum += correlation(a.y, b.y, delay);
-      pairs += 1;
+interface Trace {
+  alongM: number;
+  y: Float64Array;
+}
+
+/** Logarithm of power over floor about the passage, less the mean over all sensors, each trace about its own mean. */
+function tracesOf(noise: RollingNoise, onMicros: Micros, offMicros: Micros): Trace[] {
+  const margin = 500_000;
+  const from = Math.max(0, Math.floor((onMicros - margin - noise.startMicros) / FRAME_MICROS));
+  const to = Math.min(noise.total.length, Math.ceil((offMicros + margin - noise.startMicros) / FRAME_MICROS));
+  const traces = noise.channels.map(({ alongM, power, floor }) => ({
+    alongM,
+    y: power.slice(from, to).map((value) => Math.log(value + floor)),
+  }));
+  const length = to - from;
+  for (let t = 0; t < length; t++) {
+    let mean = 0;
+    for (const { y } of traces) mean += y[t]!;
+    mean /= traces.length;
+    for (const { y } of traces) y[t]! -= mean;
+  }
+  for (const { y } of traces) {
+    const mean = y.reduce((sum, value) => sum + value, 0) / length;
+    for (let t = 0; t < length; t++) y[t]! -= mean;
+  }
+  return traces;
+}
+
+/** Signed slowness, s/m, of the best alignment; null where none stands out. */
+function bestSlowness(traces: readonly Trace[], seconds: number): number | null {
+  const slowest = Math.min(1 / SLOWEST, (0.4 * seconds) / spreadOf(traces));
+  const fastest = 1 / FASTEST;
+  if (slowest <= fastest) return null;
+  const step = (slowest - fastest) / STEPS;
+  const candidates: { slowness: number; score: number }[] = [];
+  for (const sign of [1, -1]) {
+    const scores = Array.from({ length: STEPS + 1 }, (_, k) => semblance(traces, sign * (fastest + k * step)));
+    scores.forEach((score, k) => {
+      const [before = -1, after = -1] = [scores[k - 1], scores[k + 1]];
+      if (score < before || score < after) return;
+      const bend = before - 2 * score + after;
+      const shift = k > 0 && k < STEPS && bend < 0 ? (0.5 * (before - after)) / bend : 0;
+      candidates.push({ slowness: sign * (fastest + (k + shift) * step), score });
+    });
+  }
+  const top = Math.max(...candidates.map(({ score }) => score));
+  if (top < SEMBLANCE_LEAST) return null;
+  const good = candidates.filter(({ score }) => score >= ABOUT_AS_GOOD * top);
+  return good.reduce((a, b) => (Math.abs(b.slowness) < Math.abs(a.slowness) ? b : a)).slowness;
+}
+
+/** Power of the mean of the aligned traces over the mean of their powers, 0 to 1, less 1/n, which chance gives. */
+function semblance(traces: readonly Trace[], slowness: number): number {
+  const length = traces[0]!.y.length;
+  const shifts = traces.map(({ alongM }) => (alongM * slowness * MICROS_PER_SECOND) / FRAME_MICROS);
+  const least = Math.min(...shifts);
+  const most = Math.max(...shifts);
+  let stacked = 0;
+  let single = 0;
+  for (let t = Math.ceil(-least); t + most + 1 < length; t++) {
+    let sum = 0;
+    for (let i = 0; i < traces.length; i++) {
+      const place = t + shifts[i]!;
+      const whole = Math.floor(place);
+      const part = place - whole;
+      const { y } = traces[i]!;
+      const value = (1 - part) * y[whole]! + part * y[whole + 1]!;
+      sum += value;
+      single += value * value;
     }
+    stacked += sum * sum;
   }
-  return pairs === 0 ? -1 : sum / pairs;
+  const n = traces.length;
+  return single === 0 ? 0 : (stacked / (n * single) - 1 / n) / (1 - 1 / n);
 }
 
-function correlation(a: Float64Array, b: Float64Array, delay: number): number {
-  const whole = Math.floor(delay);
-  const part = delay - whole;
-  let sum = 0;
-  let count = 0;
-  for (let i = Math.max(0, -whole); i < a.length && i + whole + 1 < b.length; i++) {
-    sum += a[i]! * ((1 - part) * b[i + whole]! + part * b[i + whole + 1]!);
-    count += 1;
-  }
-  return count < 10 ? -1 : sum / count;
+/** Standard error of the slowness, s/m: by leaving out each sensor in turn; a frame over the spread at least. */
+function slownessError(traces: readonly Trace[], seconds: number, best: number, spread: number): number {
+  const floor = (0.3 * FRAME_MICROS) / MICROS_PER_SECOND / spread;
+  if (traces.length < 3) return 3 * floor;
+  const others = traces
+    .map((_, leftOut) => traces.filter((__, i) => i !== leftOut))
+    .filter((rest) => spreadOf(rest) >= 3)
+    .map((rest) => bestSlowness(rest, seconds))
+    .filter((slowness) => slowness !== null);
+  if (others.length < 2) return 3 * floor;
+  const n = others.length;
+  const squares = others.reduce((sum, slowness) => sum + (slowness - best) ** 2, 0);
+  return Math.max(floor, Math.sqrt(((n - 1) / n) * squares));
+}
+
+function spreadOf(traces: readonly Trace[]): number {
+  const places = traces.map(({ alongM }) => alongM);
+  return Math.max(...places) - Math.min(...places);
 }

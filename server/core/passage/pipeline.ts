@@ -1,8 +1,7 @@
 import type { SampleBlock } from '../contract/block.ts';
-import type { BridgeDefinition } from '../contract/bridge.ts';
+import { axleTracks, bridgeLengthM, type BridgeDefinition } from '../contract/bridge.ts';
 import type { Passage } from '../contract/passage.ts';
 import type { PassageWindow, PipelineOutput, WindowChannel } from '../contract/pipeline.ts';
-import { bridgeLengthM } from '../contract/bridge.ts';
 import { MICROS_PER_SECOND, timeName, type Micros } from '../contract/time.ts';
 import { closeChannel, createChannel, feedChannel, type Channel, type ChannelSink } from './channel.ts';
 import {
@@ -48,7 +47,7 @@ export function createPipeline(definition: BridgeDefinition, definitionVersion: 
     setting: {
       bridge: definition.id,
       freeSeconds: freeSeconds(definition),
-      axleSensors: channels.filter(({ axles }) => axles).map(({ sensor }) => sensor.id),
+      axleTracks: axleTracks(definition).map((track) => track.map(({ id }) => id)),
     },
     liveSpeed: createLiveSpeed(),
     vitalsMinute: -1,

@@ -19,7 +19,7 @@ export interface RollingNoise {
   channels: { alongM: number; power: Float64Array; floor: number }[];
 }
 
-export const FRAME_MICROS = 20_000;
+export const FRAME_MICROS = 10_000;
 
 export function rollingNoise(
   bridge: BridgeDefinition,
@@ -40,12 +40,12 @@ export function rollingNoise(
     ),
   );
   if (frames < 10) return null;
-  const quietFrames = Math.floor((triggerMicros - startMicros) / FRAME_MICROS) - 25;
+  const quietFrames = Math.floor((triggerMicros - startMicros) / FRAME_MICROS) - 50;
   const channels = used.map((channel) => {
     const power = framePower(bridge, channel, startMicros, frames);
     const quiet = power.subarray(0, Math.max(0, quietFrames));
     const least = RULE.floorLeast * RULE.floorLeast;
-    const floor = Math.max(quiet.length >= 10 ? quantile(quiet, 0.5) : quantile(power, 0.05), least);
+    const floor = Math.max(quiet.length >= 20 ? quantile(quiet, 0.5) : quantile(power, 0.05), least);
     return { alongM: channel.sensor.alongM, power, floor };
   });
   const total = new Float64Array(frames);
@@ -61,7 +61,7 @@ function framePower(
   frames: number,
 ): Float64Array {
   const f1 = spanAt(bridge, channel.sensor.alongM).frequenciesHz?.f1 ?? 0;
-  const edge = Math.min(Math.max(RULE.noiseFromHz, RULE.noiseOverF1 * f1), 0.3 * channel.rateHz);
+  const edge = Math.min(Math.max(RULE.phaseNoiseFromHz, RULE.phaseNoiseOverF1 * f1), 0.3 * channel.rateHz);
   const y = zeroPhase(highpass(RULE.noiseOrder / 2, edge, channel.rateHz), channel.x);
   const power = new Float64Array(frames);
   const perFrame = (channel.rateHz * FRAME_MICROS) / MICROS_PER_SECOND;
@@ -93,32 +93,75 @@ const SUSTAIN_SHARE = 0.1;
 
 /** Where the noise says that axles were on the deck; null where nothing rises above the floor. */
 export function noiseSpan(noise: RollingNoise): NoiseSpan | null {
-  const smooth = smoothed(noise.total);
+  const smooth = smoothed(noise.total, 2);
   const above = smooth.filter((value) => value > RULE.activeRatio);
-  if (above.length < 3) return null;
+  if (above.length < 6) return null;
   const level = quantile(above, LEVEL_QUANTILE);
   const deck = Math.max(DECK_SHARE * level, RULE.activeRatio / 2);
-  let first = smooth.findIndex((value) => value > deck);
-  let last = smooth.findLastIndex((value) => value > deck);
+  const first = smooth.findIndex((value) => value > deck);
+  const last = smooth.findLastIndex((value) => value > deck);
   if (first < 0 || last <= first) return null;
-  first = Math.max(first, 0);
-  last = Math.min(last + 1, smooth.length);
-  let longest = 0;
-  let row = 0;
-  const sustain = SUSTAIN_SHARE * Math.max(...smooth);
-  for (const value of smooth) {
-    row = value > Math.max(sustain, RULE.activeRatio) ? row + 1 : 0;
-    longest = Math.max(longest, row);
-  }
+  const on = stepNear(noise.total, first);
+  const off = noise.total.length - stepNear(noise.total.toReversed(), noise.total.length - 1 - last);
   return {
-    onMicros: noise.startMicros + first * FRAME_MICROS,
-    offMicros: noise.startMicros + last * FRAME_MICROS,
-    sustainedSeconds: (longest * FRAME_MICROS) / MICROS_PER_SECOND,
+    onMicros: noise.startMicros + on * FRAME_MICROS,
+    offMicros: noise.startMicros + Math.max(off, on + 1) * FRAME_MICROS,
+    sustainedSeconds: sustained(smoothed(noise.total, 3)),
     ratio: level,
   };
 }
 
-/** Mean over three frames. */
-function smoothed(x: Float64Array): Float64Array {
-  return x.map((value, i) => ((x[i - 1] ?? value) + value + (x[i + 1] ?? value)) / 3);
+/** Longest time without a break near the loudest, s. */
+function sustained(smooth: Float64Array): number {
+  const least = Math.max(SUSTAIN_SHARE * smooth.reduce((most, value) => Math.max(most, value), 0), RULE.activeRatio);
+  let longest = 0;
+  let row = 0;
+  for (const value of smooth) {
+    row = value > least ? row + 1 : 0;
+    longest = Math.max(longest, row);
+  }
+  return (longest * FRAME_MICROS) / MICROS_PER_SECOND;
+}
+
+/** Frames before and after a first crossing in which the step itself is looked for. */
+const STEP_BEFORE = 60;
+const STEP_AFTER = 15;
+
+/**
+ * Frame at which the noise steps up as the first axle comes onto the deck: the split into two parts that makes their
+ * logarithms most alike (the picker of Maeda 1985, Akaike's criterion, on logarithmic power).
+ */
+function stepNear(total: Float64Array, crossing: number): number {
+  const from = Math.max(0, crossing - STEP_BEFORE);
+  const to = Math.min(total.length, crossing + STEP_AFTER);
+  const y = Array.from(total.subarray(from, to), (value) => Math.log(value + 0.1));
+  const n = y.length;
+  let best = { at: crossing, score: Infinity };
+  for (let k = 5; k <= n - 5; k++) {
+    const score = k * Math.log(variance(y, 0, k)) + (n - k - 1) * Math.log(variance(y, k, n));
+    if (score < best.score) best = { at: from + k, score };
+  }
+  return best.at;
+}
+
+function variance(y: readonly number[], from: number, to: number): number {
+  let mean = 0;
+  for (let i = from; i < to; i++) mean += y[i]!;
+  mean /= to - from;
+  let squares = 0;
+  for (let i = from; i < to; i++) squares += (y[i]! - mean) ** 2;
+  return squares / (to - from) + 1e-6;
+}
+
+/** Mean over `reach` frames on each side. */
+function smoothed(x: Float64Array, reach: number): Float64Array {
+  return x.map((_, i) => {
+    let sum = 0;
+    let count = 0;
+    for (let k = Math.max(0, i - reach); k <= Math.min(x.length - 1, i + reach); k++) {
+      sum += x[k]!;
+      count += 1;
+    }
+    return sum / count;
+  });
 }

@@ -17,6 +17,9 @@ export const RULE = {
   noiseFromHz: 30,
   noiseOverF1: 5,
   noiseOrder: 4,
+  /** For the phases, well above the third bending mode (9 f1), which rings on after the last axle. */
+  phaseNoiseFromHz: 60,
+  phaseNoiseOverF1: 12,
   /** A channel is active in a tick where its noise power is this many times its quiet floor. */
   activeRatio: 9,
   /** The floor is never believed below this r.m.s., m/s²: the resolution of a good deck accelerometer (common practice). */
@@ -25,6 +28,8 @@ export const RULE = {
   activeTicks: 3,
   /** A passage is over after this much quiet, once no axle is known to be on the bridge. */
   quietSeconds: 1.5,
+  /** After a first pulse the next bogie of a creeping train is waited for: 18 m at 3 m/s. */
+  pulseWaitSeconds: 6,
   /** How long a train may stand on the bridge while the axle count says it is there. */
   standSeconds: 900,
   /** The same where one of the axle sensors has said nothing yet. */
