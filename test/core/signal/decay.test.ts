@@ -297,25 +297,28 @@ describeChecks('decay identification against id.*', () => {
     }
   });
 
-  it('comes within 15 % of the Cramér-Rao bounds of id.crb, and its standard errors within 15 % of its scatter', () => {
-    const Case = Type.Object({
-      A: Type.Number(),
-      phase_rad: Type.Number(),
-      f_n_Hz: Type.Number(),
-      zeta: Type.Number(),
-      fs_Hz: Type.Number(),
-      n: Type.Integer(),
-      sigma: Type.Number(),
-      std_f_n_Hz: Type.Number(),
-      std_zeta: Type.Number(),
-    });
-    const { expected } = check('id.crb', Type.Object({ cases: Type.Array(Case) }));
-    expect(expected.cases.length).toBeGreaterThanOrEqual(5);
-    for (const [i, c] of expected.cases.entries()) {
+  const Case = Type.Object({
+    A: Type.Number(),
+    phase_rad: Type.Number(),
+    f_n_Hz: Type.Number(),
+    zeta: Type.Number(),
+    fs_Hz: Type.Number(),
+    n: Type.Integer(),
+    sigma: Type.Number(),
+    std_f_n_Hz: Type.Number(),
+    std_zeta: Type.Number(),
+  });
+
+  it.each([0, 1, 2, 3, 4])(
+    'comes within 15 % of the Cramér-Rao bounds of id.crb, and its standard errors within 15 % of its scatter: case %i',
+    (i) => {
+      const { expected } = check('id.crb', Type.Object({ cases: Type.Array(Case) }));
+      const c = expected.cases[i];
+      if (c === undefined) throw new Error(`id.crb has no case ${i}`);
       const random = createRandom(1000 + i);
       const clean = decay(c.n, c.fs_Hz, [mode(c.f_n_Hz, c.zeta, c.A, c.phase_rad)]);
-      // 200 runs: the root mean square scatters by 5 %
-      const runs = 200;
+      // 160 runs: the root mean square scatters by 6 %
+      const runs = 160;
       let f = 0;
       let z = 0;
       let claimedF = 0;
@@ -327,13 +330,14 @@ describeChecks('decay identification against id.*', () => {
         claimedF += (found?.frequencyStandardError ?? NaN) ** 2;
         claimedZ += (found?.dampingStandardError ?? NaN) ** 2;
       }
-      const name = `case ${i}, seed ${1000 + i}`;
-      expect(Math.sqrt(f / runs) / c.std_f_n_Hz, name).toBeLessThan(1.15);
-      expect(Math.sqrt(z / runs) / c.std_zeta, name).toBeLessThan(1.15);
-      expect(Math.abs(Math.sqrt(claimedF / f) - 1), name).toBeLessThan(0.15);
-      expect(Math.abs(Math.sqrt(claimedZ / z) - 1), name).toBeLessThan(0.15);
-    }
-  });
+      const seed = `seed ${random.seed}`;
+      expect(Math.sqrt(f / runs) / c.std_f_n_Hz, seed).toBeLessThan(1.15);
+      expect(Math.sqrt(z / runs) / c.std_zeta, seed).toBeLessThan(1.15);
+      expect(Math.abs(Math.sqrt(claimedF / f) - 1), seed).toBeLessThan(0.15);
+      expect(Math.abs(Math.sqrt(claimedZ / z) - 1), seed).toBeLessThan(0.15);
+    },
+    120_000,
+  );
 });
 
 describe.skipIf(!available('python3-scipy'))('decay identification against SciPy', () => {
