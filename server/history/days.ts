@@ -7,7 +7,7 @@ import type { Ask } from './database.ts';
 const MAX_DAYS = 400;
 const DAY_MS = 86_400_000;
 
-export interface CivilDay {
+interface CivilDay {
   /** `2026-12-01` */
   day: string;
   startMicros: Micros;

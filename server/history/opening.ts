@@ -1,6 +1,7 @@
 import { access, constants, mkdir, rename } from 'node:fs/promises';
 import { dirname } from 'node:path';
-import { SpanbeatError, type Complaint } from '#core/contract/errors.ts';
+import { SpanbeatError } from '#core/contract/errors.ts';
+import type { Report } from '../report.ts';
 import { timeName, type Micros } from '#core/contract/time.ts';
 import type { Database } from './database.ts';
 import { migrate, probe } from './schema.ts';
@@ -22,7 +23,7 @@ export async function openSound(
   file: string,
   open: (file: string) => Promise<Database>,
   nowMicros: Micros,
-  report: (complaint: Complaint) => void,
+  report: Report,
 ): Promise<Opened> {
   await mkdir(dirname(file), { recursive: true }).catch(refuseWrite(file));
   await access(dirname(file), constants.W_OK).catch(refuseWrite(dirname(file)));

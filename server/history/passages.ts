@@ -124,7 +124,7 @@ export async function lastOf(ask: Ask): Promise<PassageRow[]> {
   return rows.map(rowOf);
 }
 
-export function rowOf(row: Row): PassageRow {
+function rowOf(row: Row): PassageRow {
   const number = (name: string): number | null => (row[name] === null ? null : Number(row[name]));
   const text = (name: string): string | null => (row[name] === null ? null : String(row[name]));
   return {

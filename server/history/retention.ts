@@ -63,7 +63,7 @@ export async function dueWaveforms(
 }
 
 /** What thinning needs of the history. */
-export interface ThinningParts {
+interface ThinningParts {
   archive: Archive;
   passage(id: string): Promise<Passage | null>;
   definitionAt(bridge: string, version: number): StoredDefinition | null;

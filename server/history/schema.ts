@@ -22,7 +22,7 @@ const MIGRATIONS: readonly (readonly string[])[] = [
   ],
 ];
 
-export const SCHEMA_VERSION = MIGRATIONS.length;
+const SCHEMA_VERSION = MIGRATIONS.length;
 
 /**
  * Brings the database to this program's schema.

@@ -9,9 +9,9 @@ import type {
 } from '#core/contract/api.ts';
 import type { Alarm } from '#core/contract/alarm.ts';
 import type { BridgeDefinition } from '#core/contract/bridge.ts';
-import type { Complaint } from '#core/contract/errors.ts';
 import type { Passage } from '#core/contract/passage.ts';
 import type { SpectrumLine, WindowChannel } from '#core/contract/pipeline.ts';
+import type { Report } from '../report.ts';
 import type { Micros } from '#core/contract/time.ts';
 import { REMEMBERED_CLOSED, type NoData, type PassageAbove } from '#core/alarm/state.ts';
 import {
@@ -43,7 +43,7 @@ export interface HistoryOptions {
   archiveFolder: string;
   /** Wall clock. */
   clock: () => Micros;
-  report: (complaint: Complaint) => void;
+  report: Report;
   /** Writes held at most; beyond, the caller waits. */
   maxPending?: number;
   /** How the file is opened: DuckDB where absent. */
@@ -248,7 +248,7 @@ const FILL_AT_ONCE = 200;
 /** Definitions and passages as the archive's files tell them, alarms and times without data as the ledger does. */
 async function fillFromArchive(
   { archive, ledger, definitions, write }: Pick<Parts, 'archive' | 'ledger' | 'definitions' | 'write'>,
-  report: (complaint: Complaint) => void,
+  report: Report,
 ): Promise<void> {
   const damaged = (path: string, reason: string): void =>
     report({ code: 'STORE_CORRUPT', where: path, detail: reason });

@@ -1,5 +1,6 @@
 import { setTimeout as sleep } from 'node:timers/promises';
-import { SpanbeatError, type Complaint, type ErrorCode } from '#core/contract/errors.ts';
+import { SpanbeatError, type ErrorCode } from '#core/contract/errors.ts';
+import type { Report } from '../report.ts';
 
 export interface Writes {
   /**
@@ -16,9 +17,9 @@ export interface Writes {
   close(): Promise<void>;
 }
 
-export interface WritesOptions {
+interface WritesOptions {
   limit: number;
-  report: (complaint: Complaint) => void;
+  report: Report;
   /** Between two tries. */
   recover?: () => Promise<void>;
   /** For tests; real time where absent. */

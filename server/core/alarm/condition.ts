@@ -1,7 +1,7 @@
 import type { Alarm } from '../contract/alarm.ts';
 import type { ConditionCode, SensorCondition } from '../contract/health.ts';
 import type { Micros } from '../contract/time.ts';
-import { withDoubt } from './doubt.ts';
+import { marked, withDoubt } from './doubt.ts';
 import { giveBack, isActive, isOpen, raise, reopen } from './life.ts';
 import { said } from './level.ts';
 import { silenceOf } from './silence.ts';
@@ -12,7 +12,7 @@ import { sensorMessage } from './wording.ts';
  * Conditions that last and that somebody must go and see to; each raises the sensor's alarm (AL). The others are counted
  * and cast doubt on a level alarm of the sensor, but ask for no answer of their own.
  */
-export const ALARMING: readonly ConditionCode[] = ['silent', 'flat', 'noise high', 'rate wrong', 'twin channel'];
+const ALARMING: readonly ConditionCode[] = ['silent', 'flat', 'noise high', 'rate wrong', 'twin channel'];
 
 /** A condition of a sensor began, happened or ended. */
 export function onCondition(state: DeskState, condition: SensorCondition, takenMicros: Micros): DeskState {
@@ -36,7 +36,7 @@ function withConditions(state: DeskState, sensor: string, conditions: SensorCond
 function doubtLevels(state: DeskState, { sensor, code }: SensorCondition): DeskState {
   return Object.values(state.alarms)
     .filter((alarm) => alarm.kind === 'level' && alarm.sensor === sensor && isActive(alarm))
-    .reduce((now, alarm) => withAlarm(now, said(now, withDoubt(alarm, `${sensor} is marked "${code}"`))), state);
+    .reduce((now, alarm) => withAlarm(now, said(now, withDoubt(alarm, marked(sensor, code)))), state);
 }
 
 function raised(state: DeskState, condition: SensorCondition, takenMicros: Micros): DeskState {

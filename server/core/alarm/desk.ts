@@ -1,5 +1,6 @@
 import type { Alarm } from '../contract/alarm.ts';
 import type { BridgeDefinition } from '../contract/bridge.ts';
+import type { PipelineOutput } from '../contract/pipeline.ts';
 import type { Micros } from '../contract/time.ts';
 import { onCondition } from './condition.ts';
 import { onLevel, onProgress } from './level.ts';
@@ -97,6 +98,22 @@ export function nextAll(state: DeskState, events: readonly DeskEvent[], nowMicro
     effects.push(...step.effects);
   }
   return { state: now, effects };
+}
+
+/**
+ * What one step of the pipeline said, as events for the desk, in the order of event time; records of passages last.
+ *
+ * However the samples were split into blocks, the alarms are the same in the end, but for the order in which steps were
+ * taken.
+ */
+export function eventsOf(output: Pick<PipelineOutput, 'levels' | 'progress' | 'health' | 'passages'>): DeskEvent[] {
+  const timed: [Micros, DeskEvent][] = [
+    ...output.progress.map((progress): [Micros, DeskEvent] => [progress.micros, { kind: 'progress', progress }]),
+    ...output.health.map((condition): [Micros, DeskEvent] => [condition.micros, { kind: 'condition', condition }]),
+    ...output.levels.map((level): [Micros, DeskEvent] => [level.micros, { kind: 'level', level }]),
+  ];
+  const inTime = timed.toSorted((a, b) => a[0] - b[0]).map(([, event]) => event);
+  return [...inTime, ...output.passages.map(({ passage }): DeskEvent => ({ kind: 'passage', passage }))];
 }
 
 function reaction(state: DeskState, event: DeskEvent, nowMicros: Micros): DeskStep {

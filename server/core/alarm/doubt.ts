@@ -5,35 +5,46 @@ import { MICROS_PER_SECOND } from '../contract/time.ts';
 import type { DeskState } from './state.ts';
 
 /** A neighbour that should have felt it reads at least this part of the value. */
-export const NEIGHBOUR_SHARE = 0.25;
+const NEIGHBOUR_SHARE = 0.25;
 /** A momentary condition (spike, gap, …) counts against a crossing within this long. */
 const MOMENT_MICROS = 5 * MICROS_PER_SECOND;
 
-/** The alarm with one more reason not to trust its sensor. Each reason is said once. */
+/** The alarm with one more reason not to trust its sensor. Each is said once, in alphabetical order: none is the first. */
 export function withDoubt(alarm: Alarm, reason: string): Alarm {
-  if (alarm.doubt === null) return { ...alarm, doubt: reason };
-  return isSaid(alarm, reason) ? alarm : { ...alarm, doubt: `${alarm.doubt}; ${reason}` };
+  return isSaid(alarm, reason) ? alarm : { ...alarm, doubt: [...reasonsOf(alarm), reason].toSorted().join('; ') };
 }
 
-export const isSaid = (alarm: Alarm, reason: string): boolean => (alarm.doubt ?? '').split('; ').includes(reason);
+export const isSaid = (alarm: Alarm, reason: string): boolean => reasonsOf(alarm).includes(reason);
+
+const reasonsOf = ({ doubt }: Alarm): string[] => (doubt === null ? [] : doubt.split('; '));
+
+function without(alarm: Alarm, drop: (reason: string) => boolean): Alarm {
+  const kept = reasonsOf(alarm).filter((reason) => !drop(reason));
+  return { ...alarm, doubt: kept.length === 0 ? null : kept.join('; ') };
+}
 
 /** What is said while no passage is known for a crossing. */
 export const NO_TRAIN = 'no train was found on the bridge';
 
 /** The alarm without the doubt that no train was there: one was found. */
 export function withTrain(alarm: Alarm): Alarm {
-  if (alarm.doubt === null) return alarm;
-  const reasons = alarm.doubt.split('; ').filter((reason) => !reason.startsWith(NO_TRAIN));
-  return { ...alarm, doubt: reasons.length === 0 ? null : reasons.join('; ') };
+  return without(alarm, (reason) => reason.startsWith(NO_TRAIN));
 }
 
-/** The alarm with the conditions of its sensor, as far as they are known by now, said as doubt. */
+/** The alarm with the conditions of the sensor that it rests on, as far as they are known by now, and of no other. */
 export function conditionsDoubt(state: DeskState, alarm: Alarm): Alarm {
-  const sensor = alarm.sensor ?? '';
-  return (state.conditions[sensor] ?? [])
+  const own = alarm.sensor ?? '';
+  return (state.conditions[own] ?? [])
     .filter((condition) => condition.state === 'began' || alarm.raisedMicros - condition.micros <= MOMENT_MICROS)
-    .reduce((doubted, condition) => withDoubt(doubted, `${sensor} is marked "${condition.code}"`), alarm);
+    .reduce(
+      (doubted, { code }) => withDoubt(doubted, marked(own, code)),
+      without(alarm, (reason) => reason.includes(MARKED)),
+    );
 }
+
+const MARKED = ' is marked "';
+/** `A1 is marked "spike"` */
+export const marked = (sensor: string, code: string): string => `${sensor}${MARKED}${code}"`;
 
 /**
  * The alarm with what its passage's record says against its sensor: flags of the channel, and neighbours that felt
@@ -47,10 +58,7 @@ export function recordDoubt(definition: BridgeDefinition, alarm: Alarm, passage:
   const sensor = definition.sensors.find(({ id }) => id === alarm.sensor);
   if (sensor === undefined) return alarm;
   const own = passage.channels.find((channel) => channel.sensor === sensor.id);
-  const flagged = (own?.flags ?? []).reduce(
-    (doubted, flag) => withDoubt(doubted, `${sensor.id} is marked "${flag}"`),
-    alarm,
-  );
+  const flagged = (own?.flags ?? []).reduce((doubted, flag) => withDoubt(doubted, marked(sensor.id, flag)), alarm);
   const value = Math.max(alarm.liveValue ?? 0, (own === undefined ? null : bandPeak(own)) ?? 0);
   const highest = highestNeighbour(definition, sensor, passage);
   if (highest === null || highest.value >= NEIGHBOUR_SHARE * value) return flagged;

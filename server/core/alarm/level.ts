@@ -11,6 +11,8 @@ const DAY_MICROS = 86_400 * MICROS_PER_SECOND;
 const AFTER_LEAVING_MICROS = 30 * MICROS_PER_SECOND;
 /** The detector needs some of the train's noise before it speaks: crossings this long before its onset are the train's. */
 const BEFORE_ONSET_MICROS = 5 * MICROS_PER_SECOND;
+/** An excursion that is still open after this long when the next train comes has lost its end. */
+const STALE_MICROS = 300 * MICROS_PER_SECOND;
 /** The detector has spoken by then. */
 const DETECTION_MICROS = 10 * MICROS_PER_SECOND;
 
@@ -102,8 +104,8 @@ function onEntered(state: DeskState, event: PassageProgress, takenMicros: Micros
   for (const alarm of levelAlarms(state).toSorted((a, b) => b.raisedMicros - a.raisedMicros)) {
     if (isOfOnset(alarm, event) && !holds(next, alarm.rule, event.passage)) {
       next = withAlarm(next, said(state, { ...withTrain(alarm), passage: event.passage }));
-    } else if (isActive(alarm) && alarm.passage !== event.passage && alarm.raisedMicros < event.micros) {
-      // A new train is on: what was left open by an earlier one, or by a crash, is over.
+    } else if (isActive(alarm) && alarm.raisedMicros < event.micros - STALE_MICROS) {
+      // Its channels' return was lost in a crash; the ringing of a train just before is not touched.
       next = withAlarm(next, giveBack(alarm, event.micros, takenMicros));
     }
   }

@@ -13,7 +13,7 @@ const DAY_MICROS = 86_400 * MICROS_PER_SECOND;
 const REMEMBERED_ABOVE = 5000;
 
 /** What the record of a passage says about one limit. */
-export type RecordOfLimit =
+type RecordOfLimit =
   { value: number; severity: Severity | null; sensor: string | null; micros: Micros } | { value: null; reason: string };
 
 /**

@@ -39,7 +39,7 @@ export function sensorMessage(definition: BridgeDefinition, sensor: string, code
 }
 
 /** `05:12:33 UTC on 2026-12-01`. */
-export function clockTime(micros: Micros): string {
+function clockTime(micros: Micros): string {
   const { year, month, day, hour, minute, second } = civilTime(Math.floor(micros / MICROS_PER_SECOND));
   const two = (n: number): string => String(n).padStart(2, '0');
   return `${two(hour)}:${two(minute)}:${two(second)} UTC on ${year}-${two(month)}-${two(day)}`;

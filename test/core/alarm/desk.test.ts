@@ -108,6 +108,22 @@ describe('a level alarm', () => {
     ]);
   });
 
+  test('of a train just before goes on ringing while the next one enters, and each ends with its channels', () => {
+    const state = run([
+      progress('entered', DAWN),
+      passed('A1', 'AL', 2.3, DAWN + S),
+      progress('left', DAWN + 6 * S),
+      progress('entered', DAWN + 9 * S, 'ottermere-next'),
+      passed('A2', 'IL', 2.9, DAWN + 10 * S),
+    ]);
+    expect(alarmsOf(state).map(({ passage, state: now }) => [passage, now])).toEqual([
+      [PASSAGE, 'unacknowledged'],
+      ['ottermere-next', 'unacknowledged'],
+    ]);
+    const over = run([returned('A1', DAWN + 11 * S), returned('A2', DAWN + 12 * S)], state);
+    expect(alarmsOf(over).map(({ returnedMicros }) => returnedMicros)).toEqual([DAWN + 11 * S, DAWN + 12 * S]);
+  });
+
   test('without a train says so when it is over', () => {
     const state = run([passed('A1', 'AL', 2.3, DAWN), returned('A1', DAWN + S)]);
     expect(only(state).doubt).toBe('no train was found on the bridge and only A1 passed');
@@ -161,6 +177,19 @@ describe('a level alarm', () => {
     expect(only(after).doubt).toBe('A1 is marked "spike"');
     const long = run([condition('A1', 'spike', 'happened', DAWN - 60 * S), passed('A1', 'AL', 2.3, DAWN)]);
     expect(only(long).doubt).toBeNull();
+  });
+
+  test('is doubted for the sensor it rests on, not for one that was overtaken', () => {
+    const state = run([
+      condition('A1', 'spike', 'happened', DAWN),
+      passed('A1', 'AL', 2.3, DAWN),
+      condition('A2', 'flat', 'began', DAWN),
+      condition('A2', 'spike', 'happened', DAWN),
+      passed('A2', 'AL', 2.5, DAWN + 1),
+    ]);
+    expect(state.alarms['ottermere-ballast-20261201-051233-2']?.doubt).toBe(
+      'A2 is marked "flat"; A2 is marked "spike"',
+    );
   });
 
   test('counts the passages of the day before that were above the same limit by the record', () => {

@@ -45,6 +45,19 @@ const train = (index: number): fc.Arbitrary<DeskEvent[]> => {
             value: 2.3 + i * 0.7,
           },
         },
+        // The crest of the excursion, told at the end of a block.
+        {
+          kind: 'level',
+          level: {
+            bridge: 'ottermere',
+            sensor,
+            limit: 'ballast',
+            kind: 'passed',
+            severity: level,
+            micros: on + at * S + 10 + i,
+            value: 2.35 + i * 0.7,
+          },
+        },
         ...(i === severity
           ? [
               {

@@ -1,0 +1,77 @@
+import { beforeAll, describe, expect, test } from 'vitest';
+import { eventsOf, nextAll, openDesk } from '#core/alarm/desk.ts';
+import type { DeskState } from '#core/alarm/state.ts';
+import type { Alarm } from '#core/contract/alarm.ts';
+import { severityRank } from '#core/contract/severity.ts';
+import { createPipeline, finish, step } from '#core/passage/pipeline.ts';
+import { bridgeParameters } from '../../../simulator/parameters.ts';
+import { simulate } from '../../../simulator/scene.ts';
+import type { SimulatedChannel } from '../../../simulator/simulation.ts';
+import { createTrain } from '../../../simulator/train.ts';
+import { plainBridge } from '../../support/bridges.ts';
+import { blocksOf } from '../../support/scenes.ts';
+
+const FROM = 1_780_000_000_000_000;
+const SPLITS_S = [0.05, 0.5, 7];
+
+/** Limits low enough that both trains pass them. */
+const BRIDGE = plainBridge({
+  limits: [{ ...plainBridge().limits[0]!, levels: { AL: 0.1, IL: 0.25, IAL: 50 } }],
+});
+
+function deskAfter(channels: readonly SimulatedChannel[], blockSeconds: number): DeskState {
+  const pipeline = createPipeline(BRIDGE, 1);
+  let desk = openDesk({ definition: BRIDGE, nowMicros: FROM });
+  for (const block of blocksOf(BRIDGE.id, channels, blockSeconds)) {
+    desk = nextAll(desk, eventsOf(step(pipeline, block)), FROM).state;
+  }
+  return nextAll(desk, eventsOf(finish(pipeline)), FROM).state;
+}
+
+/** Steps stand in the order in which they were taken, which the size of blocks may turn round; event time does not. */
+const inEventTime = ({ alarms }: DeskState): Alarm[] =>
+  Object.values(alarms).map((alarm) => ({
+    ...alarm,
+    steps: alarm.steps.toSorted((a, b) => a.micros - b.micros || (a.what < b.what ? -1 : 1)),
+  }));
+
+describe('two simulated trains that pass the limits', () => {
+  let desks: DeskState[];
+  beforeAll(() => {
+    const train = (second: number, type: 'intercity' | 'light engine') => ({
+      kind: 'passage' as const,
+      train: createTrain(type, 7),
+      onMicros: FROM + second * 1e6,
+      speedMs: 38,
+      direction: 'rising' as const,
+    });
+    const { channels } = simulate({
+      definition: BRIDGE,
+      parameters: bridgeParameters(BRIDGE),
+      seed: 42,
+      fromMicros: FROM,
+      toMicros: FROM + 120e6,
+      events: [train(20, 'intercity'), train(75, 'light engine')],
+    });
+    desks = SPLITS_S.map((seconds) => deskAfter(channels, seconds));
+  });
+
+  test('leave one alarm each, with both values and a verdict', () => {
+    const alarms = Object.values(desks[0]!.alarms).filter(({ kind }) => kind === 'level');
+    expect(alarms).toHaveLength(2);
+    expect(new Set(alarms.map(({ passage }) => passage)).size).toBe(2);
+    for (const alarm of alarms) {
+      expect(alarm).toMatchObject({ state: 'returned to normal, unacknowledged', rule: 'deck' });
+      expect(alarm.passage).not.toBeNull();
+      expect(alarm.verdict).not.toBeNull();
+      expect(severityRank(alarm.severity)).toBeGreaterThan(0);
+      // Causal and zero-phase low-pass of the same cut-off see the same vibration: of one size, not of one value.
+      expect(alarm.liveValue! / alarm.recordValue!).toBeGreaterThan(0.5);
+      expect(alarm.liveValue! / alarm.recordValue!).toBeLessThan(2);
+    }
+  });
+
+  test.each(SPLITS_S.slice(1))('leave the same alarms when blocks are of %s s', (seconds) => {
+    expect(inEventTime(desks[SPLITS_S.indexOf(seconds)]!)).toEqual(inEventTime(desks[0]!));
+  });
+});
