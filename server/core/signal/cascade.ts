@@ -47,6 +47,11 @@ export function filterInto(
   let source = input;
   let k = 0;
   let faint = FAINT;
+  for (; k + 4 <= count; k += 4) {
+    filterFour(sections, memory, k, source, output, from, to, faint);
+    source = output;
+    faint = 0;
+  }
   for (; k + 2 <= count; k += 2) {
     filterPair(sections, memory, k, source, output, from, to, faint);
     source = output;
@@ -67,12 +72,7 @@ export function settleAt(cascade: Cascade, value: number): void {
   const { sections, memory } = cascade;
   let x = value;
   for (let k = 0; 2 * k < memory.length; k++) {
-    const at = k * SECTION_WIDTH;
-    const b0 = sections[at]!;
-    const b1 = sections[at + 1]!;
-    const b2 = sections[at + 2]!;
-    const a1 = sections[at + 3]!;
-    const a2 = sections[at + 4]!;
+    const [b0, b1, b2, a1, a2] = row(sections, k);
     const y = (x * (b0 + b1 + b2)) / (1 + a1 + a2);
     const second = b2 * x - a2 * y;
     memory[2 * k + 1] = second;
@@ -81,6 +81,7 @@ export function settleAt(cascade: Cascade, value: number): void {
   }
 }
 
+/** One section. Sums are ordered so that as little as possible waits for y, which the next sample needs. */
 function filterOne(
   sections: Sections,
   memory: Float64Array,
@@ -91,18 +92,13 @@ function filterOne(
   to: number,
   faint: number,
 ): void {
-  const at = k * SECTION_WIDTH;
-  const b0 = sections[at]!;
-  const b1 = sections[at + 1]!;
-  const b2 = sections[at + 2]!;
-  const a1 = sections[at + 3]!;
-  const a2 = sections[at + 4]!;
+  const [b0, b1, b2, a1, a2] = row(sections, k);
   let s1 = memory[2 * k]!;
   let s2 = memory[2 * k + 1]!;
   for (let i = from; i < to; i++) {
     const x = input[i]! + faint;
     const y = b0 * x + s1;
-    s1 = b1 * x - a1 * y + s2;
+    s1 = b1 * x + s2 - a1 * y;
     s2 = b2 * x - a2 * y;
     output[i] = y;
   }
@@ -121,17 +117,8 @@ function filterPair(
   to: number,
   faint: number,
 ): void {
-  const at = k * SECTION_WIDTH;
-  const b0 = sections[at]!;
-  const b1 = sections[at + 1]!;
-  const b2 = sections[at + 2]!;
-  const a1 = sections[at + 3]!;
-  const a2 = sections[at + 4]!;
-  const d0 = sections[at + 5]!;
-  const d1 = sections[at + 6]!;
-  const d2 = sections[at + 7]!;
-  const c1 = sections[at + 8]!;
-  const c2 = sections[at + 9]!;
+  const [b0, b1, b2, a1, a2] = row(sections, k);
+  const [d0, d1, d2, c1, c2] = row(sections, k + 1);
   let s1 = memory[2 * k]!;
   let s2 = memory[2 * k + 1]!;
   let t1 = memory[2 * k + 2]!;
@@ -139,10 +126,10 @@ function filterPair(
   for (let i = from; i < to; i++) {
     const x = input[i]! + faint;
     const y = b0 * x + s1;
-    s1 = b1 * x - a1 * y + s2;
+    s1 = b1 * x + s2 - a1 * y;
     s2 = b2 * x - a2 * y;
     const z = d0 * y + t1;
-    t1 = d1 * y - c1 * z + t2;
+    t1 = d1 * y + t2 - c1 * z;
     t2 = d2 * y - c2 * z;
     output[i] = z;
   }
@@ -150,4 +137,59 @@ function filterPair(
   memory[2 * k + 1] = s2;
   memory[2 * k + 2] = t1;
   memory[2 * k + 3] = t2;
+}
+
+/** Four sections at once, as in `filterPair`. */
+function filterFour(
+  sections: Sections,
+  memory: Float64Array,
+  k: number,
+  input: Float64Array,
+  output: Float64Array,
+  from: number,
+  to: number,
+  faint: number,
+): void {
+  const [p0, p1, p2, p3, p4] = row(sections, k);
+  const [q0, q1, q2, q3, q4] = row(sections, k + 1);
+  const [r0, r1, r2, r3, r4] = row(sections, k + 2);
+  const [s0, s1, s2, s3, s4] = row(sections, k + 3);
+  const at = 2 * k;
+  let p = memory[at]!;
+  let pp = memory[at + 1]!;
+  let q = memory[at + 2]!;
+  let qq = memory[at + 3]!;
+  let r = memory[at + 4]!;
+  let rr = memory[at + 5]!;
+  let s = memory[at + 6]!;
+  let ss = memory[at + 7]!;
+  for (let i = from; i < to; i++) {
+    const x = input[i]! + faint;
+    const y = p0 * x + p;
+    p = p1 * x + pp - p3 * y;
+    pp = p2 * x - p4 * y;
+    const z = q0 * y + q;
+    q = q1 * y + qq - q3 * z;
+    qq = q2 * y - q4 * z;
+    const u = r0 * z + r;
+    r = r1 * z + rr - r3 * u;
+    rr = r2 * z - r4 * u;
+    const v = s0 * u + s;
+    s = s1 * u + ss - s3 * v;
+    ss = s2 * u - s4 * v;
+    output[i] = v;
+  }
+  memory[at] = p;
+  memory[at + 1] = pp;
+  memory[at + 2] = q;
+  memory[at + 3] = qq;
+  memory[at + 4] = r;
+  memory[at + 5] = rr;
+  memory[at + 6] = s;
+  memory[at + 7] = ss;
+}
+
+function row(sections: Sections, k: number): [number, number, number, number, number] {
+  const at = k * SECTION_WIDTH;
+  return [sections[at]!, sections[at + 1]!, sections[at + 2]!, sections[at + 3]!, sections[at + 4]!];
 }

@@ -51,6 +51,9 @@ export type DecayIdentification =
 const FEWEST_SAMPLES = 16;
 /** Above this ratio a pole is a passing disturbance, not a mode of a bridge. */
 const MOST_DAMPED = 0.25;
+/** A second mode whose damping is known less well than this is not reported: it may be a trick of the noise. */
+const MOST_UNCERTAIN = 0.5;
+
 /**
  * Natural frequencies and damping ratios from a free decay seen by one or more channels.
  *
@@ -126,7 +129,9 @@ function report(
   if (modes.length === 0) {
     return none(`no mode between ${hz(purpose.band[0])} and ${hz(purpose.band[1])} Hz stands out of the noise`);
   }
-  const ordered = inOrder(modes, purpose.expectedHz).slice(0, purpose.wanted);
+  const ordered = inOrder(modes, purpose.expectedHz)
+    .filter((mode, i) => i === 0 || mode.dampingStandardError < MOST_UNCERTAIN * mode.dampingRatio)
+    .slice(0, purpose.wanted);
   const residualRatio = energySum(residuals) / grid.energy.reduce((sum, e) => sum + e, 0);
   const { verdict, reasons } = judge(ordered[0]!, residualRatio, residuals, grid, seconds);
   const result = { modes: ordered, noise: noiseOf(residuals, place, grid, fit), residualRatio, verdict };

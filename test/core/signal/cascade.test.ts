@@ -165,7 +165,7 @@ describe('filter cascade', () => {
 });
 
 describe.skipIf(!available('python3-scipy'))('filter cascade against SciPy', () => {
-  it('agrees with sosfilt on the same sections, at rest and settled by sosfilt_zi, to 1e-12', () => {
+  it('agrees with sosfilt on the same sections, at rest and settled by sosfilt_zi, to rounding', () => {
     const x = noise(createRandom(1), 3000).map((v) => v + 5);
     const rows = DESIGNS.map((sections) => {
       const list: number[][] = [];
@@ -182,7 +182,8 @@ for rows in input['rows']:
 `;
     const theirs = scipy(script, { x, rows }, Type.Array(Type.Array(Type.Array(Type.Number()))));
     for (const [i, sections] of DESIGNS.entries()) {
-      expect(largestDifference(filtered(sections, x), theirs[i]?.[0] ?? [])).toBeLessThan(1e-12);
+      // sums in another order: rounding of 1e-16 × 5, magnified up to (rate / 2π edge)² = 25 000 by the slow poles
+      expect(largestDifference(filtered(sections, x), theirs[i]?.[0] ?? [])).toBeLessThan(1.3e-11);
       const cascade = createCascade(sections);
       settleAt(cascade, x[0] ?? NaN);
       const y = new Float64Array(x.length);
