@@ -55,7 +55,9 @@ export interface Archive {
   write(sheet: Sheet, channels: readonly WindowChannel[]): Promise<void>;
   /** Null where the file is missing or thinned. */
   read(place: Place): Promise<WindowChannel[] | null>;
+  /** Where its file is, or would be. */
   path(place: Place): string;
+  has(place: Place): Promise<boolean>;
   /** Drops the samples and keeps the sheet. @returns bytes freed; 0 where there is no file */
   thin(place: Place, sheet: Sheet): Promise<number>;
   /** All sheets, for filling a new database; files that cannot be read go to `damaged`. */
@@ -89,6 +91,7 @@ export async function openArchive(folder: string): Promise<Archive> {
   return {
     write,
     path,
+    has: (place) => exists(path(place)),
     read: async (place) => ((await exists(path(place))) ? readFile(reader, path(place)) : null),
     async thin(place, sheet) {
       const before = await sizeOf(path(place));

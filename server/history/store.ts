@@ -98,7 +98,7 @@ export interface History {
   alarmsOfPassage(passage: string): Promise<Alarm[]>;
   noData(bridge: string, fromMicros: Micros, toMicros: Micros): Promise<NoData[]>;
 
-  /** Null where there is no such passage, or retention has thinned its wave form. */
+  /** Null where there is no such passage, retention has thinned its wave form, or its file is gone. */
   waveform(id: string): Promise<WindowChannel[] | null>;
   /** Path of the Parquet file, on the same condition. */
   waveformFile(id: string): Promise<string | null>;
@@ -210,7 +210,8 @@ function assemble({ clock, database, archive, ledger, definitions, write, writes
     },
     async waveformFile(id) {
       const passage = await withWaveform(id);
-      return passage === null ? null : archive.path(placeOf(passage));
+      if (passage === null || !(await archive.has(placeOf(passage)))) return null;
+      return archive.path(placeOf(passage));
     },
     async applyRetention(rules, nowMicros) {
       const timeZoneOf = (bridge: string): string => definitions.newest(bridge)?.definition.timeZone ?? 'UTC';

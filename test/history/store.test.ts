@@ -124,6 +124,15 @@ describe('a passage', () => {
     expect(await store.waveform(passage.id)).not.toBeNull();
   });
 
+  test('whose file somebody has removed has no wave form, and is still there', async () => {
+    const store = await begun();
+    const passage = await commit(store);
+    await rm((await store.waveformFile(passage.id)) ?? '');
+    expect(await store.waveform(passage.id)).toBeNull();
+    expect(await store.waveformFile(passage.id)).toBeNull();
+    expect((await store.passage(passage.id))?.passage).toEqual(passage);
+  });
+
   test('without its definition is refused as a mistake of the caller', async () => {
     const store = await begun();
     await expect(commit(store, { version: 7 })).rejects.toThrow(/never saved/);

@@ -1,12 +1,22 @@
 import type { Alarm } from '../contract/alarm.ts';
 import { isDeckAcceleration, spanAt, type BridgeDefinition, type Sensor, type Span } from '../contract/bridge.ts';
+import type { ConditionCode } from '../contract/health.ts';
 import type { ChannelMeasures, Passage } from '../contract/passage.ts';
 import { MICROS_PER_SECOND } from '../contract/time.ts';
 import type { DeskState } from './state.ts';
 
 /** A neighbour that should have felt it reads at least this part of the value. */
 const NEIGHBOUR_SHARE = 0.25;
-/** A momentary condition (spike, gap, …) counts against a crossing within this long. */
+/** Conditions that last until they are said to have ended; the others count against a crossing for a moment only. */
+const LASTING: readonly ConditionCode[] = [
+  'silent',
+  'clock drift',
+  'rate wrong',
+  'flat',
+  'noise high',
+  'offset drift',
+  'twin channel',
+];
 const MOMENT_MICROS = 5 * MICROS_PER_SECOND;
 
 /** The alarm with one more reason not to trust its sensor. Each is said once, in alphabetical order: none is the first. */
@@ -35,7 +45,10 @@ export function withTrain(alarm: Alarm): Alarm {
 export function conditionsDoubt(state: DeskState, alarm: Alarm): Alarm {
   const own = alarm.sensor ?? '';
   return (state.conditions[own] ?? [])
-    .filter((condition) => condition.state === 'began' || alarm.raisedMicros - condition.micros <= MOMENT_MICROS)
+    .filter(({ code, state, micros }) => {
+      const lasts = state === 'began' && LASTING.includes(code);
+      return lasts || alarm.raisedMicros - micros <= MOMENT_MICROS;
+    })
     .reduce(
       (doubted, { code }) => withDoubt(doubted, marked(own, code)),
       without(alarm, (reason) => reason.includes(MARKED)),
@@ -58,13 +71,21 @@ export function recordDoubt(definition: BridgeDefinition, alarm: Alarm, passage:
   const sensor = definition.sensors.find(({ id }) => id === alarm.sensor);
   if (sensor === undefined) return alarm;
   const own = passage.channels.find((channel) => channel.sensor === sensor.id);
-  const flagged = (own?.flags ?? []).reduce((doubted, flag) => withDoubt(doubted, marked(sensor.id, flag)), alarm);
+  const flagged = own === undefined ? alarm : flaggedDoubt(alarm, own);
   const value = Math.max(alarm.liveValue ?? 0, (own === undefined ? null : bandPeak(own)) ?? 0);
   const highest = highestNeighbour(definition, sensor, passage);
   if (highest === null || highest.value >= NEIGHBOUR_SHARE * value) return flagged;
   return withDoubt(
     flagged,
     `its neighbours did not feel it, the most was ${highest.value.toFixed(2)} m/s² at ${highest.sensor}`,
+  );
+}
+
+/** The record has looked at the whole window: what it marks counts, and what only live suspected no longer does. */
+function flaggedDoubt(alarm: Alarm, { sensor, flags }: ChannelMeasures): Alarm {
+  return flags.reduce(
+    (doubted, flag) => withDoubt(doubted, marked(sensor, flag)),
+    without(alarm, (reason) => reason.includes(MARKED)),
   );
 }
 

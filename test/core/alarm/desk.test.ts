@@ -175,8 +175,10 @@ describe('a level alarm', () => {
     expect(only(before).doubt).toBe('A1 is marked "spike"');
     const after = run([passed('A1', 'AL', 2.3, DAWN), condition('A1', 'spike', 'happened', DAWN + S)]);
     expect(only(after).doubt).toBe('A1 is marked "spike"');
-    const long = run([condition('A1', 'spike', 'happened', DAWN - 60 * S), passed('A1', 'AL', 2.3, DAWN)]);
+    const long = run([condition('A1', 'spike', 'began', DAWN - 60 * S), passed('A1', 'AL', 2.3, DAWN)]);
     expect(only(long).doubt).toBeNull();
+    const lasting = run([condition('A1', 'flat', 'began', DAWN - 60 * S), passed('A1', 'AL', 2.3, DAWN)]);
+    expect(lasting.alarms['ottermere-ballast-20261201-051233-2']?.doubt).toBe('A1 is marked "flat"');
   });
 
   test('is doubted for the sensor it rests on, not for one that was overtaken', () => {
@@ -241,6 +243,15 @@ describe('the record of a passage', () => {
       acknowledged: null,
     });
     expect(whats(alarm)).toEqual(['raised', 'returned', 'acknowledged', 'corrected']);
+  });
+
+  test('lets go of a mark that only live suspected, and adds its own', () => {
+    const suspected = run([condition('A1', 'spike', 'happened', DAWN), ...live]);
+    expect(only(suspected).doubt).toBe('A1 is marked "spike"');
+    expect(only(run([record({ A1: 3.0, A2: 2.5 })], suspected)).doubt).toBeNull();
+    expect(only(run([record({ A1: 3.0, A2: 2.5 }, { A1: ['clipped'] })], suspected)).doubt).toBe(
+      'A1 is marked "clipped"',
+    );
   });
 
   test('leaves an excursion that still lasts open', () => {
