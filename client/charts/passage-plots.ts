@@ -216,7 +216,7 @@ export function comparisonSpec(
     (most, value) => Math.max(most, Math.abs(value ?? 0)),
     1e-6,
   );
-  const lines = limitLines(limitOf(definition, sensor)?.levels).filter(({ value }) => value < greatest * 1.35);
+  const lines = limitLines(limitOf(definition, sensor)?.levels).filter(({ value }) => value < greatest * 1.1);
   const reach = Math.max(greatest, ...lines.map(({ value }) => value)) * 1.12;
   const unit = UNITS[sensor.quantity];
   return {

@@ -185,7 +185,7 @@ function build(host: HTMLElement, spec: () => PlotSpec, ink: () => Ink, height: 
           const lanes = lanesOf(spec());
           return lanes
             .flatMap((lane) =>
-              ticks(y.from, y.to, u.height / lanes.length / 42).map((tick) => tick - laneOffset(spec(), lane)),
+              ticks(y.from, y.to, u.height / lanes.length / 30).map((tick) => tick - laneOffset(spec(), lane)),
             )
             .toSorted((a, b) => a - b);
         },

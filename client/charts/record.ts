@@ -43,7 +43,7 @@ export function layoutRecord(
   const narrow = width < 560;
   const before = narrow ? 48 : LEFT_WIDE;
   const after = narrow ? 30 : RIGHT_WIDE;
-  const pixelsPerMetre = (width - before - after) / length;
+  const pixelsPerMetre = Math.max(1, width - before - after) / length;
   const fromM = -before / pixelsPerMetre;
   const toM = length + after / pixelsPerMetre;
   const x = linear(fromM, toM, 0, width);

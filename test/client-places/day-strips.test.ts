@@ -1,0 +1,118 @@
+import { describe, expect, it } from 'vitest';
+import type { Day } from '#core/contract/api.ts';
+import {
+  clockChange,
+  hourOfDay,
+  layoutOf,
+  marksOf,
+  midnight,
+  nearestMark,
+  offsetMinutes,
+  shiftDay,
+} from '../../client/charts/days.ts';
+
+const ZONE = 'Europe/Berlin';
+const HOUR = 3_600_000_000;
+const utc = (text: string): number => Date.parse(text) * 1000;
+
+function day(name: string, marks: Day['marks'] = []): Day {
+  return {
+    day: name,
+    startMicros: midnight(name, ZONE),
+    endMicros: midnight(shiftDay(name, 1), ZONE),
+    passages: marks.length,
+    highest: null,
+    above: { AL: 0, IL: 0, IAL: 0 },
+    marks,
+    noData: [],
+  };
+}
+
+describe('the days of a clock change', () => {
+  // Directive 2000/84/EC: clocks change at 01:00 UTC on the last Sundays of March and October.
+  it('has 23 hours when clocks go forward, 25 when they go back, and says so', () => {
+    const spring = day('2026-03-29');
+    const autumn = day('2026-10-25');
+    expect((spring.endMicros - spring.startMicros) / HOUR).toBe(23);
+    expect((autumn.endMicros - autumn.startMicros) / HOUR).toBe(25);
+    expect(clockChange(spring)).toBe('clocks forward 1 h');
+    expect(clockChange(autumn)).toBe('clocks back 1 h');
+    expect(clockChange(day('2026-07-01'))).toBeNull();
+  });
+
+  it('shows the hour on the wall before and after the change, so a timetable path stays one column', () => {
+    expect(hourOfDay(day('2026-10-25'), utc('2026-10-24T23:30:00Z'), ZONE)).toBeCloseTo(1.5, 9);
+    expect(hourOfDay(day('2026-10-25'), utc('2026-10-25T11:30:00Z'), ZONE)).toBeCloseTo(12.5, 9);
+    expect(hourOfDay(day('2026-03-29'), utc('2026-03-29T10:30:00Z'), ZONE)).toBeCloseTo(12.5, 9);
+    expect(hourOfDay(day('2026-07-01'), utc('2026-07-01T10:30:00Z'), ZONE)).toBeCloseTo(12.5, 9);
+  });
+
+  it('never leaves the strip, not even at the end of a day of 25 hours', () => {
+    const autumn = day('2026-10-25');
+    expect(hourOfDay(autumn, autumn.endMicros - 1, ZONE)).toBeLessThanOrEqual(24);
+    expect(hourOfDay(autumn, autumn.startMicros, ZONE)).toBe(0);
+  });
+});
+
+describe('local midnight', () => {
+  it('is the instant the civil day begins, in summer, in winter, and where half hours count', () => {
+    expect(midnight('2026-07-01', ZONE)).toBe(utc('2026-06-30T22:00:00Z'));
+    expect(midnight('2026-12-01', ZONE)).toBe(utc('2026-11-30T23:00:00Z'));
+    expect(midnight('2026-10-26', ZONE)).toBe(utc('2026-10-25T23:00:00Z'));
+    expect(midnight('2026-12-01', 'Asia/Kolkata')).toBe(utc('2026-11-30T18:30:00Z'));
+    expect(midnight('2026-12-01', 'UTC')).toBe(utc('2026-12-01T00:00:00Z'));
+  });
+
+  it('knows how far local time is ahead, also west of Greenwich', () => {
+    expect(offsetMinutes(utc('2026-07-01T12:00:00Z'), ZONE)).toBe(120);
+    expect(offsetMinutes(utc('2026-07-01T12:00:00Z'), 'America/St_Johns')).toBe(-150);
+    expect(offsetMinutes(utc('2026-07-01T12:00:00Z'), 'UTC')).toBe(0);
+  });
+
+  it('goes from day to day over months and leap days', () => {
+    expect(shiftDay('2026-03-01', -1)).toBe('2026-02-28');
+    expect(shiftDay('2028-02-28', 1)).toBe('2028-02-29');
+    expect(shiftDay('2026-12-31', 1)).toBe('2027-01-01');
+  });
+});
+
+describe('marks', () => {
+  const at = midnight('2026-07-01', ZONE);
+  const marks = [
+    { id: 'a', micros: at + 6 * HOUR, peak: 1.75, ofGravest: 0.5, severity: null },
+    { id: 'b', micros: at + 12 * HOUR, peak: 7, ofGravest: 2, severity: 'IAL' as const },
+    { id: 'c', micros: at + 18 * HOUR, peak: null, ofGravest: null, severity: null },
+  ];
+  const days = [day('2026-07-01', marks), day('2026-07-02')];
+
+  it('is as high as its peak over the gravest limit, where a full row is that limit', () => {
+    const layout = layoutOf(days, 1384, ZONE);
+    expect(marksOf(days, layout).map(({ height }) => height)).toEqual([7.5, 22.5, expect.any(Number) as number]);
+  });
+
+  it('shows a passage whose peak is not measurable, too', () => {
+    const layout = layoutOf(days, 1384, ZONE);
+    expect(marksOf(days, layout)[2]!.height).toBeGreaterThanOrEqual(1);
+  });
+
+  it('stands at its hour of the day', () => {
+    const layout = layoutOf(days, 1384, ZONE);
+    const [a, b] = marksOf(days, layout);
+    expect(b!.x).toBeCloseTo((layout.left + layout.right) / 2, 6);
+    expect(a!.x).toBeCloseTo(layout.left + (layout.right - layout.left) / 4, 6);
+  });
+
+  it('is found under the pointer, and nothing is found far from any', () => {
+    const layout = layoutOf(days, 1384, ZONE);
+    const all = marksOf(days, layout);
+    expect(nearestMark(all, layout, all[1]!.x + 3, layout.top + 8)?.id).toBe('b');
+    expect(nearestMark(all, layout, all[1]!.x + 90, layout.top + 8)).toBeNull();
+  });
+
+  it('puts a year on one page', () => {
+    const year = Array.from({ length: 365 }, (_, i) => day(shiftDay('2026-01-01', i)));
+    const layout = layoutOf(year, 1384, ZONE);
+    expect(layout.detail).toBe('months');
+    expect(layout.height).toBeLessThan(1200);
+  });
+});

@@ -1,0 +1,188 @@
+import { describe, expect, it } from 'vitest';
+import type { Alarm } from '#core/contract/alarm.ts';
+import type { PassageView } from '#core/contract/api.ts';
+import { measured, notMeasurable } from '#core/contract/measure.ts';
+import {
+  againstLimit,
+  delayWords,
+  needsAnswer,
+  stepWords,
+  subjectOf,
+  valueOf,
+} from '../../client/charts/alarm-words.ts';
+import { KINDS, uncertainty, withUnit } from '../../client/charts/figure.ts';
+import { timeOf, titleOf, towards, verdictOf } from '../../client/charts/passage-words.ts';
+import { csvOf } from '../../client/charts/table.ts';
+import { trustOf } from '../../client/charts/trust.ts';
+import { bridge, passageOf } from './passage.ts';
+
+const alarm = (changes: Partial<Alarm> = {}): Alarm => ({
+  id: 'a',
+  bridge: 'b',
+  kind: 'level',
+  rule: 'deck',
+  state: 'unacknowledged',
+  severity: 'IL',
+  raisedMicros: 1_790_000_000_000_000,
+  liveValue: 2.85,
+  sensor: 'A1',
+  sensors: ['A1'],
+  recordValue: null,
+  recordSeverity: null,
+  verdict: null,
+  doubt: null,
+  passage: null,
+  passagesAboveInDay: 0,
+  returnedMicros: null,
+  acknowledged: null,
+  steps: [],
+  message: 'm',
+  ...changes,
+});
+
+const view = (changes: Partial<PassageView> = {}): PassageView => ({
+  passage: passageOf({ peak: 2.9 }),
+  definition: bridge,
+  earlier: null,
+  later: null,
+  alarms: [],
+  alike: [],
+  hasWaveform: true,
+  ...changes,
+});
+
+describe('a measured value in print', () => {
+  it('carries 1.96 standard errors, in the digits of its kind', () => {
+    expect(uncertainty(measured(2.94, 0.0153), KINDS.acceleration)).toBe('± 0.03');
+    expect(uncertainty(measured(0.0132, 0.0009), KINDS.damping)).toBe('± 0.2');
+  });
+
+  it('never prints an uncertainty of zero: a small one gets the digit it needs', () => {
+    expect(uncertainty(measured(5.1, 0.001), KINDS.frequency)).toBe('± 0.002');
+  });
+
+  it('says nothing where no error can be given, and nothing is measured', () => {
+    expect(uncertainty(measured(5.1, null), KINDS.frequency)).toBe('');
+    expect(uncertainty(notMeasurable('too short'), KINDS.frequency)).toBe('');
+  });
+
+  it('has its unit', () => {
+    expect(withUnit(0.0132, KINDS.damping)).toBe('1.3\u00a0%');
+    expect(withUnit(-1.44, KINDS.temperature)).toBe('\u22121.4\u00a0°C');
+  });
+});
+
+describe('a passage in words', () => {
+  it('says what crossed, when, and where to', () => {
+    const passage = passageOf({ speedMs: 44.26 });
+    expect(titleOf(passage)).toBe('2 axles, 44.3 m/s');
+    expect(towards(passage, bridge)).toBe('towards km 10.010');
+    expect(towards({ ...passage, direction: 'falling' }, bridge)).toBe('towards km 9.990');
+    expect(timeOf(passage, 'Europe/Berlin')).toBe('Mon 21 Sept 2026, 16:13:22 local (UTC+2), 14:13:22 UTC');
+  });
+
+  it('says what is not measurable instead of leaving it out', () => {
+    const passage = { ...passageOf({}), speedMs: notMeasurable('x'), axleCount: notMeasurable('x'), direction: null };
+    expect(titleOf(passage)).toBe('Train, axles not counted, speed not measurable');
+    expect(towards(passage, bridge)).toBe('direction not measurable');
+  });
+
+  it('never says "below all limits" where no limit holds or nothing was measured', () => {
+    const passage = passageOf({});
+    expect(verdictOf(passage)).toBe('Below all limits');
+    expect(verdictOf({ ...passage, peak: { ...passage.peak, ofGravest: null } })).toBe('No limit holds here');
+    const blind = { ...passage.peak, measured: notMeasurable('all deck channels are dead') };
+    expect(verdictOf({ ...passage, peak: blind })).toContain('not measurable: all deck channels are dead');
+  });
+});
+
+describe('an alarm in words', () => {
+  it('is told by the value of the record once that is known', () => {
+    expect(valueOf(alarm())).toBe(2.85);
+    expect(valueOf(alarm({ recordValue: 2.92 }))).toBe(2.92);
+    expect(againstLimit(alarm({ recordValue: 2.92 }), bridge.limits[0]!.levels)).toBe('0.12 above IL 2.80');
+    expect(againstLimit(alarm({ recordValue: 2.7 }), bridge.limits[0]!.levels)).toBe('0.10 below IL 2.80');
+  });
+
+  it('needs an answer until it is acknowledged, also after it has returned to normal', () => {
+    expect(needsAnswer(alarm({ state: 'returned to normal, unacknowledged' }))).toBe(true);
+    expect(needsAnswer(alarm({ state: 'acknowledged' }))).toBe(false);
+    expect(needsAnswer(alarm({ state: 'normal' }))).toBe(false);
+  });
+
+  it('names what it is about', () => {
+    expect(subjectOf(alarm({ kind: 'no data', rule: 'L-1' }))).toBe('no data from logger L-1');
+    expect(subjectOf(alarm({ kind: 'sensor', rule: 'A2' }))).toBe('sensor A2 not to be trusted');
+  });
+
+  it('tells each step, and how long the server took', () => {
+    const step = {
+      micros: 1e15,
+      takenMicros: 1e15 + 320_000,
+      severity: 'IL' as const,
+      value: 2.85,
+      sensor: 'A1',
+      by: null,
+      note: null,
+    };
+    expect(stepWords({ ...step, what: 'raised' })).toBe('raised, IL 2.85 m/s² on A1');
+    expect(delayWords({ ...step, what: 'raised' })).toBe('taken 0.3 s later');
+    expect(stepWords({ ...step, what: 'corrected', severity: null, value: 2.1 })).toBe(
+      'corrected by the record: below all limits, 2.10 m/s² on A1',
+    );
+    const answer = {
+      ...step,
+      what: 'acknowledged' as const,
+      by: 'K. Ansel',
+      note: 'told desk 2',
+      severity: null,
+      value: null,
+      sensor: null,
+    };
+    expect(stepWords(answer)).toBe('acknowledged by K. Ansel: told desk 2');
+  });
+});
+
+describe('whether the sensor is to be trusted', () => {
+  it('is not known before the passage is', () => {
+    expect(trustOf(alarm(), null).answer).toBe('not known yet');
+  });
+
+  it('is yes when its neighbour felt it too and nothing was wrong with it', () => {
+    const trust = trustOf(alarm({ verdict: 'confirmed' }), view());
+    expect(trust.answer).toBe('yes');
+    expect(trust.reasons.map(({ words }) => words)).toContain('A2, at the same place, read 2.61 m/s², 10 % less');
+  });
+
+  it('is in doubt when the neighbour felt nothing, a condition was met, or the record corrects it', () => {
+    const passage = passageOf({ peak: 2.9 });
+    const quiet = passage.channels.map((channel) =>
+      channel.sensor === 'A2' ? { ...channel, bandPeak: measured(0.2, 0.01) } : channel,
+    );
+    const clipped = passage.channels.map((channel) =>
+      channel.sensor === 'A1' ? { ...channel, flags: ['clipped'] } : channel,
+    );
+    expect(trustOf(alarm(), view({ passage: { ...passage, channels: quiet } })).answer).toBe('with doubt');
+    expect(trustOf(alarm(), view({ passage: { ...passage, channels: clipped } })).answer).toBe('with doubt');
+    expect(trustOf(alarm({ verdict: 'corrected' }), view()).answer).toBe('with doubt');
+    expect(trustOf(alarm({ doubt: 'its neighbour did not feel it' }), null).answer).toBe('with doubt');
+  });
+});
+
+describe('a table as CSV', () => {
+  it('follows RFC 4180: quotes doubled, CRLF, an empty field for a missing value', () => {
+    expect(
+      csvOf({
+        columns: ['t, s', 'note'],
+        rows: [
+          [0.5, 'said "no"'],
+          [1, null],
+        ],
+      }),
+    ).toBe('"t, s",note\r\n0.5,"said ""no"""\r\n1,\r\n');
+  });
+
+  it('keeps a note from running as a formula in a spreadsheet', () => {
+    expect(csvOf({ columns: ['note'], rows: [['=1+1'], [-2.5]] })).toBe("note\r\n'=1+1\r\n-2.5\r\n");
+  });
+});
