@@ -26,8 +26,8 @@ export function comparePositions(a: Position, b: Position): number {
 }
 
 export interface Appended {
-  /** Known at once: appending keeps the order of the calls. */
-  position: Position;
+  /** Known at once, since appending keeps the order of the calls; null where the record was refused at once. */
+  position: Position | null;
   /** Resolves when the record is on the disk; rejects with a SpanbeatError when it could not be written. */
   durable: Promise<void>;
 }
@@ -125,19 +125,17 @@ class SegmentJournal implements Journal {
 
   append(record: JournalRecord): Appended {
     const bytes = recordBytes(record);
+    if (this.#closed) return refused('JOURNAL_WRITE', 'the journal is closed');
+    if (!isRecordable(record)) return refused('MESSAGE_TOO_LARGE', `a record of ${bytes} bytes`);
+    if (this.#queuedBytes + bytes > LIMIT_QUEUED_BYTES) {
+      return refused('MESSAGE_RATE_LIMIT', `${this.#queuedBytes} bytes wait for the disk`);
+    }
     const position = this.#place(bytes);
     const { promise, resolve, reject } = Promise.withResolvers<undefined>();
-    if (this.#closed) reject(new SpanbeatError({ code: 'JOURNAL_WRITE', detail: 'the journal is closed' }));
-    else if (!isRecordable(record)) {
-      reject(new SpanbeatError({ code: 'MESSAGE_TOO_LARGE', detail: `a record of ${bytes} bytes` }));
-    } else if (this.#queuedBytes + bytes > LIMIT_QUEUED_BYTES) {
-      reject(new SpanbeatError({ code: 'MESSAGE_RATE_LIMIT', detail: `${this.#queuedBytes} bytes wait for the disk` }));
-    } else {
-      this.#next.offset += bytes;
-      this.#queuedBytes += bytes;
-      this.#queue.push({ record, position, resolve: () => resolve(undefined), reject });
-      this.#committing ??= this.#commit();
-    }
+    this.#next.offset += bytes;
+    this.#queuedBytes += bytes;
+    this.#queue.push({ record, position, resolve: () => resolve(undefined), reject });
+    this.#committing ??= this.#commit();
     return { position, durable: promise };
   }
 
@@ -326,6 +324,10 @@ class SegmentJournal implements Journal {
   #path(number: number): string {
     return join(this.#folder, name(number));
   }
+}
+
+function refused(code: ErrorCode, detail: string): Appended {
+  return { position: null, durable: Promise.reject(new SpanbeatError({ code, detail })) };
 }
 
 const name = (number: number): string => `${String(number).padStart(10, '0')}.journal`;

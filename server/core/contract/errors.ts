@@ -73,6 +73,10 @@ export const ERRORS = {
     remedy: 'check address, port, TLS and credentials; connecting is tried again by itself',
   },
   BROKER_REFUSED: { what: 'the MQTT broker refused the connection', remedy: 'check user, password and certificates' },
+  CLIENT_REFUSED: {
+    what: 'a client of the embedded broker was refused or dropped',
+    remedy: 'connect with MQTT 3.1.1, publish only what a logger may; for MQTT 5 use an outside broker',
+  },
   PORT_IN_USE: { what: 'another program listens on the port', remedy: 'stop it or choose another port' },
   DISK_FULL: {
     what: 'no space is left for the journal or the history',
@@ -104,6 +108,10 @@ export const ERRORS = {
     remedy: 'start the newer version, or choose another data folder',
   },
   STORE_WRITE: { what: 'the history could not be written', remedy: 'check the disk; writing is tried again' },
+  SNAPSHOT_WRITE: {
+    what: "the pipeline's snapshot could not be written",
+    remedy: 'check the disk; the older one and the journal serve meanwhile',
+  },
   WORKER_FAILED: {
     what: 'a worker that runs pipelines stopped',
     remedy: 'nothing: it is started again from its snapshot and the journal; report it if it comes back',
