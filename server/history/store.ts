@@ -52,7 +52,7 @@ export interface HistoryOptions {
   pause?: (ms: number, signal: AbortSignal) => Promise<void>;
 }
 
-export interface Commit {
+interface Commit {
   passage: Passage;
   channels: readonly WindowChannel[];
   /** Alarms that the passage's record changed or raised. */

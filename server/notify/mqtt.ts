@@ -45,7 +45,7 @@ export interface Publisher {
   close(): Promise<void>;
 }
 
-export interface PublisherCounts {
+interface PublisherCounts {
   sentPassages: number;
   sentAlarms: number;
   heldPassages: number;

@@ -25,7 +25,7 @@ export interface DeskState {
   readonly silences: Readonly<Record<string, string>>;
 }
 
-export interface CurrentPassage {
+interface CurrentPassage {
   readonly id: string;
   readonly onMicros: Micros;
   readonly leftMicros: Micros | null;
@@ -37,7 +37,7 @@ export interface PassageAbove {
   readonly micros: Micros;
 }
 
-export interface LoggerHeard {
+interface LoggerHeard {
   /** Event time of its newest sample. */
   readonly newestMicros: Micros;
   /** Wall clock when it was last heard. */
@@ -86,7 +86,7 @@ export interface DeskStep {
 /** Closed alarms that the desk remembers; older ones are in the store only. */
 export const REMEMBERED_CLOSED = 500;
 /** Open alarms that the desk holds; beyond, the oldest that are back to normal are in the store only (see `recall`). */
-export const HELD_OPEN = 2000;
+const HELD_OPEN = 2000;
 
 /** The state with one alarm put in; the same state where nothing changed. */
 export function withAlarm(state: DeskState, alarm: Alarm): DeskState {
