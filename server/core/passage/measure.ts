@@ -6,6 +6,7 @@ import { MICROS_PER_SECOND, type Micros } from '../contract/time.ts';
 import { mad, median } from '../signal/robust.ts';
 import { readAxles, type AxleReading } from './axles.ts';
 import { bandOfLimit } from './band.ts';
+import { firstDriven, lastDriven } from './forced-edge.ts';
 import { measureFreeDecay } from './free-decay.ts';
 import { noiseSpeed } from './noise-speed.ts';
 import { measureChannel, worseReading, type ChannelReading } from './peaks.ts';
@@ -101,13 +102,7 @@ function findPhases(
   const denied = listening >= 2 && !heard;
   if (span !== null && !denied && span.sustainedSeconds >= least) {
     const notes = listening > 0 ? ['the axle sensors did not see the whole train'] : [];
-    return {
-      onMicros: span.onMicros,
-      offMicros: span.offMicros,
-      foundBy: 'wheel-rail noise',
-      quality: 'usable',
-      notes,
-    };
+    return { ...sharpened(frame, span, record), foundBy: 'wheel-rail noise', quality: 'usable', notes };
   }
   if (frame.whole === true) {
     return {
@@ -119,6 +114,33 @@ function findPhases(
     };
   }
   return null;
+}
+
+/** The free stretches beside a train keep this distance from where noise says that it came and went, s. */
+const EDGE_MARGIN_SECONDS = 0.6;
+/** How far noise and motion may differ, s: beyond that the motion speaks of something else. */
+const EDGE_AGREEMENT_SECONDS = 0.9;
+
+/** Noise finds the train, the deck's own motion finds when its first axle came and its last one left. */
+function sharpened(
+  frame: PassageFrame,
+  span: NoiseSpan,
+  record: readonly RecordChannel[],
+): Pick<Phases, 'onMicros' | 'offMicros'> {
+  const deck = record.filter((channel) => channel.deck && trusted(channel));
+  const margin = EDGE_MARGIN_SECONDS * MICROS_PER_SECOND;
+  const reach = EDGE_AGREEMENT_SECONDS * MICROS_PER_SECOND;
+  const before = { fromMicros: frame.fromMicros, toMicros: span.onMicros - margin };
+  const after = {
+    fromMicros: span.offMicros + margin,
+    toMicros: Math.min(frame.toMicros, span.offMicros + margin + 3 * MICROS_PER_SECOND),
+  };
+  const on = firstDriven(deck, before, span.onMicros + reach);
+  const off = lastDriven(deck, after, span.offMicros - reach);
+  return {
+    onMicros: on !== null && on < span.offMicros ? on : span.onMicros,
+    offMicros: off !== null && off > span.onMicros ? off : span.offMicros,
+  };
 }
 
 /** Axle sensors settle the phases; noise that goes on far longer than they say is worth a word. */

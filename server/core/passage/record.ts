@@ -94,7 +94,7 @@ function arrange(
   }
   const quietTo = ((triggerMicros - startMicros) * rateHz) / MICROS_PER_SECOND - QUIET_MARGIN_SECONDS * rateHz;
   const quiet = quietPart(x, present, Math.floor(quietTo));
-  const missing = present.reduce((count, here) => count - here, length);
+  const missing = missingSamples(present, rateHz);
   const flags = flagsOf(sensor, x, present, missing, quiet.noise);
   const base = quiet.count >= QUIET_SECONDS_LEAST * rateHz ? quiet.mean : meanOf(x, present);
   for (let i = 0; i < length; i++) x[i] = present[i] === 1 ? x[i]! - base : 0;
@@ -113,6 +113,18 @@ function arrange(
     missing,
     flags,
   };
+}
+
+/**
+ * Samples missing between the first and the last; and those after the last, unless it is the fraction of a second by
+ * which a recording ends before its window.
+ */
+function missingSamples(present: Uint8Array, rateHz: number): number {
+  const last = present.lastIndexOf(1);
+  let missing = last + 1;
+  for (let i = 0; i <= last; i++) missing -= present[i]!;
+  const after = present.length - 1 - last;
+  return missing + (after > 0.5 * rateHz ? after : 0);
 }
 
 function quietPart(x: Float64Array, present: Uint8Array, to: number): { mean: number; noise: number; count: number } {

@@ -46,7 +46,7 @@ export function rollingNoise(
     const quiet = power.subarray(0, Math.max(0, quietFrames));
     const least = RULE.floorLeast * RULE.floorLeast;
     const floor = Math.max(quiet.length >= 20 ? quantile(quiet, 0.5) : quantile(power, 0.05), least);
-    return { alongM: channel.sensor.alongM, power, floor };
+    return { alongM: channel.sensor.alongM, power: medianOfFive(power), floor };
   });
   const total = new Float64Array(frames);
   for (const { power, floor } of channels) for (let i = 0; i < frames; i++) total[i]! += power[i]! / floor;
@@ -142,6 +142,15 @@ function stepNear(total: Float64Array, crossing: number): number {
     if (score < best.score) best = { at: from + k, score };
   }
   return best.at;
+}
+
+/** A spike of one cable fills a frame or two; a running median of five leaves steps where they are and spikes out. */
+function medianOfFive(x: Float64Array): Float64Array {
+  const five = new Float64Array(5);
+  return x.map((_, i) => {
+    for (let k = 0; k < 5; k++) five[k] = x[Math.min(x.length - 1, Math.max(0, i + k - 2))]!;
+    return five.sort()[2]!;
+  });
 }
 
 function variance(y: readonly number[], from: number, to: number): number {

@@ -1,0 +1,147 @@
+import { MICROS_PER_SECOND, type Micros } from '../contract/time.ts';
+import { lowpass } from '../signal/butterworth.ts';
+import { factorise, solveInto } from '../signal/positive-definite.ts';
+import { median } from '../signal/robust.ts';
+import { zeroPhase } from '../signal/zero-phase.ts';
+import { indexAt, type RecordChannel } from './record.ts';
+
+/**
+ * Where a bridge begins or ceases to be driven. A deck that nobody drives moves by its own law: each sample follows
+ * from those beside it by one linear recurrence, the same for all channels (the modes' poles). The recurrence is fitted
+ * where the deck is free and carried towards the train; from the first sample that does not obey it on, an axle is on
+ * the bridge. An axle of a tenth of the deck's mass, 50 ms from a bearing, already shows as tenths of m/s².
+ */
+export interface FreeStretch {
+  /** Where the deck is known to be free, next to the edge. */
+  fromMicros: Micros;
+  toMicros: Micros;
+}
+
+/** Band and sample rate of the motion that is looked at: above the first modes, below wheel-rail noise. */
+const BAND_HZ = 20;
+const RATE_HZ = 100;
+/** Order of the recurrence: two for each mode in the band and some for noise. */
+const ORDER = 16;
+/** The free stretch must hold this much, s. */
+const FREE_SECONDS_LEAST = 0.8;
+/** The residual is told from noise by this ratio of mean squares over `HOLD` samples. */
+const RATIO = 16;
+const HOLD = 4;
+const ROUNDS_MOST = 8;
+
+/** Last time, searching from the free stretch back to `untilMicros`, at which the deck was driven; null if it cannot be told. */
+export function lastDriven(deck: readonly RecordChannel[], free: FreeStretch, untilMicros: Micros): Micros | null {
+  const traces = tracesOf(deck, untilMicros, free.toMicros);
+  if (traces === null) return null;
+  const { x, startMicros } = traces;
+  const reversed = x.map((trace) => trace.toReversed());
+  const length = reversed[0]!.length;
+  const fitted = Math.floor(((free.toMicros - free.fromMicros) * RATE_HZ) / MICROS_PER_SECOND);
+  const found = firstDisobedient(reversed, fitted);
+  return found === null ? null : startMicros + Math.round(((length - 1 - found) * MICROS_PER_SECOND) / RATE_HZ);
+}
+
+/** First time, searching from the free stretch on to `untilMicros`, at which the deck is driven. */
+export function firstDriven(deck: readonly RecordChannel[], free: FreeStretch, untilMicros: Micros): Micros | null {
+  const traces = tracesOf(deck, free.fromMicros, untilMicros);
+  if (traces === null) return null;
+  const fitted = Math.floor(((free.toMicros - free.fromMicros) * RATE_HZ) / MICROS_PER_SECOND);
+  const found = firstDisobedient(traces.x, fitted);
+  return found === null ? null : traces.startMicros + Math.round((found * MICROS_PER_SECOND) / RATE_HZ);
+}
+
+/** Low-passed traces on one grid of RATE_HZ between two times, by straight lines between samples. */
+function tracesOf(
+  deck: readonly RecordChannel[],
+  fromMicros: Micros,
+  toMicros: Micros,
+): { x: Float64Array[]; startMicros: Micros } | null {
+  const length = Math.floor(((toMicros - fromMicros) * RATE_HZ) / MICROS_PER_SECOND);
+  const fast = deck.filter(({ rateHz }) => rateHz >= 2 * RATE_HZ);
+  if (fast.length === 0 || length < (FREE_SECONDS_LEAST * RATE_HZ) / 2) return null;
+  const x = fast.map((channel) => {
+    const smooth = zeroPhase(lowpass(4, BAND_HZ, channel.rateHz), channel.x);
+    return Float64Array.from({ length }, (_, i) => {
+      const place = Math.max(0, indexAt(channel, fromMicros + (i * MICROS_PER_SECOND) / RATE_HZ));
+      const whole = Math.min(Math.floor(place), smooth.length - 2);
+      const part = Math.min(1, place - whole);
+      return (1 - part) * smooth[whole]! + part * smooth[whole + 1]!;
+    });
+  });
+  return { x, startMicros: fromMicros };
+}
+
+/**
+ * Index from which on the traces do not follow the recurrence fitted before it. What was found too early by a mode that
+ * had died away in the stretch first fitted is learnt by fitting again up to there, until nothing moves.
+ */
+function firstDisobedient(x: readonly Float64Array[], free: number): number | null {
+  if (free < FREE_SECONDS_LEAST * RATE_HZ) return null;
+  let found: number | null = null;
+  let fitted = free;
+  for (let round = 0; round < ROUNDS_MOST; round++) {
+    const next = search(x, fitted);
+    if (next === null || (found !== null && next <= found + 1)) return next ?? found;
+    found = next;
+    fitted = next - 2;
+  }
+  return found;
+}
+
+function search(x: readonly Float64Array[], fitted: number): number | null {
+  const weights = recurrence(x, fitted);
+  if (weights === null) return null;
+  const residuals = x.map((trace) => residualOf(trace, weights));
+  const floors = residuals.map((r) => robustMeanSquare(r.subarray(ORDER, fitted)));
+  const length = x[0]!.length;
+  let held = 0;
+  for (let i = fitted; i < length; i++) {
+    let ratio = 0;
+    residuals.forEach((r, c) => (ratio += r[i]! ** 2 / (floors[c]! + 1e-12)));
+    held = ratio / x.length > RATIO ? held + 1 : 0;
+    if (held === HOLD) return i - HOLD + 1;
+  }
+  return null;
+}
+
+/** Mean square of normal noise from the median of its squares, 0.4549 times it: a few outliers do not matter. */
+function robustMeanSquare(x: Float64Array): number {
+  return median(x.map((value) => value * value)) / 0.4549;
+}
+
+/** Least squares over all channels, each with its own scale: x[i] = Σ w[k] x[i − 1 − k]. */
+function recurrence(x: readonly Float64Array[], fitted: number): Float64Array | null {
+  const normal = new Float64Array(ORDER * ORDER);
+  const right = new Float64Array(ORDER);
+  for (const trace of x) {
+    const scale = 1 / (meanSquare(trace, 0, fitted) + 1e-12);
+    for (let i = ORDER; i < fitted; i++) {
+      for (let a = 0; a < ORDER; a++) {
+        const xa = trace[i - 1 - a]! * scale;
+        right[a]! += xa * trace[i]!;
+        for (let b = 0; b <= a; b++) normal[a * ORDER + b]! += xa * trace[i - 1 - b]!;
+      }
+    }
+  }
+  // A faint ridge keeps a noiseless record, whose recurrence is shorter, solvable.
+  for (let a = 0; a < ORDER; a++) normal[a * ORDER + a]! *= 1 + 1e-6;
+  const factored = factorise(normal, ORDER);
+  if (factored === null) return null;
+  solveInto(factored, right);
+  return right;
+}
+
+function residualOf(trace: Float64Array, weights: Float64Array): Float64Array {
+  return trace.map((value, i) => {
+    if (i < ORDER) return 0;
+    let predicted = 0;
+    for (let k = 0; k < ORDER; k++) predicted += weights[k]! * trace[i - 1 - k]!;
+    return value - predicted;
+  });
+}
+
+function meanSquare(x: Float64Array, from: number, to: number): number {
+  let sum = 0;
+  for (let i = from; i < to; i++) sum += x[i]! * x[i]!;
+  return sum / Math.max(1, to - from);
+}
