@@ -3,12 +3,15 @@ import { factorise, inverseOf, solveInto } from './positive-definite.ts';
 
 /**
  * Maximum-likelihood fit of damped oscillations with common poles to several channels, each with its own
- * amplitudes, phases, offset and white noise. Amplitudes and offsets are eliminated (variable projection: Golub and
+ * amplitudes, phases, straight base line and white noise. Amplitudes and base lines are eliminated (variable projection: Golub and
  * Pereyra 1973, in Kaufman's form 1975); the poles are found by Levenberg and Marquardt's method.
  */
 export interface DampedFit {
   poles: Pole[];
-  /** Row c holds channel c: offset, then for each pole the factors of e^(−αt) cos ωt and e^(−αt) sin ωt. */
+  /**
+   * Row c holds channel c: level and slope of its base line (`DRIFT` numbers), then for each pole the factors of
+   * e^(−αt) cos ωt and e^(−αt) sin ωt.
+   */
   coefficients: Float64Array[];
   /** Residual sum of squares of each channel, no nearer to zero than rounding allows. */
   residual: Float64Array;
@@ -33,6 +36,8 @@ export interface FitEffort {
   enough: number;
 }
 
+/** Columns of the basis before those of the poles: 1, and the time from the middle of the record. */
+export const DRIFT = 2;
 /** Below this share of a channel's energy the residual is rounding: it is the difference of two sums. */
 const ROUNDING = 1e-13;
 /** Columns of the basis of which less than this is their own are the same to rounding. */
@@ -45,15 +50,15 @@ const LEAST_PIVOT = 1e-5;
  */
 export function fitDamped(data: FitData, start: readonly Pole[], effort: FitEffort): DampedFit | null {
   const n = data.channels[0]!.length;
-  if (n <= 4 * start.length + 1) return null;
-  const columns = Array.from({ length: 4 * start.length + 1 }, () => new Float64Array(n));
+  if (n <= 4 * start.length + DRIFT) return null;
+  const columns = Array.from({ length: 4 * start.length + DRIFT }, () => new Float64Array(n));
   const begun = evaluate(data, start, columns);
   if (begun === null) return null;
   let state: State = begun;
   let damping = 1e-3;
   for (let i = 0; i < effort.steps && damping < 1e9; i++) {
     const step = dampedStep(state, damping);
-    const moved: Pole[] | null = step === null ? null : move(state.poles, step, data.stepS);
+    const moved: Pole[] | null = step === null ? null : move(state.poles, step, n, data.stepS);
     const next: State | null = moved === null ? null : evaluate(data, moved, columns);
     const still = step !== null && relativeSize(state.poles, step) < 1e-11;
     if (next !== null && next.deviance <= state.deviance) {
@@ -74,9 +79,9 @@ export function residualsOf(data: FitData, fit: DampedFit): Float64Array[] {
   return data.channels.map((y, c) => {
     const a = fit.coefficients[c]!;
     const left = new Float64Array(y.length);
-    for (let i = 0; i < y.length; i++) left[i] = y[i]! - a[0]!;
+    for (let i = 0; i < y.length; i++) left[i] = y[i]! - a[0]! - a[1]! * baseTime(i, y.length);
     for (const [k, pole] of fit.poles.entries()) {
-      subtractOscillation(left, a[1 + 2 * k]!, a[2 + 2 * k]!, pole, data.stepS);
+      subtractOscillation(left, a[DRIFT + 2 * k]!, a[DRIFT + 1 + 2 * k]!, pole, data.stepS);
     }
     return left;
   });
@@ -95,7 +100,7 @@ interface State {
 /** Everything needed for one step follows from inner products of the basis, its time-weighted copy, and the data. */
 function evaluate(data: FitData, poles: readonly Pole[], columns: readonly Float64Array[]): State | null {
   const n = data.channels[0]!.length;
-  const linear = 2 * poles.length + 1;
+  const linear = 2 * poles.length + DRIFT;
   const curved = 2 * poles.length;
   fillBasis(columns, poles, data.stepS);
 
@@ -163,13 +168,13 @@ function addInformation(
 ): void {
   const size = gradient.length;
   for (let p = 0; p < size; p += 2) {
-    const reP = a[1 + p]!;
-    const imP = a[2 + p]!;
+    const reP = a[DRIFT + p]!;
+    const imP = a[DRIFT + 1 + p]!;
     gradient[p]! += weight * (-reP * slope[p]! - imP * slope[p + 1]!);
     gradient[p + 1]! += weight * (imP * slope[p]! - reP * slope[p + 1]!);
     for (let q = 0; q < size; q += 2) {
-      const reQ = a[1 + q]!;
-      const imQ = a[2 + q]!;
+      const reQ = a[DRIFT + q]!;
+      const imQ = a[DRIFT + 1 + q]!;
       const cc = weight * projected[p * size + q]!;
       const cs = weight * projected[p * size + q + 1]!;
       const sc = weight * projected[(p + 1) * size + q]!;
@@ -193,13 +198,14 @@ function dampedStep(state: State, damping: number): Float64Array | null {
   return step;
 }
 
-/** Null where a step leads out of what the samples can show. */
-function move(poles: readonly Pole[], step: Float64Array, stepS: number): Pole[] | null {
+/** Null where a step leads out of what the samples can show: less than a cycle is drift, above half the rate nothing. */
+function move(poles: readonly Pole[], step: Float64Array, samples: number, stepS: number): Pole[] | null {
   const moved: Pole[] = [];
+  const lowest = (2 * Math.PI) / (samples * stepS);
   for (const [k, pole] of poles.entries()) {
     const alpha = pole.alpha + step[2 * k]!;
     const omega = pole.omega + step[2 * k + 1]!;
-    if (!(omega > 0 && omega < Math.PI / stepS && alpha > -0.05 * omega && alpha < 2 * omega)) return null;
+    if (!(omega > lowest && omega < Math.PI / stepS && alpha > -0.05 * omega && alpha < 2 * omega)) return null;
     moved.push({ alpha, omega });
   }
   return moved;
@@ -230,18 +236,20 @@ function finish(data: FitData, state: State): DampedFit | null {
 
 /** Samples of one channel less its own unknowns and its share of the common ones. */
 export function degreesOfFreedom(samples: number, modes: number, channels: number): number {
-  return samples - (2 * modes + 1) - (2 * modes) / channels;
+  return samples - (2 * modes + DRIFT) - (2 * modes) / channels;
 }
 
-/** Columns 1, e^(−αt) cos ωt, e^(−αt) sin ωt, …, then the same oscillations times t. */
+/** Columns 1, t, e^(−αt) cos ωt, e^(−αt) sin ωt, …, then the same oscillations times t. */
 function fillBasis(columns: readonly Float64Array[], poles: readonly Pole[], stepS: number): void {
   columns[0]!.fill(1);
-  const weighted = 2 * poles.length;
+  const slope = columns[1]!;
+  for (let i = 0; i < slope.length; i++) slope[i] = baseTime(i, slope.length);
+  const weighted = DRIFT + 2 * poles.length;
   for (const [k, { alpha, omega }] of poles.entries()) {
-    const cosine = columns[1 + 2 * k]!;
-    const sine = columns[2 + 2 * k]!;
-    const cosineT = columns[weighted + 1 + 2 * k]!;
-    const sineT = columns[weighted + 2 + 2 * k]!;
+    const cosine = columns[DRIFT + 2 * k]!;
+    const sine = columns[DRIFT + 1 + 2 * k]!;
+    const cosineT = columns[weighted + 2 * k]!;
+    const sineT = columns[weighted + 1 + 2 * k]!;
     const decay = Math.exp(-alpha * stepS);
     const stepRe = decay * Math.cos(omega * stepS);
     const stepIm = decay * Math.sin(omega * stepS);
@@ -258,6 +266,11 @@ function fillBasis(columns: readonly Float64Array[], poles: readonly Pole[], ste
       re = next;
     }
   }
+}
+
+/** −1 at the first sample, 1 at the last. */
+function baseTime(i: number, samples: number): number {
+  return (2 * i) / (samples - 1) - 1;
 }
 
 function subtractOscillation(

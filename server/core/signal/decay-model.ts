@@ -1,5 +1,5 @@
 import { EigenvalueDecomposition, Matrix } from 'ml-matrix';
-import { fitDamped, residualsOf, type DampedFit, type FitData } from './damped-fit.ts';
+import { DRIFT, fitDamped, residualsOf, type DampedFit, type FitData } from './damped-fit.ts';
 import { decimate, decimationLoss } from './decimate.ts';
 import { createRealTransform, powerOfTwoFrom } from './fourier.ts';
 import { shiftPoles, signalSubspace, type Pole } from './pencil.ts';
@@ -142,7 +142,7 @@ function createChoice(data: FitData): Choice {
       const fit = fitDamped(data, poles, { steps: 12, enough: 0.1 });
       if (fit === null || !distinct(fit.poles, n * data.stepS)) return false;
       const modes = fit.poles.length;
-      const unknowns = 2 * modes + channels * (2 * modes + 1);
+      const unknowns = 2 * modes + channels * (2 * modes + DRIFT);
       const score = fit.deviance + unknowns * Math.log(n * channels);
       if (!(score < bestScore)) return false;
       choice.best = fit;
@@ -216,11 +216,13 @@ function coarser({ channels, energy, stepS }: FitData, upToHz: number): FitData 
 /** Candidate sets of poles below `upToHz`, one for each assumed size of the signal subspace; no set twice. */
 function startPoles({ channels, stepS }: FitData, upToHz: number): Pole[][] {
   const subspace = signalSubspace(channels.map(unitEnergy), stepS, 2 * MOST_MODES);
+  // less than a cycle in the record is drift
+  const slowest = (2 * Math.PI) / (channels[0]!.length * stepS);
   const sets: Pole[][] = [];
   for (let rank = 2; rank <= subspace.rank; rank++) {
     const poles = shiftPoles(subspace, rank)
       .map(tamed)
-      .filter(({ omega }) => omega < 2 * Math.PI * upToHz)
+      .filter(({ omega }) => omega < 2 * Math.PI * upToHz && omega > slowest)
       .sort((p, q) => p.omega - q.omega);
     const fresh = poles.length > 0 && !sets.some((set) => alike(set, poles));
     if (fresh && distinct(poles, channels[0]!.length * stepS)) sets.push(poles);

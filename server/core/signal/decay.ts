@@ -1,4 +1,4 @@
-import { degreesOfFreedom, residualsOf, type DampedFit } from './damped-fit.ts';
+import { degreesOfFreedom, DRIFT, residualsOf, type DampedFit } from './damped-fit.ts';
 import {
   aboutMean,
   createGrid,
@@ -51,13 +51,15 @@ export type DecayIdentification =
 const FEWEST_SAMPLES = 16;
 /** Above this ratio a pole is a passing disturbance, not a mode of a bridge. */
 const MOST_DAMPED = 0.25;
+/** See `ringing`. */
+const RINGING_THRESHOLD = 2.7;
 /** A second mode whose damping is known less well than this is not reported: it may be a trick of the noise. */
 const MOST_UNCERTAIN = 0.5;
 
 /**
  * Natural frequencies and damping ratios from a free decay seen by one or more channels.
  *
- * Model: each channel is a constant plus a sum of damped cosines plus white noise; the poles are common to all
+ * Model: each channel is a straight base line plus a sum of damped cosines plus white noise; the poles are common to all
  * channels. Start values come from the shift-invariant signal subspace, the number of modes from Schwarz's
  * criterion, final values by maximum likelihood with a noise level for each channel, standard errors from the
  * Fisher information. The record must begin after the load has left; it may end in noise.
@@ -121,7 +123,7 @@ function report(
   const spectrum = summedPower(residuals.map(unitEnergy), 1 / grid.stepS);
   const place = channels.map((y) => live.indexOf(y));
   const modes = fit.poles
-    .map((pole, k) => describe(pole, k, grid, fit, spectrum, place))
+    .map((pole, k) => describe(pole, k, grid, fit, residuals, spectrum, place))
     .filter(({ mode }) => {
       const within = mode.frequencyHz >= purpose.band[0] && mode.frequencyHz <= purpose.band[1];
       return within && Math.abs(mode.dampingRatio) < MOST_DAMPED;
@@ -150,6 +152,7 @@ function describe(
   k: number,
   grid: Grid,
   fit: DampedFit,
+  residuals: readonly Float64Array[],
   spectrum: Spectrum,
   place: readonly number[],
 ): Described {
@@ -157,7 +160,9 @@ function describe(
   const natural = Math.hypot(alpha, omega);
   const seconds = grid.channels[0]!.length * grid.stepS;
   const size = 2 * fit.poles.length;
-  const inflation = whiteness(grid) * colour(spectrum, 8 / seconds, omega / (2 * Math.PI));
+  const white = whiteness(grid);
+  const around = colour(spectrum, 8 / seconds, omega / (2 * Math.PI));
+  const inflation = Math.max(white, around, ringing(residuals, fit, k, grid.stepS, white));
   const variance = (byAlpha: number, byOmega: number): number => {
     const a = fit.covariance[2 * k * size + 2 * k]!;
     const aw = fit.covariance[2 * k * size + 2 * k + 1]!;
@@ -169,8 +174,8 @@ function describe(
   const phases = new Float64Array(place.length);
   for (const [c, at] of place.entries()) {
     if (at < 0) continue;
-    const re = fit.coefficients[at]![1 + 2 * k]!;
-    const im = -fit.coefficients[at]![2 + 2 * k]!;
+    const re = fit.coefficients[at]![DRIFT + 2 * k]!;
+    const im = -fit.coefficients[at]![DRIFT + 1 + 2 * k]!;
     amplitudes[c] = Math.hypot(re, im) / Math.hypot(gainRe, gainIm);
     phases[c] = Math.atan2(im * gainRe - re * gainIm, re * gainRe + im * gainIm);
   }
@@ -202,17 +207,86 @@ function filterGain(taps: Float64Array, { alpha, omega }: Pole, rateHz: number):
 
 /**
  * White noise loses some power in the transition band of the decimating filter, so the residuals' variance is a
- * little below the level that holds around the modes.
+ * little below the level that holds around the modes: by this factor.
  */
 function whiteness({ factor, taps }: Grid): number {
   return 1 / (factor * energyOf(taps));
 }
 
-/** How much stronger the residuals are within eight lines around a mode than on average; at least 1, as for white noise. */
+/** How much stronger the residuals are within eight lines around a mode than on average. */
 function colour({ power, stepHz }: Spectrum, reachHz: number, hz: number): number {
   const from = Math.max(1, Math.round((hz - reachHz) / stepHz));
   const to = Math.min(power.length - 1, Math.round((hz + reachHz) / stepHz));
-  return Math.max(1, meanOf(power.subarray(from, to + 1)) / meanOf(power));
+  return meanOf(power.subarray(from, to + 1)) / meanOf(power);
+}
+
+/**
+ * How much stronger the mode itself still rings in the residuals of the record's second half than white noise of
+ * their strength would: wind and traffic keep every mode ringing in all channels together, which disturbs a decay far
+ * more than the noise of the sensors. Channels are combined by the weights with which the fit looks at the mode.
+ * Three lines, weighted 1 : 2 : 1; white noise passes the threshold in about one record of fifty. What
+ * passes is taken for a resonance of the mode's own width, which the lines of a short record blur.
+ */
+function ringing(residuals: readonly Float64Array[], fit: DampedFit, k: number, stepS: number, white: number): number {
+  const n = residuals[0]!.length;
+  const begin = Math.floor(n / 2);
+  const combinedRe = new Float64Array(n - begin);
+  const combinedIm = new Float64Array(n - begin);
+  let expected = 0;
+  for (const [c, y] of residuals.entries()) {
+    const weight = 1 / Math.max(energyOf(y), Number.MIN_VALUE);
+    const re = weight * fit.coefficients[c]![DRIFT + 2 * k]!;
+    const im = weight * fit.coefficients[c]![DRIFT + 1 + 2 * k]!;
+    let late = 0;
+    for (let i = begin; i < n; i++) {
+      combinedRe[i - begin]! += re * y[i]!;
+      combinedIm[i - begin]! += im * y[i]!;
+      late += y[i]! * y[i]!;
+    }
+    expected += (re * re + im * im) * late;
+  }
+  const stepAngle = (2 * Math.PI) / (n - begin);
+  const middle = fit.poles[k]!.omega * stepS;
+  let power = 0;
+  for (const [line, weight] of [
+    [-1, 0.25],
+    [0, 0.5],
+    [1, 0.25],
+  ] as const) {
+    power += weight * linePower(combinedRe, combinedIm, middle + line * stepAngle);
+  }
+  const ratio = expected > 0 ? power / expected : 1;
+  return ratio > RINGING_THRESHOLD * white ? ratio * blur(fit.poles[k]!.alpha, (n - begin) * stepS) : white;
+}
+
+/**
+ * What a fit sees of a resonance of half width alpha over what three lines of a record show of it, weighted 1 : 2 : 1.
+ * The fit weighs frequencies by the spectrum of t e^(−αt) and so sees 3/4 of the resonance's top, 2/α; a line at the
+ * distance d from it shows 2 Re[1/s − (1 − e^(−sT)) / (s² T)] with s = α + i d (the transform of e^(−α|τ|) over T).
+ */
+function blur(alpha: number, seconds: number): number {
+  const a = Math.max(alpha * seconds, 1e-3);
+  const shown = (d: number): number => {
+    const square = a * a + d * d;
+    const fade = Math.exp(-a);
+    const re = 1 - fade * Math.cos(d);
+    const im = fade * Math.sin(d);
+    return 2 * (a / square - (re * (a * a - d * d) + im * 2 * a * d) / (square * square));
+  };
+  return Math.max(1, 1.5 / a / (0.5 * shown(0) + 0.5 * shown(2 * Math.PI)));
+}
+
+/** |Σ (re + i im) e^(−i angle n)|² */
+function linePower(re: Float64Array, im: Float64Array, angle: number): number {
+  let sumRe = 0;
+  let sumIm = 0;
+  for (let i = 0; i < re.length; i++) {
+    const cos = Math.cos(angle * i);
+    const sin = Math.sin(angle * i);
+    sumRe += re[i]! * cos + im[i]! * sin;
+    sumIm += im[i]! * cos - re[i]! * sin;
+  }
+  return sumRe * sumRe + sumIm * sumIm;
 }
 
 function inOrder(modes: Described[], expectedHz: number | undefined): DecayMode[] {
