@@ -6,6 +6,13 @@ import { SI_UNIT } from '#core/contract/units.ts';
 /** Rows put together before they are handed on. */
 const ROWS_PER_CHUNK = 2000;
 
+/** Samples of one sensor, in order of time. */
+export interface CsvTrack {
+  sensor: string;
+  rateHz: number;
+  runs: readonly { startMicros: Micros; samples: Float32Array | Float64Array }[];
+}
+
 /**
  * A passage's wave form as CSV: `time` in ISO 8601 UTC with microseconds, one column a sensor with its unit, one row
  * each moment at which any of them has a sample. A sensor of a lower rate, or in a gap, leaves its field empty. Read
@@ -20,8 +27,23 @@ export async function* csvOfWindow(
   channels: readonly WindowChannel[],
 ): AsyncGenerator<string> {
   const unitOf = new Map(definition.sensors.map(({ id, quantity }) => [id, SI_UNIT[quantity]]));
-  yield `time,${channels.map(({ sensor }) => `${sensor} [${unitOf.get(sensor) ?? '-'}]`).join(',')}\n`;
-  const cursors = channels.map(createCursor);
+  yield csvHeader(channels.map(({ sensor }) => `${sensor} [${unitOf.get(sensor) ?? '-'}]`));
+  for (const rows of csvRows(channels)) {
+    yield rows;
+    // The caller may be slow, the window long: others get their turn.
+    await new Promise((resolve) => setImmediate(resolve));
+  }
+}
+
+export const csvHeader = (columns: readonly string[]): string => `time,${columns.join(',')}\n`;
+
+/**
+ * Rows under such a header, one column a track.
+ *
+ * @yields text, some thousand rows at a time
+ */
+export function* csvRows(tracks: readonly CsvTrack[]): Generator<string> {
+  const cursors = tracks.map(createCursor);
   let rows: string[] = [];
   for (;;) {
     const micros = Math.min(...cursors.map((cursor) => cursor.micros));
@@ -32,8 +54,6 @@ export async function* csvOfWindow(
     if (rows.length === ROWS_PER_CHUNK) {
       yield `${rows.join('\n')}\n`;
       rows = [];
-      // The caller may be slow, the window long: others get their turn.
-      await new Promise((resolve) => setImmediate(resolve));
     }
   }
   if (rows.length > 0) yield `${rows.join('\n')}\n`;
@@ -45,16 +65,16 @@ interface Cursor {
   next(): string;
 }
 
-function createCursor({ runs, rateHz }: WindowChannel): Cursor {
+function createCursor({ runs, rateHz }: CsvTrack): Cursor {
   let run = 0;
   let index = 0;
   const cursor: Cursor = {
     micros: Infinity,
     next() {
-      const text = float32Text(runs[run]!.samples[index]!);
+      const value = runs[run]!.samples[index]!;
       index++;
       settle();
-      return text;
+      return Math.fround(value) === value ? float32Text(value) : Number.isNaN(value) ? 'NaN' : String(value);
     },
   };
   const settle = (): void => {
@@ -70,12 +90,11 @@ function createCursor({ runs, rateHz }: WindowChannel): Cursor {
 }
 
 /**
- * The shortest decimal that reads back to the same float32; empty for NaN. Nine digits always suffice (IEEE 754-2008, 5.12.2).
+ * The shortest decimal that reads back to the same float32. Nine digits always suffice (IEEE 754-2008, 5.12.2).
  *
  * @example float32Text(Math.fround(0.1)) // '0.1'
  */
 export function float32Text(value: number): string {
-  if (Number.isNaN(value)) return '';
   if (Object.is(value, -0)) return '-0';
   for (let digits = 6; digits < 9; digits++) {
     const short = Number(value.toPrecision(digits));

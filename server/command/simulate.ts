@@ -1,0 +1,214 @@
+import { open, writeFile } from 'node:fs/promises';
+import { setTimeout as sleep } from 'node:timers/promises';
+import type { SampleBlock } from '#core/contract/block.ts';
+import { bridgeLengthM, type BridgeDefinition } from '#core/contract/bridge.ts';
+import { SpanbeatError } from '#core/contract/errors.ts';
+import { MICROS_PER_SECOND, type Micros } from '#core/contract/time.ts';
+import { createLoggers } from '../../simulator/logger.ts';
+import { bridgeParameters } from '../../simulator/parameters.ts';
+import { offMicros, type PassageEvent } from '../../simulator/passage.ts';
+import { connectLogger, type LoggerPublisher } from '../../simulator/publisher.ts';
+import { RandomStream } from '../../simulator/random.ts';
+import { createBridgeSimulation } from '../../simulator/simulation.ts';
+import { createTrain, TRAIN_TYPES, type TrainType } from '../../simulator/train.ts';
+import type { PassageTruth } from '../../simulator/truth.ts';
+import { readDefinition } from '../definition.ts';
+import { csvHeader, csvRows } from '../exchange/csv-text.ts';
+import { definitionFile } from './definition-file.ts';
+import { complain, complainOf, EXIT, type Console } from './outcome.ts';
+
+export interface SimulateSettings {
+  /** Definition file, or id of a bridge of the demonstration. */
+  bridge: string;
+  train: TrainType | 'mixed';
+  /** Passages. */
+  count: number;
+  seed: number;
+  /** Speed of all trains, m/s; by the type of train where null. */
+  speedMs: number | null;
+  direction: 'rising' | 'falling' | 'both';
+  /** CSV file, `-` for standard output, or an MQTT address. */
+  to: string;
+  /** First level of the topics. */
+  root: string;
+  username?: string | undefined;
+  password?: string | undefined;
+  /** Keep pace with the clock; else as fast as the receiver takes it. */
+  realTime: boolean;
+  startMicros: Micros | null;
+  /** File for the truth; beside a CSV file where null. */
+  truth: string | null;
+}
+
+/** Quiet before the first train, and from the last axle of one to the first of the next, s. */
+const BEFORE_S = 20;
+const BETWEEN_S = 30;
+/** Samples are made in stretches of this length, s. */
+const STRETCH_S = { fast: 1, realTime: 0.2 } as const;
+/** Beginning of a simulated CSV where none is given: so that the same command gives the same file. */
+const DEFAULT_START_MICROS: Micros = 1_798_787_700 * MICROS_PER_SECOND;
+
+const SPEEDS_MS: Readonly<Record<TrainType, readonly [number, number]>> = {
+  intercity: [40, 44.4],
+  'regional multiple unit': [30, 39],
+  'block freight': [20, 27],
+  'light engine': [22, 33],
+  'tamping machine': [17, 25],
+};
+
+/** Where simulated blocks go. */
+interface Sink {
+  take(blocks: readonly SampleBlock[]): Promise<void>;
+  close(): Promise<void>;
+}
+
+/** `simulate`: trains over a bridge, to a file or a broker, with the truth beside. @returns exit code */
+export async function simulate(settings: SimulateSettings, console: Console): Promise<number> {
+  const reading = await readDefinition(definitionFile(settings.bridge));
+  if (!reading.ok) return complain(reading.complaints, console);
+  const { definition } = reading.value;
+  try {
+    const sink = isMqtt(settings.to)
+      ? await mqttSink(definition, settings, console)
+      : await csvSink(definition, settings.to, console);
+    const truths = await run(definition, settings, sink);
+    await writeTruth(definition, settings, truths, console);
+    return EXIT.good;
+  } catch (error) {
+    return complainOf(error, console);
+  }
+}
+
+export const isMqtt = (to: string): boolean => /^(mqtts?|tcp|ssl|tls|wss?):\/\//.test(to);
+
+async function run(definition: BridgeDefinition, settings: SimulateSettings, sink: Sink): Promise<PassageTruth[]> {
+  const { events, lengthS } = plan(definition, settings);
+  const startMicros = startOf(settings, lengthS);
+  const parameters = bridgeParameters(definition);
+  const simulation = createBridgeSimulation({ definition, parameters, seed: settings.seed, startMicros });
+  const loggers = createLoggers(definition);
+  const stretchS = settings.realTime ? STRETCH_S.realTime : STRETCH_S.fast;
+  const begun = performance.now();
+  const truths: PassageTruth[] = [];
+  const waiting = events.map((event) => ({ ...event, onMicros: event.onMicros + startMicros }));
+  try {
+    for (let stretch = 1; (stretch - 1) * stretchS < lengthS; stretch++) {
+      const toMicros = startMicros + Math.round(stretch * stretchS * MICROS_PER_SECOND);
+      // An hour ahead is early enough; thousands of events at once would be looked through again and again.
+      while (waiting[0] !== undefined && waiting[0].onMicros < toMicros + 3600 * MICROS_PER_SECOND) {
+        simulation.schedule(waiting.shift()!);
+      }
+      await sink.take(loggers.gather(simulation.advance(toMicros)));
+      truths.push(...simulation.takeTruths());
+      if (settings.realTime) await sleep(Math.max(0, stretch * stretchS * 1000 - (performance.now() - begun)));
+    }
+  } finally {
+    await sink.close();
+  }
+  return truths;
+}
+
+/** The trains, with times from the beginning, and how long all of it takes. */
+function plan(
+  definition: BridgeDefinition,
+  { train, count, seed, speedMs, direction }: SimulateSettings,
+): { events: PassageEvent[]; lengthS: number } {
+  const random = new RandomStream(seed, 'simulate');
+  const events: PassageEvent[] = [];
+  let onS = BEFORE_S;
+  for (let number = 0; number < count; number++) {
+    const type = train === 'mixed' ? random.pick(TRAIN_TYPES) : train;
+    const drawn = Math.round(random.uniform(...SPEEDS_MS[type]) * 100) / 100;
+    const way = random.chance(0.5) ? 'rising' : 'falling';
+    const event: PassageEvent = {
+      kind: 'passage',
+      train: createTrain(type, seed * 1000 + number),
+      onMicros: Math.round(onS * MICROS_PER_SECOND),
+      speedMs: speedMs ?? drawn,
+      direction: direction === 'both' ? way : direction,
+    };
+    events.push(event);
+    onS = offMicros(event, bridgeLengthM(definition)) / MICROS_PER_SECOND + BETWEEN_S;
+  }
+  return { events, lengthS: Math.ceil(onS) };
+}
+
+function startOf({ startMicros, to, realTime }: SimulateSettings, lengthS: number): Micros {
+  if (startMicros !== null) return startMicros;
+  if (!isMqtt(to)) return DEFAULT_START_MICROS;
+  const nowS = Math.floor(Date.now() / 1000);
+  // A server believes no time ahead of its clock, so what is sent fast lies in the past.
+  return (realTime ? nowS : nowS - lengthS) * MICROS_PER_SECOND;
+}
+
+async function csvSink(definition: BridgeDefinition, file: string, console: Console): Promise<Sink> {
+  const ids = definition.sensors.map(({ id }) => id);
+  const handle =
+    file === '-' ? null : await open(file, 'w').catch((error: unknown) => Promise.reject(unwritable(file, error)));
+  const write = async (text: string): Promise<void> => {
+    if (handle === null) await console.out(text);
+    else await handle.write(text).catch((error: unknown) => Promise.reject(unwritable(file, error)));
+  };
+  await write(csvHeader(ids));
+  return {
+    async take(blocks) {
+      const tracks = definition.sensors.map(({ id, rateHz }) => ({
+        sensor: id,
+        rateHz,
+        runs: blocks.flatMap(({ startMicros, channels }) =>
+          channels.filter(({ sensor }) => sensor === id).map(({ samples }) => ({ startMicros, samples })),
+        ),
+      }));
+      for (const rows of csvRows(tracks)) await write(rows);
+    },
+    close: async () => handle?.close(),
+  };
+}
+
+async function mqttSink(definition: BridgeDefinition, settings: SimulateSettings, console: Console): Promise<Sink> {
+  const { to, root, username, password } = settings;
+  const publishers = new Map<string, LoggerPublisher>();
+  try {
+    for (const { id } of definition.loggers) {
+      const onTrouble = (reason: string): void => console.err(`note: ${id}: ${reason}\n`);
+      const options = { brokerUrl: to, root, definition, logger: id, username, password, onTrouble };
+      publishers.set(id, await connectLogger(options));
+    }
+  } catch (error) {
+    const refused = error instanceof Error && 'code' in error && typeof error.code === 'number';
+    const detail = error instanceof Error && error.message !== '' ? error.message : String(error);
+    throw new SpanbeatError({ code: refused ? 'BROKER_REFUSED' : 'BROKER_UNREACHABLE', where: to, detail });
+  }
+  return {
+    async take(blocks) {
+      for (const block of blocks) await publishers.get(block.logger)?.publish(block);
+    },
+    async close() {
+      for (const publisher of publishers.values()) await publisher.stop();
+    },
+  };
+}
+
+async function writeTruth(
+  definition: BridgeDefinition,
+  { to, truth, seed }: SimulateSettings,
+  truths: readonly PassageTruth[],
+  console: Console,
+): Promise<void> {
+  const beside = to === '-' || isMqtt(to) ? null : `${to.replace(/\.csv$/i, '')}.truth.json`;
+  const file = truth ?? beside;
+  if (file === null) return;
+  const content = { bridge: definition.id, seed, parameters: bridgeParameters(definition), passages: truths };
+  try {
+    await writeFile(file, `${JSON.stringify(content, null, 2)}\n`);
+  } catch (error) {
+    throw unwritable(file, error);
+  }
+  console.err(`note: the truth of ${truths.length} passages is in ${file}\n`);
+}
+
+function unwritable(file: string, error: unknown): SpanbeatError {
+  const full = error instanceof Error && 'code' in error && error.code === 'ENOSPC';
+  const detail = error instanceof Error ? error.message : String(error);
+  return new SpanbeatError({ code: full ? 'DISK_FULL' : 'FILE_UNWRITABLE', where: file, detail });
+}
