@@ -7,8 +7,17 @@ import { zoneOf } from './time.ts';
 /** Definitions of bridges, each asked once and kept for all places; asked anew when the server runs anew. */
 const kept = new Map<string, Asked<BridgeView>>();
 
+/**
+ * How many answers have come. A derived value does not follow state that was born in it, so what is asked for the first
+ * time inside one is told of its answer by this count.
+ */
+class Answers {
+  count = $state.raw(0);
+}
+const answers = new Answers();
+
 export function viewOf(bridge: string): Asked<BridgeView> {
-  const found = kept.get(bridge);
+  const found = answers.count >= 0 ? kept.get(bridge) : undefined;
   if (found) return found;
   const asked = new Asked<BridgeView>();
   kept.set(bridge, asked);
@@ -18,7 +27,8 @@ export function viewOf(bridge: string): Asked<BridgeView> {
 }
 
 export function askAgain(bridge: string): void {
-  void untrack(() => kept.get(bridge)?.ask((signal) => api.bridge(bridge, { signal })));
+  const asked = untrack(() => kept.get(bridge));
+  void asked?.ask((signal) => api.bridge(bridge, { signal })).then(() => (answers.count += 1));
 }
 
 export function askAllAgain(): void {

@@ -74,6 +74,7 @@ const LOOK = [
   'font-size',
   'font-weight',
   'text-anchor',
+  'paint-order',
 ] as const;
 
 /** A copy whose elements carry their computed look as attributes, and without what is hidden. */

@@ -156,9 +156,12 @@ export function spectrumSpec(
   const within = [...forced, ...free].filter((value, i): value is number => {
     return value !== null && value > 0 && hertz[i % length]! <= upToHz;
   });
-  const top = Math.max(...within, 1e-3);
+  const top = within.reduce((most, value) => Math.max(most, value), 1e-3);
   const to = 10 ** (Math.ceil(Math.log10(top) * 2) / 2);
-  const from = Math.max(10 ** Math.floor(Math.log10(Math.min(...within, top))), to / 1e5);
+  const from = Math.max(
+    10 ** Math.floor(Math.log10(within.reduce((least, value) => Math.min(least, value), top))),
+    to / 1e5,
+  );
   const floor = (values: (number | null)[]): (number | null)[] =>
     values.map((value) => (value === null ? null : Math.max(value, from)));
   return {

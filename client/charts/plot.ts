@@ -55,6 +55,8 @@ export interface Plot {
   zoom(factor: number): void;
   /** Moves the cursor by pixels. */
   step(pixels: number): void;
+  /** Takes the cursor away. */
+  leave(): void;
   readonly canvas: HTMLCanvasElement;
   destroy(): void;
 }
@@ -112,6 +114,9 @@ export function mountPlot(host: HTMLElement, first: PlotSpec, height: number, re
         left: left < 0 ? width / 2 : Math.max(0, Math.min(width, left + pixels)),
         top: plot.over.clientHeight / 2,
       });
+    },
+    leave() {
+      plot.setCursor({ left: -10, top: -10 });
     },
     get canvas() {
       return plot.ctx.canvas;

@@ -32,6 +32,7 @@ export interface RecordLayout {
 
 const LEFT_WIDE = 92;
 const RIGHT_WIDE = 148;
+const GREATEST_PX_PER_M = 36;
 
 export function layoutRecord(
   bridge: BridgeDefinition,
@@ -41,8 +42,10 @@ export function layoutRecord(
 ): RecordLayout {
   const length = bridgeLengthM(bridge);
   const narrow = width < 560;
-  const before = narrow ? 48 : LEFT_WIDE;
-  const after = narrow ? 30 : RIGHT_WIDE;
+  // On wide screens the drawing keeps a readable scale and shows more of the approaches instead.
+  const spare = narrow ? 0 : Math.max(0, width - LEFT_WIDE - RIGHT_WIDE - length * GREATEST_PX_PER_M);
+  const before = narrow ? 48 : LEFT_WIDE + spare / 2;
+  const after = narrow ? 30 : RIGHT_WIDE + spare / 2;
   const pixelsPerMetre = Math.max(1, width - before - after) / length;
   const fromM = -before / pixelsPerMetre;
   const toM = length + after / pixelsPerMetre;
