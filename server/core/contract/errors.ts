@@ -68,6 +68,7 @@ export const ERRORS = {
   },
   RECORDING_TIME: { what: 'the time column cannot be understood', remedy: 'use seconds, Unix epoch, or ISO 8601' },
   // machine and neighbours
+  FILE_UNWRITABLE: { what: 'the file cannot be written', remedy: 'check path, permissions and space' },
   BROKER_UNREACHABLE: {
     what: 'the MQTT broker does not answer',
     remedy: 'check address, port, TLS and credentials; connecting is tried again by itself',
