@@ -33,7 +33,7 @@ export function readYaml(text: string, file: string): YamlReading {
     lineCounter: lines,
     prettyErrors: false,
     stringKeys: true,
-    logLevel: 'silent',
+    logLevel: 'error',
   });
   const at = (offset: number): { line: number; column: number } => {
     const { line, col } = lines.linePos(offset);

@@ -2,10 +2,10 @@ import { Command, CommanderError, InvalidArgumentError, Option } from 'commander
 import { sentence } from '#core/contract/errors.ts';
 import { EARLIEST_MICROS, LATEST_MICROS, type Micros } from '#core/contract/time.ts';
 import { calendarMicros } from '../exchange/time-text.ts';
-import { DEFAULT_WEB } from '../settings.ts';
+import { DEFAULT_WEB, LOG_LEVELS, type DemonstrationSettings } from '../settings.ts';
 import { EXIT, type Console } from './outcome.ts';
 import { SCHEMAS } from './schema.ts';
-import { LOG_LEVELS, settingsOf, type ServeOptions } from './serve.ts';
+import { settingsOf, type ServeOptions } from './serve.ts';
 
 /** Bodies are loaded when they are called for: help and usage errors need none of them. */
 export interface Program {
@@ -96,7 +96,7 @@ function addServe(program: Command, set: SetExit): void {
     .command('serve')
     .description('Run the server: take samples over MQTT, find and measure passages, raise alarms, show all of it.')
     .option('-s, --settings <file>', 'YAML file of settings; options here go before it')
-    .option('-b, --bridges <folder>', 'definitions, one YAML file a bridge (bridges)')
+    .option('-b, --bridges <path...>', 'definition files, or folders of them (bridges)')
     .option('-d, --data <folder>', 'journal, history and archive (.spanbeat/data)')
     .option('--host <address>', 'address of the page; others than 127.0.0.1 are open to the network (127.0.0.1)')
     .option('-p, --port <number>', `port of the page (${DEFAULT_WEB.port})`, port)
@@ -104,7 +104,7 @@ function addServe(program: Command, set: SetExit): void {
     .option('--broker-host <address>', 'address of the embedded broker (127.0.0.1)')
     .option('--broker-port <number>', 'port of the embedded broker (1883, or the next that is free)', port)
     .option('--client-id <name>', 'under which the outside broker keeps the session')
-    .option('--user <name>', 'for the outside broker; its password is taken from SPANBEAT_BROKER_PASSWORD')
+    .option('--user <name>', 'for the outside broker; its password is taken from SPANBEAT_MQTT_PASSWORD')
     .option('--ca <file>', "PEM: authority that signed the broker's certificate")
     .option('--cert <file>', 'PEM: certificate of this client')
     .option('--key <file>', 'PEM: its key')
@@ -128,18 +128,22 @@ function addDemo(program: Command, set: SetExit): void {
     .command('demo')
     .description('Run a server over three invented bridges with simulated loggers and trains.')
     .option('-d, --data <folder>', 'journal, history and archive of the demonstration', '.spanbeat/demo')
-    .option('--host <address>', 'address of the page (127.0.0.1)')
-    .option('-p, --port <number>', `port of the page (${DEFAULT_WEB.port})`, port)
+    .option('--host <address>', 'address of the page', DEFAULT_WEB.host)
+    .option('-p, --port <number>', 'port of the page', port, DEFAULT_WEB.port)
     .option('--seed <number>', 'other trains, other noise', whole, 1)
-    .option('--past-days <days>', 'days before now to look back on', wholeFromZero, 7)
+    .option('--past-days <days>', 'days before now to look back on, measured at the first start', wholeFromZero, 7)
     .addOption(new Option('--log <level>', 'how much is told').choices(LOG_LEVELS).default('warn'))
-    .action(async ({ seed, pastDays, ...options }: ServeOptions & { seed: number; pastDays: number }) => {
-      const settings = await settingsOf(options);
+    .action(async ({ data: dataFolder, log: logLevel, ...options }: DemoOptions) => {
       const { demonstration } = await import('../app.ts');
-      await demonstration(settings, { seed, pastDays });
+      await demonstration({ ...options, dataFolder, logLevel });
       set(null);
     });
 }
+
+type DemoOptions = Omit<DemonstrationSettings, 'dataFolder' | 'logLevel'> & {
+  data: string;
+  log: DemonstrationSettings['logLevel'];
+};
 
 function addAnalyse(program: Command, console: Console, set: SetExit): void {
   program

@@ -1,10 +1,10 @@
 import { SpanbeatError } from '#core/contract/errors.ts';
-import { readSettings, type GivenSettings, type Settings } from '../settings.ts';
+import { readSettings, type GivenSettings, type LogLevel, type ServerSettings } from '../settings.ts';
 
 /** Options of `serve` as the command line gives them; what is absent is left to environment, file and default. */
 export interface ServeOptions {
   settings?: string;
-  bridges?: string;
+  bridges?: string[];
   data?: string;
   host?: string;
   port?: number;
@@ -25,11 +25,8 @@ export interface ServeOptions {
   log?: LogLevel;
 }
 
-export const LOG_LEVELS = ['silent', 'error', 'warn', 'info', 'debug'] as const;
-export type LogLevel = (typeof LOG_LEVELS)[number];
-
 /** @throws SpanbeatError SETTINGS_INVALID */
-export async function settingsOf(options: ServeOptions): Promise<Settings> {
+export async function settingsOf(options: ServeOptions): Promise<ServerSettings> {
   const flags = flagsOf(options);
   const reading = await readSettings({ file: options.settings, flags, environment: process.env });
   if (!reading.ok) throw new SpanbeatError(reading.complaint);
@@ -40,7 +37,7 @@ function flagsOf(options: ServeOptions): GivenSettings {
   const { broker: url, brokerHost, brokerPort, clientId, user, ca, cert, key } = options;
   const flags = {
     data: options.data,
-    definitions: options.bridges,
+    bridges: options.bridges,
     root: options.root,
     broker: given({ url, host: brokerHost, port: brokerPort, clientId, user, ca, cert, key }),
     web: given({ host: options.host, port: options.port, origins: options.origin }),
