@@ -36,7 +36,7 @@ export function verdictOf(passage: Passage): string {
 
 /** The low-pass that the limits look through, as it was realised. */
 export function filterWords({ filter }: Passage['provenance']): string {
-  return `${filter.kind}, order ${filter.order}, up to ${fixed(filter.upToHz, 1)} Hz, ${filter.phase} phase, by ${filter.rule}`;
+  return `${filter.kind}, order ${filter.order}, ${filter.phase}; up to ${fixed(filter.upToHz, 1)} Hz, set by ${filter.rule}`;
 }
 
 export function phaseWords({ phases }: Passage): string {
