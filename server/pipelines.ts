@@ -1,0 +1,455 @@
+import { availableParallelism } from 'node:os';
+import { setImmediate as turn, setTimeout as sleep } from 'node:timers/promises';
+import { Worker } from 'node:worker_threads';
+import type { SampleBlock } from '#core/contract/block.ts';
+import type { BridgeDefinition } from '#core/contract/bridge.ts';
+import type { Complaint } from '#core/contract/errors.ts';
+import type { SensorHealth } from '#core/contract/health.ts';
+import type { PipelineOutput } from '#core/contract/pipeline.ts';
+import { MICROS_PER_SECOND, sampleMicros, type Micros } from '#core/contract/time.ts';
+import { PIPELINE_VERSION } from '#core/passage/pipeline.ts';
+import { isAfter, mismatchOf, newFeed, newer, newThread, oldest, release, type Feed, type Thread } from './feed.ts';
+import { comparePositions, type Journal, type Position } from './ingest/journal.ts';
+import type { JournalRecord } from './ingest/journal-record.ts';
+import { readSnapshot, removeSnapshot, writeSnapshot, type Snapshot } from './snapshot.ts';
+import type { FromWorker, ToWorker } from './worker.ts';
+
+/** What the main thread knows of a bridge and keeps in its snapshots. */
+export interface BridgeMemory {
+  loggers: Record<string, Micros>;
+  sensors: SensorHealth[];
+}
+
+export interface PipelinesOptions {
+  bridges: readonly { definition: BridgeDefinition; version: number }[];
+  /** Folder of the snapshots. */
+  folder: string;
+  journal: Pick<Journal, 'readFrom' | 'newest'>;
+  /** Blocks of a record of the journal. */
+  decode: (record: JournalRecord) => SampleBlock[];
+  /** A block is about to go in. `receivedMicros` is given where it comes out of the journal. */
+  given: (block: SampleBlock, receivedMicros: Micros | null) => void;
+  /**
+   * What came out, in the order of the blocks of each bridge. The promise resolves when all that follows from it is
+   * durable; a snapshot waits for that.
+   *
+   * @param replayed it came out of the journal
+   */
+  take: (bridge: string, output: PipelineOutput, replayed: boolean) => Promise<void> | null;
+  remember: (bridge: string) => BridgeMemory;
+  recall: (bridge: string, memory: BridgeMemory) => void;
+  report: (complaint: Complaint) => void;
+  /** Threads; all cores but one where absent. */
+  workers?: number;
+  limits?: Partial<PipelineLimits>;
+}
+
+export interface PipelineLimits {
+  /** Blocks and bytes of samples that may wait for one worker; beyond, whoever feeds waits, which delays acknowledgements. */
+  blocks: number;
+  bytes: number;
+  /** A snapshot is taken after this much event time, but not more often than this by the wall clock. */
+  snapshotEventS: number;
+  snapshotWallMs: number;
+}
+
+export const PIPELINE_LIMITS: PipelineLimits = {
+  blocks: 1024,
+  bytes: 32 * 1024 * 1024,
+  snapshotEventS: 60,
+  snapshotWallMs: 5_000,
+};
+
+/** A bridge whose data do not move gets a snapshot this often, so that its place in the journal moves on. */
+const IDLE_SNAPSHOT_MS = 600_000;
+/** How long stopping waits for what is in hand. */
+const STOP_MS = 10_000;
+const FIRST_PAUSE_MS = 200;
+const LONGEST_PAUSE_MS = 30_000;
+/** Records of the journal after which others get their turn. */
+const RECORDS_A_TURN = 32;
+/** Blocks that are left out because they made the pipeline fail; beyond, the oldest is tried again. */
+const LIMIT_POISON = 100;
+
+/** The pipelines of all bridges, spread over worker threads. */
+export interface Pipelines {
+  /** Hands a block on. Blocks come in the order of their positions. */
+  feed(block: SampleBlock, position: Position): void;
+  /** Resolves when every worker has room again: whoever feeds waits for it before it takes more. */
+  room(): Promise<void>;
+  /** Resolves when every bridge is abreast of the journal. */
+  ready(): Promise<void>;
+  /** Whether a bridge is still catching up from the journal. */
+  recovering(bridge: string): boolean;
+  /** Takes snapshots of all bridges and ends the threads. Idempotent. */
+  stop(): Promise<void>;
+  /** For tests and metrics. */
+  figures(): { workers: number; blocksInFlight: number; snapshots: number; failures: number };
+  /** Ends the thread of a bridge as a crash would; for tests. */
+  crash(bridge: string): Promise<void>;
+}
+
+export function startPipelines(options: PipelinesOptions): Pipelines {
+  return new PipelinePool(options);
+}
+
+class PipelinePool implements Pipelines {
+  readonly #options: PipelinesOptions;
+  readonly #limits: PipelineLimits;
+  readonly #feeds = new Map<string, Feed>();
+  readonly #threads: Thread[] = [];
+  readonly #recoveries = new Set<Promise<void>>();
+  readonly #idle: NodeJS.Timeout;
+  /** The newest block that any live bridge was given. */
+  #through: Position | null = null;
+  #token = 0;
+  #snapshots = 0;
+  #failures = 0;
+  #writing = new Map<string, Promise<void>>();
+  #awaited = new Map<number, () => void>();
+  #stopping: Promise<void> | null = null;
+
+  constructor(options: PipelinesOptions) {
+    this.#options = options;
+    this.#limits = { ...PIPELINE_LIMITS, ...options.limits };
+    const wanted = options.workers ?? Math.max(1, availableParallelism() - 1);
+    for (let i = 0; i < Math.min(wanted, Math.max(1, options.bridges.length)); i++) this.#threads.push(this.#thread());
+    for (const { definition, version } of options.bridges) {
+      const thread = this.#threads[threadNumber(definition.id) % this.#threads.length]!;
+      const feed = newFeed(definition, version, thread);
+      thread.feeds.add(feed);
+      this.#feeds.set(definition.id, feed);
+    }
+    this.#startRecovery([...this.#feeds.values()]);
+    this.#idle = setInterval(() => this.#snapshotIdle(), IDLE_SNAPSHOT_MS);
+    this.#idle.unref();
+  }
+
+  feed(block: SampleBlock, position: Position): void {
+    const feed = this.#feeds.get(block.bridge);
+    if (feed === undefined || this.#stopping !== null) return;
+    if (!feed.live) {
+      feed.skippedTo = position;
+      return;
+    }
+    this.#through = position;
+    this.#dispatch(feed, block, position, null);
+  }
+
+  async room(): Promise<void> {
+    for (const thread of this.#threads) await this.#room(thread);
+  }
+
+  async ready(): Promise<void> {
+    while (this.#recoveries.size > 0) await Promise.all(this.#recoveries);
+  }
+
+  recovering(bridge: string): boolean {
+    return this.#feeds.get(bridge)?.live === false;
+  }
+
+  figures(): ReturnType<Pipelines['figures']> {
+    const blocksInFlight = this.#threads.reduce((sum, { blocks }) => sum + blocks, 0);
+    return { workers: this.#threads.length, blocksInFlight, snapshots: this.#snapshots, failures: this.#failures };
+  }
+
+  stop(): Promise<void> {
+    this.#stopping ??= this.#stop();
+    return this.#stopping;
+  }
+
+  async crash(bridge: string): Promise<void> {
+    await this.#feeds.get(bridge)?.thread.worker.terminate();
+  }
+
+  async #stop(): Promise<void> {
+    clearInterval(this.#idle);
+    // A bridge that was still catching up keeps the snapshot it had, or took on the way.
+    await Promise.all(this.#recoveries);
+    const last = [...this.#feeds.values()].filter(({ live }) => live);
+    for (const feed of last) this.#requestSnapshot(feed, true);
+    const done = (async () => {
+      await Promise.all(last.map((feed) => this.#snapshotDone(feed)));
+      await Promise.allSettled([...this.#writing.values(), ...last.map(({ durable }) => durable)]);
+    })();
+    // A history that cannot write, or a pipeline that does not end, must not keep the server: the journal has it all.
+    await Promise.race([done, sleep(STOP_MS, undefined, { ref: false })]);
+    for (const thread of this.#threads) {
+      thread.worker.removeAllListeners();
+      release(thread);
+    }
+    await Promise.all(this.#threads.map(({ worker }) => worker.terminate()));
+  }
+
+  #isStopping(): boolean {
+    return this.#stopping !== null;
+  }
+
+  // threads
+
+  #thread(): Thread {
+    const thread = newThread(newWorker());
+    this.#listen(thread);
+    return thread;
+  }
+
+  #listen(thread: Thread): void {
+    const { worker } = thread;
+    let reason = 'it ended by itself';
+    worker.on('message', (message: FromWorker) => this.#hear(thread, message));
+    worker.on('error', (failure: unknown) => (reason = failure instanceof Error ? failure.message : String(failure)));
+    worker.on('exit', () => void this.#threadEnded(thread, reason));
+  }
+
+  async #threadEnded(thread: Thread, reason: string): Promise<void> {
+    thread.failures += 1;
+    this.#failures += 1;
+    const bridges = [...thread.feeds].map(({ bridge }) => bridge).join(', ');
+    this.#options.report({ code: 'WORKER_FAILED', where: bridges.slice(0, 200), detail: reason });
+    for (const feed of thread.feeds) this.#pause(feed);
+    thread.blocks = thread.bytes = 0;
+    release(thread);
+    const recovery = (async () => {
+      await sleep(Math.min(LONGEST_PAUSE_MS, FIRST_PAUSE_MS * 2 ** (thread.failures - 1)), undefined, { ref: false });
+      if (this.#stopping !== null) return;
+      thread.worker = newWorker();
+      this.#listen(thread);
+      await this.#recover([...thread.feeds]);
+    })();
+    this.#track(recovery);
+    await recovery;
+  }
+
+  #post(thread: Thread, message: ToWorker, transfer: ArrayBuffer[] = []): void {
+    thread.worker.postMessage(message, transfer);
+  }
+
+  // blocks
+
+  #dispatch(feed: Feed, block: SampleBlock, position: Position, receivedMicros: Micros | null): void {
+    if (feed.poison.some((other) => comparePositions(other, position) === 0)) return;
+    this.#options.given(block, receivedMicros);
+    const bytes = block.channels.reduce((sum, { samples }) => sum + samples.byteLength, 0);
+    const length = Math.max(0, ...block.channels.map(({ samples }) => samples.length));
+    feed.newestMicros = Math.max(feed.newestMicros, sampleMicros(block.startMicros, length, block.rateHz));
+    feed.through = position;
+    feed.inFlight.push({ position, bytes });
+    if (receivedMicros !== null) feed.replaysInFlight += 1;
+    feed.thread.blocks += 1;
+    feed.thread.bytes += bytes;
+    const buffers = new Set(block.channels.map(({ samples }) => samples.buffer as ArrayBuffer));
+    this.#post(feed.thread, { kind: 'block', block }, [...buffers]);
+    this.#snapshotWhenDue(feed);
+  }
+
+  #room(thread: Thread): Promise<void> | null {
+    if (thread.blocks <= this.#limits.blocks && thread.bytes <= this.#limits.bytes) return null;
+    return new Promise((resolve) => thread.waiting.push(resolve));
+  }
+
+  #hear(thread: Thread, message: FromWorker): void {
+    const feed = message.kind === 'outputs' ? undefined : this.#feeds.get(message.bridge);
+    if (message.kind === 'outputs') {
+      for (const { bridge, blocks, quiet, output } of message.outputs) {
+        const own = this.#feeds.get(bridge);
+        if (own !== undefined) this.#came(own, blocks, quiet, output);
+      }
+      if (thread.blocks <= this.#limits.blocks / 2 && thread.bytes <= this.#limits.bytes / 2) release(thread);
+    } else if (feed !== undefined && message.kind === 'fault') this.#fault(feed, message.detail);
+    else if (feed !== undefined && message.kind === 'snapshot') this.#snapshotCame(feed, message);
+  }
+
+  #came(feed: Feed, blocks: number, quiet: boolean, output: PipelineOutput): void {
+    const replayed = feed.replaysInFlight > 0;
+    for (const { position, bytes } of feed.inFlight.splice(0, blocks)) {
+      feed.thread.blocks -= 1;
+      feed.thread.bytes -= bytes;
+      if (quiet) feed.quietPosition = position;
+    }
+    feed.replaysInFlight = Math.max(0, feed.replaysInFlight - blocks);
+    feed.thread.failures = 0;
+    const lasting = this.#options.take(feed.bridge, output, replayed);
+    if (lasting === null) return;
+    feed.durable = Promise.all([feed.durable, lasting]).then(() => undefined);
+    // Told by whoever wrote; here it only keeps the snapshot from being taken.
+    feed.durable.catch(() => undefined);
+  }
+
+  // failures and recovery
+
+  /** The block in hand made the pipeline throw. The second time it is left out. */
+  #fault(feed: Feed, detail: string): void {
+    this.#failures += 1;
+    const position = feed.inFlight[0]?.position ?? null;
+    this.#options.report({ code: 'WORKER_FAILED', where: feed.bridge, detail: detail.slice(0, 400) });
+    const again = position !== null && feed.failedAt !== null && comparePositions(position, feed.failedAt) === 0;
+    if (again) feed.poison = [...feed.poison, position].slice(-LIMIT_POISON);
+    feed.failedAt = position;
+    this.#pause(feed);
+    this.#track(
+      (async () => {
+        if (position === null) await removeSnapshot(this.#options.folder, feed.bridge);
+        await this.#recover([feed]);
+      })(),
+    );
+  }
+
+  /** Live blocks are left to the journal from here on. */
+  #pause(feed: Feed): void {
+    if (feed.live) feed.skippedTo = feed.through;
+    feed.live = false;
+    for (const { bytes } of feed.inFlight) {
+      feed.thread.blocks -= 1;
+      feed.thread.bytes -= bytes;
+    }
+    feed.inFlight = [];
+    feed.replaysInFlight = 0;
+    this.#endSnapshot(feed);
+  }
+
+  #startRecovery(feeds: Feed[]): void {
+    this.#track(this.#recover(feeds));
+  }
+
+  #track(recovery: Promise<void>): void {
+    const tracked = recovery
+      .catch((failure: unknown) => {
+        this.#options.report({ code: 'SERVER_FAULT', where: 'recovery', detail: String(failure) });
+      })
+      .finally(() => this.#recoveries.delete(tracked));
+    this.#recoveries.add(tracked);
+  }
+
+  /** Opens the pipelines from their snapshots and feeds them from the journal until they are abreast of it. */
+  async #recover(feeds: Feed[]): Promise<void> {
+    for (const feed of feeds) await this.#openFrom(feed);
+    const own = new Map(feeds.map((feed) => [feed.bridge, feed]));
+    let at = oldest(feeds.map(({ openedAt }) => openedAt));
+    for (;;) {
+      at = await this.#replay(own, at);
+      if (this.#isStopping()) return;
+      const reached = at;
+      if (feeds.every(({ skippedTo }) => skippedTo === null || !isAfter(skippedTo, reached))) break;
+      // What was left out is on its way to the disk.
+      while (!isAfter(this.#options.journal.newest(), reached) && !this.#isStopping()) await sleep(5);
+    }
+    for (const feed of feeds) {
+      feed.live = true;
+      feed.skippedTo = null;
+    }
+  }
+
+  async #replay(own: ReadonlyMap<string, Feed>, after: Position | null): Promise<Position | null> {
+    let at = after;
+    let records = 0;
+    for await (const { position, record } of this.#options.journal.readFrom(after)) {
+      for (const block of this.#options.decode(record)) {
+        const feed = own.get(block.bridge);
+        if (feed === undefined || !isAfter(position, feed.openedAt)) continue;
+        this.#dispatch(feed, block, position, record.receivedMicros);
+        await this.#room(feed.thread);
+      }
+      at = position;
+      if (this.#isStopping()) break;
+      if (++records % RECORDS_A_TURN === 0) await turn();
+    }
+    return at;
+  }
+
+  async #openFrom(feed: Feed): Promise<void> {
+    const { folder, report, recall } = this.#options;
+    const reading = await readSnapshot(folder, feed.bridge);
+    let state: Uint8Array | null = null;
+    feed.through = feed.openedAt = null;
+    const snapshot = reading.ok ? reading.value : null;
+    if (!reading.ok) report(reading.complaint);
+    if (snapshot !== null) {
+      const mismatch = mismatchOf(snapshot, feed);
+      if (mismatch === null) state = snapshot.state;
+      else report({ code: 'SNAPSHOT_UNUSABLE', where: feed.bridge, detail: mismatch });
+      // Of another version: passages that are finished stay as they are, and the new pipeline begins where none was open.
+      feed.openedAt = feed.through = mismatch === null ? snapshot.position : snapshot.quietPosition;
+      feed.quietPosition = snapshot.quietPosition;
+    }
+    recall(feed.bridge, { loggers: snapshot?.loggers ?? {}, sensors: snapshot?.sensors ?? [] });
+    const { bridge, definition, version } = feed;
+    this.#post(feed.thread, { kind: 'open', bridge, definition, version, state });
+  }
+
+  // snapshots
+
+  #snapshotWhenDue(feed: Feed): void {
+    if (feed.snapshotMicros === 0) feed.snapshotMicros = feed.newestMicros;
+    if (feed.newestMicros - feed.snapshotMicros < this.#limits.snapshotEventS * MICROS_PER_SECOND) return;
+    if (performance.now() - feed.snapshotAtMs < this.#limits.snapshotWallMs) return;
+    this.#requestSnapshot(feed, false);
+  }
+
+  #snapshotIdle(): void {
+    for (const feed of this.#feeds.values()) {
+      if (feed.live && performance.now() - feed.snapshotAtMs > IDLE_SNAPSHOT_MS) this.#requestSnapshot(feed, false);
+    }
+  }
+
+  /** @param last also where one is on its way */
+  #requestSnapshot(feed: Feed, last: boolean): void {
+    if (!last && (feed.snapshot !== null || this.#writing.has(feed.bridge))) return;
+    const token = ++this.#token;
+    // A live bridge has been given everything of its own up to the newest block of all.
+    feed.snapshot = { token, position: feed.live ? newer(this.#through, feed.through) : feed.through };
+    feed.snapshotMicros = feed.newestMicros;
+    feed.snapshotAtMs = performance.now();
+    this.#post(feed.thread, { kind: 'snapshot', bridge: feed.bridge, token });
+  }
+
+  #snapshotCame(feed: Feed, { token, state, quiet }: Extract<FromWorker, { kind: 'snapshot' }>): void {
+    if (feed.snapshot?.token !== token) return;
+    const { position } = feed.snapshot;
+    const snapshot: Snapshot = {
+      bridge: feed.bridge,
+      pipelineVersion: PIPELINE_VERSION,
+      definitionVersion: feed.version,
+      position,
+      quietPosition: quiet ? position : feed.quietPosition,
+      ...structuredClone(this.#options.remember(feed.bridge)),
+      state,
+    };
+    const { durable } = feed;
+    const writing = (async () => {
+      await durable;
+      await writeSnapshot(this.#options.folder, snapshot);
+      this.#snapshots += 1;
+    })()
+      .catch((failure: unknown) => {
+        // The older one and the journal still serve.
+        this.#options.report({ code: 'SNAPSHOT_WRITE', where: feed.bridge, detail: String(failure) });
+      })
+      .finally(() => {
+        if (this.#writing.get(feed.bridge) === writing) this.#writing.delete(feed.bridge);
+      });
+    this.#writing.set(feed.bridge, writing);
+    this.#endSnapshot(feed);
+  }
+
+  #endSnapshot(feed: Feed): void {
+    const token = feed.snapshot?.token;
+    feed.snapshot = null;
+    if (token === undefined) return;
+    this.#awaited.get(token)?.();
+    this.#awaited.delete(token);
+  }
+
+  #snapshotDone(feed: Feed): Promise<void> {
+    const token = feed.snapshot?.token;
+    return token === undefined ? Promise.resolve() : new Promise((resolve) => this.#awaited.set(token, resolve));
+  }
+}
+
+const newWorker = (): Worker => new Worker(new URL('./worker.ts', import.meta.url), { execArgv: [] });
+
+/** FNV-1a, so that a bridge keeps its thread as long as the number of threads is the same. */
+function threadNumber(text: string): number {
+  let value = 0x811c9dc5;
+  for (let i = 0; i < text.length; i++) value = Math.imul(value ^ text.charCodeAt(i), 0x01000193) >>> 0;
+  return value;
+}

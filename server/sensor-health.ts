@@ -1,0 +1,92 @@
+import type { BridgeDefinition, Sensor } from '#core/contract/bridge.ts';
+import type { SensorCondition, SensorHealth } from '#core/contract/health.ts';
+import type { SensorVitals } from '#core/contract/pipeline.ts';
+import { MICROS_PER_SECOND, timeName, type Micros } from '#core/contract/time.ts';
+import { DEFAULT_SILENT_AFTER_S } from '#core/alarm/silence.ts';
+
+/** What is known of the health of a bridge's sensors, gathered from what the pipeline says and from when each was heard. */
+export interface HealthRecord {
+  /** By sensor of the definition. */
+  sensors: Map<string, SensorHealth>;
+  /** Wall clock when each sensor was last heard; absent before. */
+  heardMicros: Map<string, Micros>;
+}
+
+/**
+ * @param known from a snapshot; sensors that the definition no longer has are dropped
+ * @param heardMicros from the same run of the server
+ */
+export function createHealthRecord(
+  definition: BridgeDefinition,
+  known: readonly SensorHealth[] = [],
+  heardMicros: Map<string, Micros> = new Map<string, Micros>(),
+): HealthRecord {
+  const before = new Map(known.map((health) => [health.sensor, health]));
+  return {
+    sensors: new Map(definition.sensors.map(({ id }) => [id, before.get(id) ?? fresh(id)])),
+    heardMicros,
+  };
+}
+
+const fresh = (sensor: string): SensorHealth => ({
+  sensor,
+  newestMicros: null,
+  samples: 0,
+  active: [],
+  counts: {},
+  noise: null,
+  offset: null,
+});
+
+export function noteSamples(record: HealthRecord, sensor: string, count: number, newest: Micros, heard: Micros): void {
+  const health = record.sensors.get(sensor);
+  if (health === undefined) return;
+  health.samples += count;
+  health.newestMicros = Math.max(health.newestMicros ?? 0, newest);
+  record.heardMicros.set(sensor, Math.max(record.heardMicros.get(sensor) ?? 0, heard));
+}
+
+export function noteVitals(record: HealthRecord, { sensor, noise, offset }: SensorVitals): void {
+  const health = record.sensors.get(sensor);
+  if (health === undefined) return;
+  health.noise = noise;
+  health.offset = offset;
+}
+
+export function noteCondition(record: HealthRecord, { sensor, code, state, micros, detail }: SensorCondition): void {
+  const health = record.sensors.get(sensor);
+  if (health === undefined) return;
+  if (state !== 'ended') health.counts[code] = (health.counts[code] ?? 0) + 1;
+  if (state === 'happened') return;
+  const others = health.active.filter((condition) => condition.code !== code);
+  health.active = state === 'began' ? [...others, { code, sinceMicros: micros, detail }] : others;
+}
+
+/** Whether a sensor gives data now. Slow sensors are given three of their samples. */
+export function isAlive(
+  record: HealthRecord,
+  definition: BridgeDefinition,
+  sensor: Sensor,
+  nowMicros: Micros,
+): boolean {
+  const heard = record.heardMicros.get(sensor.id);
+  return heard !== undefined && nowMicros - heard <= silentAfterMicros(definition, sensor);
+}
+
+/** As the Bridges place shows it: silence is judged by the wall clock, so it is added when it is looked at. */
+export function healthView(record: HealthRecord, definition: BridgeDefinition, nowMicros: Micros): SensorHealth[] {
+  return definition.sensors.map((sensor) => {
+    const health = record.sensors.get(sensor.id)!;
+    if (health.newestMicros === null || isAlive(record, definition, sensor, nowMicros)) {
+      return { ...health, active: [...health.active], counts: { ...health.counts } };
+    }
+    const since = health.newestMicros;
+    const silent = { code: 'silent' as const, sinceMicros: since, detail: `nothing since ${timeName(since)} UTC` };
+    return { ...health, active: [silent, ...health.active], counts: { ...health.counts } };
+  });
+}
+
+function silentAfterMicros({ loggers }: BridgeDefinition, { logger, rateHz }: Sensor): Micros {
+  const defined = loggers.find(({ id }) => id === logger)?.silentAfterS ?? DEFAULT_SILENT_AFTER_S;
+  return Math.max(defined, 3 / rateHz) * MICROS_PER_SECOND;
+}
