@@ -2,7 +2,7 @@ import type { BridgeDefinition } from '#core/contract/bridge.ts';
 import type { Passage } from '#core/contract/passage.ts';
 import type { SampleBlock } from '#core/contract/block.ts';
 import type { Micros } from '#core/contract/time.ts';
-import { createPipeline, finish, measureWhole, step } from '#core/passage/pipeline.ts';
+import { createPipeline, finish, measureWhole, recompute, step } from '#core/passage/pipeline.ts';
 import { readDefinition } from '../definition.ts';
 import { joinRecordings, openRecording, type Recording } from '../exchange/recording.ts';
 import { definitionFile } from './definition-file.ts';
@@ -18,8 +18,8 @@ export interface AnalyseSettings {
   format: 'jsonl' | 'table';
   /** Time of zero where the recording counts from there. */
   startMicros: Micros | null;
-  /** Version that the passages name. */
-  definitionVersion: number;
+  /** Version that the passages name; where null, 1, or that of a stored passage. */
+  definitionVersion: number | null;
 }
 
 /**
@@ -34,9 +34,7 @@ export async function analyse(files: readonly string[], settings: AnalyseSetting
   const recordings: Recording[] = [];
   try {
     for (const file of files) recordings.push(await openRecording(file, given, settings));
-    const { definition, blocks } = joinRecordings(recordings, given);
-    const found = settings.whole ? wholeEvent(definition, blocks, settings) : passages(definition, blocks, settings);
-    const count = await print(found, settings.format, console);
+    const count = await print(analysed(recordings, given, settings), settings.format, console);
     if (count === 0) console.err('note: no passage was found; --whole measures the recording as one event\n');
   } catch (error) {
     return complainOf(error, console);
@@ -46,12 +44,29 @@ export async function analyse(files: readonly string[], settings: AnalyseSetting
   return EXIT.good;
 }
 
+/** Stored passages one by one, everything else as one recording. */
+async function* analysed(
+  recordings: readonly Recording[],
+  given: BridgeDefinition,
+  { whole, definitionVersion }: AnalyseSettings,
+): AsyncGenerator<Passage> {
+  const streams: Recording[] = [];
+  for (const recording of recordings) {
+    if (whole || recording.passage === null) streams.push(recording);
+    else yield* again(recording, recording.passage, given, definitionVersion);
+  }
+  if (streams.length === 0) return;
+  const { definition, blocks } = joinRecordings(streams, given);
+  if (whole) yield* wholeEvent(definition, blocks, definitionVersion ?? 1);
+  else yield* passages(definition, blocks, definitionVersion ?? 1);
+}
+
 async function* passages(
   definition: BridgeDefinition,
   blocks: AsyncIterable<SampleBlock>,
-  { definitionVersion }: AnalyseSettings,
+  version: number,
 ): AsyncGenerator<Passage> {
-  const state = createPipeline(definition, definitionVersion);
+  const state = createPipeline(definition, version);
   for await (const block of blocks) for (const { passage } of step(state, block).passages) yield passage;
   for (const { passage } of finish(state).passages) yield passage;
 }
@@ -59,10 +74,26 @@ async function* passages(
 async function* wholeEvent(
   definition: BridgeDefinition,
   blocks: AsyncIterable<SampleBlock>,
-  { definitionVersion }: AnalyseSettings,
+  version: number,
 ): AsyncGenerator<Passage> {
-  const found = measureWhole(definition, definitionVersion, await gatherWhole(definition, blocks));
+  const found = measureWhole(definition, version, await gatherWhole(definition, blocks));
   if (found !== null) yield found.passage;
+}
+
+/**
+ * A stored passage from its wave form: measured in the window it was found in, so that the same definition gives the
+ * same bits. Looking for trains in so short a piece would find the window anew, a tenth of a second off perhaps.
+ */
+async function* again(
+  recording: Recording,
+  stored: Passage,
+  given: BridgeDefinition,
+  version: number | null,
+): AsyncGenerator<Passage> {
+  const { definition, blocks } = joinRecordings([recording], given);
+  const channels = await gatherWhole(definition, blocks);
+  const passage = recompute(definition, version ?? stored.provenance.definitionVersion, stored, channels);
+  if (passage !== null) yield passage;
 }
 
 async function print(

@@ -156,17 +156,18 @@ function addAnalyse(program: Command, console: Console, set: SetExit): void {
       new Option('-f, --format <form>', 'one JSON a line, or a table').choices(['jsonl', 'table']).default('jsonl'),
     )
     .option('--start <time>', 'ISO 8601 or Unix seconds: time of zero in a recording that counts from there', time)
-    .option('--definition-version <number>', 'version that the passages name', whole, 1)
+    .option('--definition-version <number>', 'version that the passages name (1, or that of a stored passage)', whole)
     .addHelpText(
       'after',
       `
 A text recording has a header, a column called time, and one column a sensor, named by its id or as its logger names it
 (loggers.channels). Tab, semicolon or comma; with the first two a decimal comma is taken. Time: seconds, Unix epoch in s,
-ms, µs or ns, or ISO 8601 (UTC unless it says otherwise). "A1 [g]" holds values in g; "A1" holds what the logger sent.`,
+ms, µs or ns, or ISO 8601 (UTC unless it says otherwise). "A1 [g]" holds values in g; "A1" holds what the logger sent.
+A wave form out of the archive (Parquet) is measured in its own window: the same definition gives the same bits.`,
     )
     .action(async (files: string[], options: AnalyseOptions) => {
       const { analyse } = await import('./analyse.ts');
-      const { bridge, whole: asOne, format, start = null, definitionVersion } = options;
+      const { bridge, whole: asOne, format, start = null, definitionVersion = null } = options;
       set(await analyse(files, { bridge, whole: asOne, format, startMicros: start, definitionVersion }, console));
     });
 }
@@ -176,7 +177,7 @@ interface AnalyseOptions {
   whole: boolean;
   format: 'jsonl' | 'table';
   start?: Micros;
-  definitionVersion: number;
+  definitionVersion?: number;
 }
 
 function addSimulate(program: Command, console: Console, set: SetExit): void {

@@ -51,6 +51,7 @@ export async function openCsv(
     ),
     sensors: head.columns.sensors.map(({ sensor }) => sensor.id),
     notes,
+    passage: null,
     blocks: rows({ head, lines, file, definition, options, notes, first: units ? null : first }),
   };
 }

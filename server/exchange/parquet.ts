@@ -6,9 +6,11 @@ import {
   type DuckDBValue,
   type DuckDBVector,
 } from '@duckdb/node-api';
+import { Value } from 'typebox/value';
 import type { SampleBlock } from '#core/contract/block.ts';
 import type { BridgeDefinition, Sensor } from '#core/contract/bridge.ts';
 import { SpanbeatError, type ErrorCode } from '#core/contract/errors.ts';
+import { Passage } from '#core/contract/passage.ts';
 import { EARLIEST_MICROS, LATEST_MICROS, sampleMicros } from '#core/contract/time.ts';
 import { SI_UNIT } from '#core/contract/units.ts';
 import { createAssembly } from './assembly.ts';
@@ -19,7 +21,7 @@ import type { Recording, RecordingOptions } from './recording.ts';
  * Opens a Parquet recording of one of two forms:
  *
  * - a passage's wave form as this program archives it, one row a run: `sensor`, `start_micros`, `rate_hz`,
- *   `samples FLOAT[]`; samples are calibrated, in SI;
+ *   `samples FLOAT[]`; samples are calibrated, in SI; the passage itself is among the file's metadata;
  * - a plain table: a time column and one column a sensor, named as in CSV, in order of time.
  *
  * @throws SpanbeatError RECORDING_…, UNIT_UNKNOWN; while the blocks flow also RATE_WRONG
@@ -82,8 +84,25 @@ async function openArchived(
     units: new Map(sensors.map(({ id, quantity }) => [id, SI_UNIT[quantity]])),
     sensors: sensors.map(({ id }) => id),
     notes: unknown.length === 0 ? [] : [`${file}: passed over ${unknown.map((name) => `"${name}"`).join(', ')}`],
+    passage: await storedPassage(connection, file, definition.id),
     blocks: guarded(archivedBlocks(connection, file, definition.id, byId), file, close),
   };
+}
+
+/** What the archive wrote beside the samples; null where the file comes from elsewhere. */
+async function storedPassage(connection: DuckDBConnection, file: string, bridge: string): Promise<Passage | null> {
+  const reader = await connection.runAndReadAll(
+    `SELECT decode(value) FROM parquet_kv_metadata(${quoted(file)}) WHERE decode(key) = 'passage'`,
+  );
+  const text = reader.getRows()[0]?.[0];
+  if (typeof text !== 'string') return null;
+  const passage: unknown = JSON.parse(text);
+  if (!Value.Check(Passage, passage))
+    fail('RECORDING_FORMAT', file, 'its passage is not of the form this version reads');
+  if (passage.bridge !== bridge) {
+    fail('RECORDING_NO_CHANNEL', file, `found a passage of bridge "${passage.bridge}", expected "${bridge}"`);
+  }
+  return passage;
 }
 
 /** Pieces of runs cut to a second or so and put in order of time: a run may be minutes long. */
@@ -149,6 +168,7 @@ async function openTable(
     units: new Map(columns.sensors.flatMap(({ sensor, unit }) => (unit === null ? [] : [[sensor.id, unit] as const]))),
     sensors: sensors.map(({ id }) => id),
     notes: unknown.length === 0 ? [] : [`${file}: passed over ${unknown.map((name) => `"${name}"`).join(', ')}`],
+    passage: null,
     blocks: guarded(tableBlocks(connection, sql, definition.id, sensors, file), file, close),
   };
 }

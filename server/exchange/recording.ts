@@ -2,6 +2,7 @@ import { open } from 'node:fs/promises';
 import type { SampleBlock } from '#core/contract/block.ts';
 import type { BridgeDefinition, Sensor } from '#core/contract/bridge.ts';
 import { SpanbeatError } from '#core/contract/errors.ts';
+import type { Passage } from '#core/contract/passage.ts';
 import type { Micros } from '#core/contract/time.ts';
 import { unitConversion } from '#core/contract/units.ts';
 import { openCsv } from './csv.ts';
@@ -19,6 +20,8 @@ export interface Recording {
   /** What a person should know: columns passed over, a torn last line. Grows while the samples flow. */
   notes: string[];
   blocks: AsyncIterable<SampleBlock>;
+  /** The passage whose wave form this is, where the file says so: the archive's files do. */
+  passage: Passage | null;
 }
 
 export interface RecordingOptions {

@@ -9,6 +9,7 @@ import type { BridgeDefinition } from '#core/contract/bridge.ts';
 import { SpanbeatError } from '#core/contract/errors.ts';
 import { csvOfWindow, float32Text, isoMicros } from '../../server/exchange/csv-text.ts';
 import { joinRecordings, openRecording } from '../../server/exchange/recording.ts';
+import { collect } from '../support/collect.ts';
 import { aDefinition, DAWN } from '../support/specimen.ts';
 
 let folder = '';
@@ -39,7 +40,7 @@ async function read(
   startMicros: number | null = null,
 ): Promise<{ blocks: SampleBlock[]; notes: string[]; units: ReadonlyMap<string, string> }> {
   const recording = await openRecording(await fileOf(content), definition, { startMicros });
-  const blocks = await Array.fromAsync(recording.blocks);
+  const blocks = await collect(recording.blocks);
   return { blocks, notes: recording.notes, units: recording.units };
 }
 
@@ -216,7 +217,7 @@ describe('a recording that cannot be read', () => {
   ])('says so: %s', async (name, code, text) => {
     const bytes = name === 'UTF-16' ? Buffer.from(text ?? '', 'utf16le') : (text ?? '');
     const file = text === null ? join(folder, 'absent.csv') : await fileOf(bytes);
-    const reading = openRecording(file, bridge(), { startMicros: DAWN }).then(({ blocks }) => Array.fromAsync(blocks));
+    const reading = openRecording(file, bridge(), { startMicros: DAWN }).then(({ blocks }) => collect(blocks));
     const complaint = await codeOf(reading);
     expect(complaint.code).toBe(code);
     expect(complaint.where).toContain(file);
@@ -258,7 +259,7 @@ describe('several recordings', () => {
     const opened = await Promise.all(
       [later, earlier, beside].map((file) => openRecording(file, definition, { startMicros: DAWN })),
     );
-    const blocks = await Array.fromAsync(joinRecordings(opened, definition).blocks);
+    const blocks = await collect(joinRecordings(opened, definition).blocks);
     const starts = blocks.map(({ startMicros }) => startMicros);
     expect(starts).toHaveLength(40);
     expect(starts).toEqual(starts.toSorted((a, b) => a - b));
@@ -290,7 +291,7 @@ describe('a wave form written as CSV', () => {
             { sensor: 'A2', rateHz: 100, runs: [{ startMicros: DAWN + 3_000_000, samples }] },
             { sensor: 'T1', rateHz: 1, runs: [{ startMicros: DAWN + 1234, samples: samples.subarray(0, 2) }] },
           ];
-          const text = (await Array.fromAsync(csvOfWindow(definition, channels))).join('');
+          const text = (await collect(csvOfWindow(definition, channels))).join('');
           const { blocks, units } = await read(text, definition);
           expect(units.get('A1')).toBe('m/s²');
           for (const { sensor, runs } of channels) {
@@ -328,7 +329,7 @@ describe.skipIf(!existsSync(MUNICH))('the published recording of the Munich test
     const definition = bridge();
     definition.loggers = [{ id: 'north', channels: { ACC01_z: 'A1' } }];
     const recording = await openRecording(MUNICH, definition, { startMicros: null });
-    const blocks = await Array.fromAsync(recording.blocks);
+    const blocks = await collect(recording.blocks);
     const samples = samplesOf(blocks, 'A1');
     expect(samples).toHaveLength(72_000);
     expect(samples[0]).toBe(4.93101433676202e-5);

@@ -13,6 +13,7 @@ import { decodeDefinition } from '../../server/definition.ts';
 import { joinRecordings, openRecording } from '../../server/exchange/recording.ts';
 import { openArchive, placeOf } from '../../server/history/archive.ts';
 import { DEMONSTRATION_FILES, pastPassages } from '../../simulator/demonstration.ts';
+import { collect } from '../support/collect.ts';
 import { aDefinition, DAWN } from '../support/specimen.ts';
 
 let folder = '';
@@ -41,7 +42,7 @@ function bridge(): ReturnType<typeof aDefinition> {
 
 async function read(file: string, startMicros: number | null = null): Promise<SampleBlock[]> {
   const recording = await openRecording(file, bridge(), { startMicros });
-  return Array.fromAsync(recording.blocks);
+  return collect(recording.blocks);
 }
 
 function samplesOf(blocks: readonly SampleBlock[], sensor: string): number[] {
@@ -148,7 +149,7 @@ describe('a plain table in Parquet', () => {
     const file = await parquet('unit.parquet', `SELECT ${DAWN} + i * 10000 AS time, i AS "A1 [mg]" ${rows}`);
     const recording = await openRecording(file, bridge(), { startMicros: null });
     expect([...recording.units]).toEqual([['A1', 'mg']]);
-    await Array.fromAsync(recording.blocks);
+    await collect(recording.blocks);
   });
 
   it.each([

@@ -32,7 +32,7 @@ async function startBroker(): Promise<Broker> {
   const packets: Broker['packets'] = [];
   let held: (() => void)[] | null = null;
   const aedes = await Aedes.createBroker({
-    authorizePublish: (client, packet, done) => {
+    authorizePublish: (_client, packet, done) => {
       if (held === null || packet.topic.endsWith('status')) done(null);
       else held.push(() => done(null));
     },
