@@ -2,7 +2,7 @@ import { readFile } from 'node:fs/promises';
 import type { BridgeDefinition } from '#core/contract/bridge.ts';
 import { checkDefinition, fieldName } from '#core/contract/definition-check.ts';
 import type { Complaint } from '#core/contract/errors.ts';
-import { placed, readYaml } from './yaml.ts';
+import { placed, readYaml } from './yaml-text.ts';
 
 /** A bridge definition with the text it was read from, which the store keeps beside it. */
 export interface GivenDefinition {

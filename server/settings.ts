@@ -7,7 +7,7 @@ import type { RetentionRules } from './history/retention.ts';
 import type { EmbeddedSettings } from './ingest/broker.ts';
 import type { OutsideSettings } from './ingest/client.ts';
 import type { IngestSettings } from './ingest/ingest.ts';
-import { placed, readYaml } from './yaml.ts';
+import { placed, readYaml } from './yaml-text.ts';
 
 export const LOG_LEVELS = ['debug', 'info', 'warn', 'error', 'silent'] as const;
 export type LogLevel = (typeof LOG_LEVELS)[number];

@@ -1,12 +1,9 @@
-import { open } from 'node:fs/promises';
 import type { SampleBlock } from '#core/contract/block.ts';
 import type { BridgeDefinition, Sensor } from '#core/contract/bridge.ts';
 import { SpanbeatError } from '#core/contract/errors.ts';
 import type { Passage } from '#core/contract/passage.ts';
 import type { Micros } from '#core/contract/time.ts';
 import { unitConversion } from '#core/contract/units.ts';
-import { openCsv } from './csv.ts';
-import { openParquet } from './parquet.ts';
 
 /** A recording whose head has been read and whose samples flow when they are asked for. */
 export interface Recording {
@@ -27,20 +24,6 @@ export interface Recording {
 export interface RecordingOptions {
   /** Epoch of a recording that counts its time from zero. */
   startMicros: Micros | null;
-}
-
-/**
- * Opens a recording, CSV or Parquet by its first bytes.
- *
- * @throws SpanbeatError RECORDING_… and UNIT_UNKNOWN; while the blocks flow also RATE_WRONG
- */
-export async function openRecording(
-  file: string,
-  definition: BridgeDefinition,
-  options: RecordingOptions,
-): Promise<Recording> {
-  const magic = await firstBytes(file);
-  return magic === 'PAR1' ? openParquet(file, definition, options) : openCsv(file, definition, options);
 }
 
 /**
@@ -113,20 +96,5 @@ async function* byTime(sources: readonly AsyncIterable<SampleBlock>[]): AsyncGen
     }
   } finally {
     for (const stream of streams) await stream.return?.();
-  }
-}
-
-async function firstBytes(file: string): Promise<string> {
-  try {
-    const handle = await open(file);
-    try {
-      const { buffer, bytesRead } = await handle.read(Buffer.alloc(4), 0, 4, 0);
-      return buffer.toString('latin1', 0, bytesRead);
-    } finally {
-      await handle.close();
-    }
-  } catch (error) {
-    const detail = error instanceof Error ? error.message : String(error);
-    throw new SpanbeatError({ code: 'RECORDING_UNREADABLE', where: file, detail });
   }
 }

@@ -9,7 +9,7 @@ import { nearestName } from '#core/contract/nearest-name.ts';
 import { describeSchema, schemaAt, showFound } from '#core/contract/schema-words.ts';
 import { DEMONSTRATION_FILES } from '../../simulator/demonstration.ts';
 import { decodeDefinition, readDefinition } from '../../server/definition.ts';
-import { YAML_LIMITS } from '../../server/yaml.ts';
+import { YAML_LIMITS } from '../../server/yaml-text.ts';
 import { aDefinition } from '../support/specimen.ts';
 
 const GOOD = stringify(aDefinition());

@@ -8,7 +8,8 @@ import type { SampleBlock } from '#core/contract/block.ts';
 import type { BridgeDefinition } from '#core/contract/bridge.ts';
 import { SpanbeatError } from '#core/contract/errors.ts';
 import { csvOfWindow, float32Text, isoMicros } from '../../server/exchange/csv-text.ts';
-import { joinRecordings, openRecording } from '../../server/exchange/recording.ts';
+import { openRecording } from '../../server/exchange/opening.ts';
+import { joinRecordings } from '../../server/exchange/recording.ts';
 import { collect } from '../support/collect.ts';
 import { aDefinition, DAWN } from '../support/specimen.ts';
 

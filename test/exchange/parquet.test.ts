@@ -10,7 +10,8 @@ import { SpanbeatError } from '#core/contract/errors.ts';
 import { createPipeline, finish, recompute, step } from '#core/passage/pipeline.ts';
 import { gatherWhole } from '../../server/command/whole.ts';
 import { decodeDefinition } from '../../server/definition.ts';
-import { joinRecordings, openRecording } from '../../server/exchange/recording.ts';
+import { openRecording } from '../../server/exchange/opening.ts';
+import { joinRecordings } from '../../server/exchange/recording.ts';
 import { openArchive, placeOf } from '../../server/history/archive.ts';
 import { DEMONSTRATION_FILES, pastPassages } from '../../simulator/demonstration.ts';
 import { collect } from '../support/collect.ts';
@@ -71,8 +72,7 @@ describe("a passage's archived wave form", () => {
   it.each(definitions.map((given) => [given.definition.id, given] as const))(
     'comes back bit for bit, and the passage computed from it too: %s',
     async (id, { definition, text }) => {
-      const past = pastPassages({ definitions: [definition], nowMicros: DAWN, days: 1, perDay: 2, seed: 7 }).next()
-        .value;
+      const [past] = pastPassages({ definitions: [definition], nowMicros: DAWN, days: 1, perDay: 2, seed: 7 });
       if (past === undefined) throw new Error('no passage');
       const state = createPipeline(definition, 3);
       const windows: PassageWindow[] = [];
