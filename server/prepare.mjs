@@ -63,7 +63,8 @@ function refuseOldNode() {
 
 async function preparePackages() {
   const lock = sha256(readFileSync(join(ROOT, 'package-lock.json')));
-  const stamp = readJson(STAMP) ?? adopted(lock);
+  const before = readJson(STAMP);
+  const stamp = before?.lock === lock ? before : (adopted(lock) ?? before);
   const withDev = all || stamp?.dev === true;
   const pinned = readJson(join(ROOT, 'package.json')).dependencies.node;
   const ready = stamp?.lock === lock && (!all || stamp.dev) && stamp.node === pinned && existsSync(NODE);
