@@ -79,7 +79,7 @@ export function delayWords(step: AlarmStep): string {
 /** An alarm in one line, for a print: `Alarm IL raised 06:46:13.4 UTC, acknowledged by M. Orrell: told desk 2` */
 export function alarmLine(alarm: Alarm): string {
   const answer = alarm.acknowledged
-    ? `acknowledged by ${alarm.acknowledged.by}${alarm.acknowledged.note ? `: ${alarm.acknowledged.note}` : ''}`
+    ? `acknowledged by ${alarm.acknowledged.by}${alarm.acknowledged.note ? `: ${alarm.acknowledged.note.replace(/\.$/, '')}` : ''}`
     : alarm.state;
   return `Alarm ${alarm.severity} raised ${clockTenthsIn(alarm.raisedMicros)} UTC, ${answer}`;
 }

@@ -74,6 +74,23 @@ export function offsetMinutes(micros: Micros, timeZone: string): number {
   return (sign === '+' ? 1 : -1) * (Number(hours) * 60 + Number(minutes));
 }
 
+/**
+ * Days with the time before monitoring began marked as without data: before the bridge was first defined, unless
+ * passages older than that are on record. An empty row must not read as a quiet day.
+ *
+ * @param definedMicros when the first version of the definition came into force; null where it is not known
+ */
+export function withBeginning(days: readonly Day[], definedMicros: Micros | null): Day[] {
+  const oldest = days.find(({ marks }) => marks.length > 0)?.marks[0]?.micros ?? Infinity;
+  const began = Math.min(definedMicros ?? -Infinity, oldest);
+  return days.map((day) => {
+    const toMicros = Math.min(began, day.endMicros);
+    if (toMicros <= day.startMicros) return day;
+    const after = day.noData.filter((gap) => gap.toMicros > toMicros);
+    return { ...day, noData: [{ fromMicros: day.startMicros, toMicros }, ...after] };
+  });
+}
+
 export interface Mark {
   id: string;
   row: number;

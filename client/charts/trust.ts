@@ -46,7 +46,7 @@ function fromPassage(alarm: Alarm, { passage, definition }: PassageView): Trust[
     const where = neighbour.far < NEAR_M ? 'at the same place' : `${fixed(neighbour.far, 1)} m away`;
     reasons.push({
       good: neighbour.peak > peak * 0.3,
-      words: `${neighbour.id}, ${where}, read ${fixed(neighbour.peak, 2)} m/s², ${less >= 0 ? `${less} % less` : `${-less} % more`}`,
+      words: `${neighbour.id}, ${where}, read ${fixed(neighbour.peak, 2)} m/s², ${less === 0 ? 'as much' : less > 0 ? `${less} % less` : `${-less} % more`}`,
     });
   }
 

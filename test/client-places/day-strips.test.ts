@@ -9,6 +9,7 @@ import {
   nearestMark,
   offsetMinutes,
   shiftDay,
+  withBeginning,
 } from '../../client/charts/days.ts';
 
 const ZONE = 'Europe/Berlin';
@@ -114,5 +115,28 @@ describe('marks', () => {
     const layout = layoutOf(year, 1384, ZONE);
     expect(layout.detail).toBe('months');
     expect(layout.height).toBeLessThan(1200);
+  });
+});
+
+describe('the time before monitoring began', () => {
+  const mark = (micros: number): Day['marks'][number] => ({ id: 'a', micros, peak: 1, ofGravest: 0.3, severity: null });
+  const defined = midnight('2026-07-02', ZONE) + 6 * HOUR;
+
+  it('is without data, so that an empty row never reads as a quiet day', () => {
+    const [first, second, third] = withBeginning([day('2026-07-01'), day('2026-07-02'), day('2026-07-03')], defined);
+    expect(first!.noData).toEqual([{ fromMicros: first!.startMicros, toMicros: first!.endMicros }]);
+    expect(second!.noData).toEqual([{ fromMicros: second!.startMicros, toMicros: defined }]);
+    expect(third!.noData).toEqual([]);
+  });
+
+  it('ends at the oldest passage where that is older than the definition', () => {
+    const early = midnight('2026-07-01', ZONE) + 3 * HOUR;
+    const [first, second] = withBeginning([day('2026-07-01', [mark(early)]), day('2026-07-02')], defined);
+    expect(first!.noData).toEqual([{ fromMicros: first!.startMicros, toMicros: early }]);
+    expect(second!.noData).toEqual([]);
+  });
+
+  it('is not guessed where the definition is not known and nothing is on record', () => {
+    expect(withBeginning([day('2026-07-01')], null)[0]!.noData).toEqual([]);
   });
 });
