@@ -60,8 +60,14 @@ export function createDetector(): Detector {
 export interface DetectorSetting {
   bridge: string;
   freeSeconds: number;
-  /** Ids of the sensors at which each axle leaves a pulse, track by track. */
-  axleTracks: readonly (readonly string[])[];
+  /** The sensors at which each axle leaves a pulse, track by track. */
+  axleTracks: readonly AxleTrack[];
+}
+
+export interface AxleTrack {
+  sensors: readonly string[];
+  /** Axles that find room between the outermost sensors. */
+  room: number;
 }
 
 /** Takes the next tick of the bridge; ticks come in rising order, with holes where there was no data at all. */
@@ -160,8 +166,9 @@ function looksLikeTrain(candidate: Candidate, setting: DetectorSetting): boolean
   const speaking = Object.keys(candidate.pulses).length;
   return (
     candidate.longestRow >= RULE.activeTicks ||
-    speaking >= 2 ||
-    (speaking === 1 && (candidate.pulseCount >= 4 || setting.axleTracks.flat().length === 1))
+    // two pulses at one place are a bogie
+    candidate.pulseCount >= 2 ||
+    (speaking === 1 && setting.axleTracks.flatMap(({ sensors }) => sensors).length === 1)
   );
 }
 
@@ -172,19 +179,21 @@ function standingSeconds(detector: Detector, setting: DetectorSetting, candidate
   return Math.max(...setting.axleTracks.map((track) => trackStanding(detector, candidate, track)));
 }
 
-/** The same for one track: as many axles must leave as have come. */
-function trackStanding(detector: Detector, candidate: Candidate, track: readonly string[]): number {
-  const counts = track.map((sensor) => candidate.pulses[sensor] ?? 0);
-  if (Math.max(...counts) === 0 || balanced(counts)) return RULE.quietSeconds;
-  const silent = track.filter((sensor) => (candidate.pulses[sensor] ?? 0) === 0);
+/**
+ * The same for one track: as many axles must leave as have come. More axles than find room on the bridge cannot stand
+ * there: then the other sensor is deaf.
+ */
+function trackStanding(detector: Detector, candidate: Candidate, { sensors, room }: AxleTrack): number {
+  const counts = sensors.map((sensor) => candidate.pulses[sensor] ?? 0);
+  const [most, least] = [Math.max(...counts), Math.min(...counts)];
+  if (most === 0 || balanced(most, least) || most - least > room) return RULE.quietSeconds;
+  const silent = sensors.filter((sensor) => (candidate.pulses[sensor] ?? 0) === 0);
   const believed = silent.every((sensor) => detector.proven[sensor] === true);
   return believed ? RULE.standSeconds : RULE.standUnprovenSeconds;
 }
 
 /** A pulse missed now and then does not keep a bridge occupied. */
-function balanced(counts: readonly number[]): boolean {
-  const most = Math.max(...counts);
-  const least = Math.min(...counts);
+function balanced(most: number, least: number): boolean {
   return least > 0 && most - least <= Math.max(1, Math.floor(most / 16));
 }
 
@@ -192,10 +201,18 @@ function balanced(counts: readonly number[]): boolean {
 function leave(detector: Detector, setting: DetectorSetting, candidate: Candidate): DetectorEvent[] {
   detector.open = null;
   if (!candidate.entered) return [];
-  for (const sensor of Object.keys(candidate.pulses)) detector.proven[sensor] = true;
+  for (const sensor of setting.axleTracks.flatMap(({ sensors }) => sensors)) {
+    if ((candidate.pulses[sensor] ?? 0) > 0) detector.proven[sensor] = true;
+    else if (waitedInVain(detector, candidate)) detector.proven[sensor] = false;
+  }
   candidate.freeUntilTick = candidate.lastActiveTick + 1 + Math.ceil(setting.freeSeconds * 10);
   detector.ringing = candidate;
   return [{ kind: 'left', candidate, micros: (candidate.lastActiveTick + 1) * TICK_MICROS }];
+}
+
+/** A sensor that stayed silent while the bridge was held for it is believed no longer. */
+function waitedInVain(detector: Detector, candidate: Candidate): boolean {
+  return detector.lastTick - candidate.lastActiveTick > RULE.standUnprovenSeconds * 10;
 }
 
 function release(detector: Detector, toMicros: Micros): DetectorEvent[] {

@@ -1,5 +1,5 @@
 import type { SampleBlock } from '../contract/block.ts';
-import { axleTracks, bridgeLengthM, type BridgeDefinition } from '../contract/bridge.ts';
+import { axleTracks, bridgeLengthM, type BridgeDefinition, type Sensor } from '../contract/bridge.ts';
 import type { Passage } from '../contract/passage.ts';
 import type { PassageWindow, PipelineOutput, WindowChannel } from '../contract/pipeline.ts';
 import { MICROS_PER_SECOND, timeName, type Micros } from '../contract/time.ts';
@@ -47,7 +47,7 @@ export function createPipeline(definition: BridgeDefinition, definitionVersion: 
     setting: {
       bridge: definition.id,
       freeSeconds: freeSeconds(definition),
-      axleTracks: axleTracks(definition).map((track) => track.map(({ id }) => id)),
+      axleTracks: axleTracks(definition).map((track) => ({ sensors: track.map(({ id }) => id), room: roomFor(track) })),
     },
     liveSpeed: createLiveSpeed(),
     vitalsMinute: -1,
@@ -235,6 +235,12 @@ function tellVitals(state: PipelineState, tick: number, output: PipelineOutput):
     const { samples, noise, offset } = vitals;
     output.vitals.push({ bridge: state.definition.id, sensor: sensor.id, micros: newest!, samples, noise, offset });
   }
+}
+
+/** Axles between the outermost sensors of a track: four every 13 m, the densest vehicles in use, and a bogie over. */
+function roomFor(track: readonly Sensor[]): number {
+  const places = track.map(({ alongM }) => alongM);
+  return 4 * Math.ceil((Math.max(...places) - Math.min(...places)) / 13) + 2;
 }
 
 /** How long the first mode takes to ring off: four time constants of the slowest span, within bounds. */

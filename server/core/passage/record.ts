@@ -191,6 +191,12 @@ function isClipped(sensor: Sensor, x: Float64Array): boolean {
   return false;
 }
 
+/** One sample off by S bends the trace by S, and by −S/2 on either side; a step or a kink does not. */
+function alone(before: number, here: number, after: number): boolean {
+  const half = -here / 2;
+  return Math.abs(before - half) < Math.abs(half) / 2 && Math.abs(after - half) < Math.abs(half) / 2;
+}
+
 /** A spike bends the trace this many times more than the r.m.s. bend of the samples about it, and by at least so much, m/s². */
 const SPIKE_RATIO = 8;
 const SPIKE_LEAST = 0.05;
@@ -205,7 +211,7 @@ function hasSpikes(x: Float64Array): boolean {
   const bend = (i: number): number => x[i]! - (x[i - 1]! + x[i + 1]!) / 2;
   for (let i = SPIKE_REACH + 1; i < x.length - SPIKE_REACH - 1; i++) {
     const here = Math.abs(bend(i));
-    if (here < SPIKE_LEAST) continue;
+    if (here < SPIKE_LEAST || !alone(bend(i - 1), bend(i), bend(i + 1))) continue;
     let squares = 0;
     for (let k = 3; k <= SPIKE_REACH; k++) squares += bend(i - k) ** 2 + bend(i + k) ** 2;
     if (here > SPIKE_RATIO * Math.sqrt(squares / (2 * (SPIKE_REACH - 2)))) return true;

@@ -33,7 +33,7 @@ export const RULE = {
   /** How long a train may stand on the bridge while the axle count says it is there. */
   standSeconds: 900,
   /** The same where one of the axle sensors has said nothing yet. */
-  standUnprovenSeconds: 20,
+  standUnprovenSeconds: 120,
   /** Quiet part before the train, and bounds of the free part after it. */
   beforeSeconds: 5,
   freeSecondsLeast: 6,

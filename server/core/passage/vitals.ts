@@ -18,8 +18,12 @@ export interface Vitals {
   /** Length of the present run of equal values, and of values at an end of the range. */
   equal: number;
   atEnd: number;
-  /** Running mean of the magnitude of the second difference, against which a spike stands out. */
-  roughness: number;
+  /** Bends of the trace in the second in hand: the last two, the sum of squares, and the largest that a lone sample makes. */
+  bend: number;
+  beforeBend: number;
+  bendSquares: number;
+  lonely: number;
+  lonelyMicros: Micros;
   /** The second in hand: number, count, sums about the first sample. */
   second: number;
   count: number;
@@ -40,7 +44,8 @@ export interface Vitals {
 
 const FLAT_SECONDS = 5;
 const CLIP_SAMPLES = 3;
-const SPIKE_RATIO = 20;
+/** A lone sample bends the trace this many times more than the r.m.s. bend of its second, itself left out. */
+const SPIKE_RATIO = 25;
 /** A condition that comes and goes ends after this long without it. */
 const HOLD_MICROS = 60 * MICROS_PER_SECOND;
 
@@ -58,7 +63,11 @@ export function createVitals(sensor: Sensor): Vitals {
     beforeLast: NaN,
     equal: 0,
     atEnd: 0,
-    roughness: 0,
+    bend: 0,
+    beforeBend: 0,
+    bendSquares: 0,
+    lonely: 0,
+    lonelyMicros: 0,
     second: -1,
     count: 0,
     pivot: 0,
@@ -123,10 +132,8 @@ function watchShape(
   note: Note,
 ): void {
   const flatRun = Math.ceil(FLAT_SECONDS * vitals.rateHz);
-  const slow = 1 / vitals.rateHz;
-  const learnt = vitals.rateHz;
   const { lowEnd, highEnd } = vitals;
-  let { last, beforeLast, equal, atEnd, roughness } = vitals;
+  let { last, beforeLast, equal, atEnd } = vitals;
   for (let i = from; i < to; i++) {
     const value = x[i]!;
     if (value === last) {
@@ -144,16 +151,7 @@ function watchShape(
     } else {
       atEnd = 0;
     }
-    const bend = Math.abs(last - (beforeLast + value) / 2);
-    const seen = vitals.samples + i - from;
-    if (seen > learnt && roughness > 0 && bend > SPIKE_RATIO * roughness && bend > Math.abs(value - beforeLast) * 4) {
-      begin(vitals, 'spike', microsAt(i), `a single sample stands out by ${bend.toFixed(3)}`, note);
-    }
-    // The first two samples have no neighbours. Later neither a spike nor a stuck value teaches what is usual.
-    if (seen >= 2 && equal < 3) {
-      const taught = seen > learnt ? Math.min(bend, 4 * roughness) : bend;
-      roughness += Math.max(1 / (seen - 1), slow) * (taught - roughness);
-    }
+    if (vitals.samples + i - from >= 2) followBend(vitals, last - (beforeLast + value) / 2, i, microsAt);
     beforeLast = last;
     last = value;
   }
@@ -161,7 +159,32 @@ function watchShape(
   vitals.beforeLast = beforeLast;
   vitals.equal = equal;
   vitals.atEnd = atEnd;
-  vitals.roughness = roughness;
+}
+
+/** Bends of neighbours tell a lone sample: −1/2 of it on either side. */
+function followBend(vitals: Vitals, after: number, i: number, microsAt: (index: number) => Micros): void {
+  const { beforeBend, bend } = vitals;
+  const half = -bend / 2;
+  const alone = Math.abs(beforeBend - half) < Math.abs(half) / 2 && Math.abs(after - half) < Math.abs(half) / 2;
+  if (alone && Math.abs(bend) > vitals.lonely) {
+    vitals.lonely = Math.abs(bend);
+    vitals.lonelyMicros = microsAt(i);
+  }
+  vitals.bendSquares += after * after;
+  vitals.beforeBend = bend;
+  vitals.bend = after;
+}
+
+function closeBends(vitals: Vitals, note: Note): void {
+  // A lone sample of height S leaves S² + 2 (S/2)² in the sum, a few percent more or less by the noise it rides on.
+  const square = vitals.lonely * vitals.lonely;
+  const others = Math.max(0, vitals.bendSquares - 1.5 * square) + 0.02 * square;
+  const rms = Math.sqrt(others / Math.max(1, vitals.count - 3));
+  if (vitals.count > 20 && vitals.lonely > SPIKE_RATIO * rms) {
+    begin(vitals, 'spike', vitals.lonelyMicros, `a single sample stands out by ${vitals.lonely.toPrecision(3)}`, note);
+  }
+  vitals.bendSquares = 0;
+  vitals.lonely = 0;
 }
 
 function closeSecond(vitals: Vitals, next: number, note: Note): void {
@@ -170,6 +193,7 @@ function closeSecond(vitals: Vitals, next: number, note: Note): void {
     vitals.rms.push(Math.sqrt(Math.max(0, vitals.squares / vitals.count - mean * mean)));
     vitals.means.push(mean + vitals.pivot);
   }
+  closeBends(vitals, note);
   vitals.count = 0;
   vitals.sum = 0;
   vitals.squares = 0;

@@ -2,7 +2,7 @@ import { describe, expect, it } from 'vitest';
 import { createDetector, detect, interrupt, neededFrom, type DetectorEvent } from '#core/passage/detector.ts';
 import { TICK_MICROS } from '#core/passage/rule.ts';
 
-const SETTING = { bridge: 'b', freeSeconds: 6, axleTracks: [['S1', 'S2']] };
+const SETTING = { bridge: 'b', freeSeconds: 6, axleTracks: [{ sensors: ['S1', 'S2'], room: 10 }] };
 const FIRST = 17_000_000_000;
 const QUIET = 1e-6;
 const LOUD = 1;
