@@ -84,6 +84,8 @@ export class Deck {
   /** Added mass over modal mass, per stretch. */
   private readonly added: readonly Float64Array[];
   private readonly streams: readonly RandomStream[];
+  /** State of the wind's low-passes, for each mode. */
+  private readonly reds: [number, number][];
   private readonly knots: readonly Float64Array[];
   /** Modes that share a place: an axle's position in the shape is worked out once for them. */
   private readonly places: readonly { startM: number; lengthM: number; modes: number[] }[];
@@ -107,6 +109,7 @@ export class Deck {
     this.forces = perMode(this.stepsPerSlot + 1);
     this.added = perMode(STRETCHES);
     this.knots = perMode(STRETCHES + 1);
+    this.reds = this.knots.map(() => [0, 0]);
     this.tables = modes.map(({ shape }) =>
       Float64Array.from({ length: TABLE + 1 }, (_, i) => shape.at(shape.startM + (i * shape.lengthM) / TABLE)),
     );
@@ -229,23 +232,28 @@ export class Deck {
     }
   }
 
-  /** Wind and the ground's unrest: white noise by straight lines between knots at the ends of stretches. */
+  /** Wind and the ground's unrest: noise by straight lines between knots at the ends of stretches. */
   private shake(winds: readonly WindEvent[]): void {
     if (this.ambientMs2 === 0 && winds.length === 0) return;
     const knotS = this.stepsPerStretch * this.stepS;
-    const rms = winds.reduce((sum, wind) => sum + windRms(wind, this.slotStartMicros()) ** 2, 0);
+    const first = this.model.modes[0]!;
+    // white force of density S gives q a variance of S/(4 ζ ω³) and its acceleration ω⁴ times that
+    const whiteScale = (mode: ModelMode): number =>
+      Math.sqrt((4 * mode.zeta) / (2 * Math.PI * mode.frequencyHz * knotS));
+    const squares = winds.reduce((sum, wind) => sum + windRms(wind, this.slotStartMicros()) ** 2, 0);
+    const gust = (Math.sqrt(squares) * whiteScale(first)) / redGain(first.frequencyHz, knotS);
     this.model.modes.forEach((mode, m) => {
       const knots = this.knots[m]!;
       knots[0] = knots[STRETCHES]!;
       const fresh = knots.subarray(1);
       this.streams[m]!.normals(fresh, STRETCHES);
-      const lowest = this.model.modes[0]!.frequencyHz;
-      const wind = mode.kind === 'bending' ? rms * (lowest / mode.frequencyHz) ** 4 : 0;
-      const level = Math.sqrt(this.ambientMs2 ** 2 + wind);
-      // white force of density S gives q a variance of S/(4 ζ ω³) and its acceleration ω⁴ times that
-      const omega = 2 * Math.PI * mode.frequencyHz;
-      const scale = level * Math.sqrt((4 * mode.zeta) / (omega * knotS));
-      for (let s = 0; s < STRETCHES; s++) fresh[s] = scale * fresh[s]!;
+      const scale = this.ambientMs2 * whiteScale(mode);
+      const red = this.reds[m]!;
+      for (let s = 0; s < STRETCHES; s++) {
+        const white = fresh[s]!;
+        reddenInto(red, white, knotS);
+        fresh[s] = scale * white + (mode.kind === 'bending' ? gust * red[1] : 0);
+      }
       const force = this.forces[m]!;
       const n = this.stepsPerStretch;
       for (let s = 0; s < STRETCHES; s++) {
@@ -315,4 +323,27 @@ function placesOf(modes: readonly ModelMode[]): { startM: number; lengthM: numbe
     else same.modes.push(m);
   });
   return places;
+}
+
+/**
+ * Wind force falls off with frequency: velocity as f^(−5/3) in power, and gusts smaller than the deck cancel over it
+ * (A. G. Davenport 1962). Two first-order low-passes with this corner make f^(−4) above it.
+ */
+const WIND_CORNER_HZ = 1;
+
+function redStep(knotS: number): number {
+  return Math.exp(-2 * Math.PI * WIND_CORNER_HZ * knotS);
+}
+
+function reddenInto(red: [number, number], white: number, knotS: number): void {
+  const a = redStep(knotS);
+  red[0] = a * red[0] + (1 - a) * white;
+  red[1] = a * red[1] + (1 - a) * red[0];
+}
+
+/** Gain of the two low-passes at a frequency. */
+function redGain(hz: number, knotS: number): number {
+  const a = redStep(knotS);
+  const angle = 2 * Math.PI * hz * knotS;
+  return (1 - a) ** 2 / (1 - 2 * a * Math.cos(angle) + a * a);
 }
