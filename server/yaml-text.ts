@@ -3,7 +3,7 @@ import type { Document, Node } from 'yaml';
 import type { Complaint } from '#core/contract/errors.ts';
 
 /** What a YAML text held, and where in it. */
-export interface YamlText {
+interface YamlText {
   data: unknown;
   /** Line and column, from 1, of the field at a path; of its nearest parent where the field is absent. */
   placeOf: (path: readonly (string | number)[], atName?: boolean) => { line: number; column: number };

@@ -187,7 +187,7 @@ const COURSES: Readonly<Record<string, readonly { daysAgo: number; frequency: nu
 };
 
 /** The invented bridges as they stand at a moment. */
-export function demonstrationParameters(definition: BridgeDefinition, nowMicros: Micros): BridgeParameters {
+function demonstrationParameters(definition: BridgeDefinition, nowMicros: Micros): BridgeParameters {
   const course = COURSES[definition.id];
   if (course === undefined) return bridgeParameters(definition);
   const points = course.map(({ daysAgo, frequency, damping }): ConditionPoint => ({

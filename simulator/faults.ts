@@ -1,5 +1,6 @@
 import type { SampleBlock } from '#core/contract/block.ts';
 import { MICROS_PER_SECOND, type Micros } from '#core/contract/time.ts';
+import type { RandomStream } from './random.ts';
 
 /** What loggers and their links do to a stream of blocks. Times are true times, before any error of the clock. */
 export type LoggerFault =
@@ -17,6 +18,18 @@ export type LoggerFault =
   | { kind: 'clipping'; fromMicros: Micros; lengthS: number; sensor: string; low: number; high: number }
   /** Values of a sensor come in steps, in its raw numbers. */
   | { kind: 'quantisation'; fromMicros: Micros; lengthS: number; sensor: string; step: number };
+
+/** Faults that a logger may have on an ordinary bad day, one of each kind, spread over a stretch of time. */
+export function drawFaults(random: RandomStream, fromMicros: Micros, toMicros: Micros): LoggerFault[] {
+  const when = (): Micros => Math.round(random.uniform(fromMicros, toMicros));
+  return [
+    { kind: 'gap', fromMicros: when(), lengthS: random.uniform(0.5, 5) },
+    { kind: 'duplicate', fromMicros: when(), afterBlocks: random.integer(1, 5) },
+    { kind: 'disorder', fromMicros: when(), afterBlocks: random.integer(1, 3) },
+    { kind: 'restart', fromMicros: when(), silentS: random.uniform(2, 8), clockStepS: random.uniform(-0.05, 0.05) },
+    { kind: 'clock', fromMicros, ppm: random.uniform(-30, 30) },
+  ];
+}
 
 /** A logger with faults: what it sends for each block that a sound one would send. */
 export interface FaultyLogger {

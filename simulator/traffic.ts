@@ -31,7 +31,7 @@ export interface TrafficOptions {
 }
 
 /** A train that is in the timetable by name. */
-export interface FixedTrain {
+interface FixedTrain {
   type: TrainType;
   direction: 'rising' | 'falling';
   speedMs: number;

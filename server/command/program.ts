@@ -196,6 +196,7 @@ function addSimulate(program: Command, console: Console, set: SetExit): void {
     .option('--start <time>', 'ISO 8601 or Unix seconds: time of the first sample', time)
     .option('--fast', 'as fast as it is taken (the default)', false)
     .option('--real-time', 'keep pace with the clock', false)
+    .option('--faults', 'let loggers lose, double and delay blocks, restart, and have a clock that is off', false)
     .option('--truth <file>', 'where the truth goes; beside a CSV file where absent')
     .option('--root <topic>', 'first level of the topics', 'spanbeat')
     .option('--username <name>', 'for the broker')
@@ -228,6 +229,7 @@ interface SimulateOptions {
   start?: Micros;
   fast: boolean;
   realTime: boolean;
+  faults: boolean;
   truth?: string;
   root: string;
   username?: string;

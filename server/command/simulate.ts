@@ -4,6 +4,7 @@ import type { SampleBlock } from '#core/contract/block.ts';
 import { bridgeLengthM, type BridgeDefinition } from '#core/contract/bridge.ts';
 import { SpanbeatError } from '#core/contract/errors.ts';
 import { MICROS_PER_SECOND, type Micros } from '#core/contract/time.ts';
+import { createFaultyLogger, drawFaults, type FaultyLogger } from '../../simulator/faults.ts';
 import { createLoggers } from '../../simulator/logger.ts';
 import { bridgeParameters } from '../../simulator/parameters.ts';
 import { offMicros, type PassageEvent } from '../../simulator/passage.ts';
@@ -36,6 +37,8 @@ export interface SimulateSettings {
   /** Keep pace with the clock; else as fast as the receiver takes it. */
   realTime: boolean;
   startMicros: Micros | null;
+  /** Let each logger have a bad day: a gap, a block twice, one late, a restart, a clock that is off. */
+  faults: boolean;
   /** File for the truth; beside a CSV file where null. */
   truth: string | null;
 }
@@ -79,7 +82,7 @@ export async function simulate(settings: SimulateSettings, console: Console): Pr
   }
 }
 
-export const isMqtt = (to: string): boolean => /^(mqtts?|tcp|ssl|tls|wss?):\/\//.test(to);
+const isMqtt = (to: string): boolean => /^(mqtts?|tcp|ssl|tls|wss?):\/\//.test(to);
 
 async function run(definition: BridgeDefinition, settings: SimulateSettings, sink: Sink): Promise<PassageTruth[]> {
   const { events, lengthS } = plan(definition, settings);
@@ -87,6 +90,7 @@ async function run(definition: BridgeDefinition, settings: SimulateSettings, sin
   const parameters = bridgeParameters(definition);
   const simulation = createBridgeSimulation({ definition, parameters, seed: settings.seed, startMicros });
   const loggers = createLoggers(definition);
+  const faulty = settings.faults ? faultyLoggers(definition, settings.seed, startMicros, lengthS) : null;
   const stretchS = settings.realTime ? STRETCH_S.realTime : STRETCH_S.fast;
   const begun = performance.now();
   const truths: PassageTruth[] = [];
@@ -98,14 +102,31 @@ async function run(definition: BridgeDefinition, settings: SimulateSettings, sin
       while (waiting[0] !== undefined && waiting[0].onMicros < toMicros + 3600 * MICROS_PER_SECOND) {
         simulation.schedule(waiting.shift()!);
       }
-      await sink.take(loggers.gather(simulation.advance(toMicros)));
+      const sent = loggers.gather(simulation.advance(toMicros));
+      await sink.take(faulty === null ? sent : sent.flatMap((block) => faulty.get(block.logger)?.pass(block) ?? []));
       truths.push(...simulation.takeTruths());
       if (settings.realTime) await sleep(Math.max(0, stretch * stretchS * 1000 - (performance.now() - begun)));
     }
+    await sink.take([...(faulty?.values() ?? [])].flatMap((logger) => logger.end()));
   } finally {
     await sink.close();
   }
   return truths;
+}
+
+function faultyLoggers(
+  definition: BridgeDefinition,
+  seed: number,
+  startMicros: Micros,
+  lengthS: number,
+): Map<string, FaultyLogger> {
+  return new Map(
+    definition.loggers.map(({ id }) => {
+      const random = new RandomStream(seed, `faults/${id}`);
+      const toMicros = startMicros + lengthS * MICROS_PER_SECOND;
+      return [id, createFaultyLogger(drawFaults(random, startMicros, toMicros))];
+    }),
+  );
 }
 
 /** The trains, with times from the beginning, and how long all of it takes. */

@@ -10,7 +10,7 @@ export interface ColumnName {
 }
 
 /** A column that is a sensor of the bridge. */
-export interface SensorColumn {
+interface SensorColumn {
   at: number;
   sensor: Sensor;
   /** Unit of the column's values; null where it holds what the logger sent, in the sensor's own unit and scale. */

@@ -276,6 +276,21 @@ describe('simulate', () => {
     }
   });
 
+  it('lets loggers have faults, of which analyse makes the same passages but for what was lost', async () => {
+    const words = ['-b', 'fennick', '-t', 'light engine', '-n', '6', '--seed', '9', '--faults'];
+    expect((await run('simulate', ...words, '--to', path('faulty.csv'))).exit).toBe(0);
+    const { exit, out } = await run('analyse', path('faulty.csv'), '-b', 'fennick');
+    expect(exit).toBe(0);
+    const passages = passagesOf(out);
+    const truth = JSON.parse(await readFile(path('faulty.truth.json'), 'utf8')) as { passages: { onMicros: number }[] };
+    // a clock that steps by up to 0.05 s, and a gap of at most 5 s and a silence of 8 that may hide a train
+    const found = truth.passages.filter(({ onMicros }) =>
+      passages.some(({ phases }) => Math.abs(phases.onMicros - onMicros) < 200_000),
+    );
+    expect(found.length).toBeGreaterThanOrEqual(4);
+    expect(passages.length).toBeLessThanOrEqual(truth.passages.length);
+  });
+
   it('publishes to a broker everything it simulates, acknowledged, in the past of its clock', async () => {
     const received: { topic: string; payload: Buffer }[] = [];
     const aedes = await Aedes.createBroker();

@@ -12,7 +12,7 @@ import { unitConversion, unitsOf } from './units.ts';
 /** Steps from the root of a definition to a field. */
 export type FieldPath = readonly (string | number)[];
 
-export interface DefinitionProblem {
+interface DefinitionProblem {
   code: ErrorCode;
   path: FieldPath;
   /** What was found, what was expected; without the path. */
