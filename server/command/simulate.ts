@@ -14,7 +14,7 @@ import { createBridgeSimulation } from '../../simulator/simulation.ts';
 import { createTrain, TRAIN_TYPES, type TrainType } from '../../simulator/train.ts';
 import type { PassageTruth } from '../../simulator/truth.ts';
 import { readDefinition } from '../definition.ts';
-import { csvHeader, csvRows } from '../exchange/csv-text.ts';
+import { csvHeader, csvRows } from '#core/contract/csv-text.ts';
 import { definitionFile } from './definition-file.ts';
 import { complain, complainOf, EXIT, type Console } from './outcome.ts';
 

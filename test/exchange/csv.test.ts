@@ -7,7 +7,7 @@ import { afterAll, beforeAll, describe, expect, it } from 'vitest';
 import type { SampleBlock } from '#core/contract/block.ts';
 import type { BridgeDefinition } from '#core/contract/bridge.ts';
 import { SpanbeatError } from '#core/contract/errors.ts';
-import { csvOfWindow, float32Text, isoMicros } from '../../server/exchange/csv-text.ts';
+import { csvOfWindow, float32Text, isoMicros } from '#core/contract/csv-text.ts';
 import { openRecording } from '../../server/exchange/opening.ts';
 import { joinRecordings } from '../../server/exchange/recording.ts';
 import { collect } from '../support/collect.ts';
@@ -292,7 +292,7 @@ describe('a wave form written as CSV', () => {
             { sensor: 'A2', rateHz: 100, runs: [{ startMicros: DAWN + 3_000_000, samples }] },
             { sensor: 'T1', rateHz: 1, runs: [{ startMicros: DAWN + 1234, samples: samples.subarray(0, 2) }] },
           ];
-          const text = (await collect(csvOfWindow(definition, channels))).join('');
+          const text = [...csvOfWindow(definition, channels)].join('');
           const { blocks, units } = await read(text, definition);
           expect(units.get('A1')).toBe('m/s²');
           for (const { sensor, runs } of channels) {

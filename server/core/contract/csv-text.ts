@@ -1,7 +1,7 @@
-import type { BridgeDefinition } from '#core/contract/bridge.ts';
-import type { WindowChannel } from '#core/contract/pipeline.ts';
-import { civilTime, MICROS_PER_SECOND, sampleMicros, type Micros } from '#core/contract/time.ts';
-import { SI_UNIT } from '#core/contract/units.ts';
+import type { BridgeDefinition } from './bridge.ts';
+import type { WindowChannel } from './pipeline.ts';
+import { civilTime, MICROS_PER_SECOND, sampleMicros, type Micros } from './time.ts';
+import { SI_UNIT } from './units.ts';
 
 /** Rows put together before they are handed on. */
 const ROWS_PER_CHUNK = 2000;
@@ -14,25 +14,22 @@ export interface CsvTrack {
 }
 
 /**
- * A passage's wave form as CSV: `time` in ISO 8601 UTC with microseconds, one column a sensor with its unit, one row
- * each moment at which any of them has a sample. A sensor of a lower rate, or in a gap, leaves its field empty. Read
- * again by this program, each sample comes back to the same float32.
+ * A passage's wave form as CSV (RFC 4180 but for line ends): `time` in ISO 8601 UTC with microseconds, one column a sensor
+ * with its unit, one row each moment at which any of them has a sample. A sensor of a lower rate, or in a gap, leaves its
+ * field empty. Read again by this program, each sample comes back to the same float32; the units in the header say that
+ * no scale of the definition holds for them any more.
  *
  * @param definition the bridge, for the units
  * @param channels calibrated samples in SI
  * @yields text, some thousand rows at a time
  */
-export async function* csvOfWindow(
-  definition: BridgeDefinition,
+export function* csvOfWindow(
+  definition: Pick<BridgeDefinition, 'sensors'>,
   channels: readonly WindowChannel[],
-): AsyncGenerator<string> {
+): Generator<string> {
   const unitOf = new Map(definition.sensors.map(({ id, quantity }) => [id, SI_UNIT[quantity]]));
   yield csvHeader(channels.map(({ sensor }) => `${sensor} [${unitOf.get(sensor) ?? '-'}]`));
-  for (const rows of csvRows(channels)) {
-    yield rows;
-    // The caller may be slow, the window long: others get their turn.
-    await new Promise((resolve) => setImmediate(resolve));
-  }
+  yield* csvRows(channels);
 }
 
 export const csvHeader = (columns: readonly string[]): string => `time,${columns.join(',')}\n`;
