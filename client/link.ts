@@ -1,5 +1,5 @@
 import { decodeFrame, type Frame } from '#core/contract/frame.ts';
-import { CLOSE, LIVE_VERSION, type ServerMessage, type ViewerMessage } from '#core/contract/live.ts';
+import { CLOSE, COLUMN_MICROS, LIVE_VERSION, type ServerMessage } from '#core/contract/live.ts';
 
 /** What of the browser's WebSocket is used, so that tests can hand in their own. */
 export interface Socket {
@@ -42,8 +42,16 @@ export interface LinkListener {
   garbled: (why: string) => void;
 }
 
+/** What is asked of the live push; see ViewerMessage of the contract. */
+export interface Watch {
+  bridge: string;
+  columnMicros: (typeof COLUMN_MICROS)[number];
+  sensors?: readonly string[];
+  pastS?: number;
+}
+
 export interface Link {
-  watch(watch: Omit<Extract<ViewerMessage, { type: 'watch' }>, 'type'>): void;
+  watch(watch: Watch): void;
   unwatch(): void;
   /** Tries again now rather than when the wait is over. */
   retry(): void;
@@ -70,7 +78,7 @@ export function openLink(rim: LinkRim, listener: LinkListener): Link {
   let state: LinkState = { kind: 'connecting', attempt: 0 };
   let attempt = 0;
   let run: string | null = null;
-  let watching: ViewerMessage | null = null;
+  let watching: (Watch & { type: 'watch' }) | null = null;
   let heardMs = rim.now();
   let isOpen = false;
   let closed = false;
@@ -172,7 +180,7 @@ export function openLink(rim: LinkRim, listener: LinkListener): Link {
     },
     unwatch() {
       watching = null;
-      if (isOpen) socket?.send(JSON.stringify({ type: 'unwatch' } satisfies ViewerMessage));
+      if (isOpen) socket?.send(JSON.stringify({ type: 'unwatch' }));
     },
     retry() {
       if (state.kind === 'lost' && socket === null) connect();

@@ -7,7 +7,7 @@ import { SEVERITIES, severityRank, type Severity } from '#core/contract/severity
 import type { BridgeStatus, SystemStatus } from '#core/contract/status.ts';
 import type { Micros } from '#core/contract/time.ts';
 import { RequestFailed } from './api.ts';
-import { browserRim, openLink, type Link, type LinkState } from './link.ts';
+import { browserRim, openLink, type Link, type LinkState, type Watch } from './link.ts';
 
 type Progress = Extract<ServerMessage, { type: 'progress' }>;
 type AxlesMessage = Extract<ServerMessage, { type: 'axles' }>;
@@ -84,7 +84,7 @@ class Live {
     return () => this.#streams.delete(stream);
   }
 
-  watch(watch: Parameters<Link['watch']>[0]): void {
+  watch(watch: Watch): void {
     this.#link?.watch(watch);
   }
 
