@@ -156,9 +156,9 @@ function pairSensors(nothing: AxleReading, bridge: BridgeDefinition, low: Place,
 }
 
 /**
- * Pairs the pulses of two sensors: one to one where their numbers are equal and the delays agree, else by the delay
- * that three quarters of the shorter list share. A train that stood on the bridge has delays of all kinds, so equal
- * numbers without a shared delay are still paired one to one.
+ * Pairs the pulses of two sensors: one to one where their numbers are equal, else by the delay that three quarters of
+ * the shorter list share. Equal numbers can hide a different miss on either side; then nearly all others share a delay
+ * which one-to-one pairs do not.
  */
 export function matchPulses(
   low: readonly Pulse[],
@@ -170,8 +170,26 @@ export function matchPulses(
   const alike = oneWay && Math.max(...delays.map(Math.abs)) < 1.5 * Math.min(...delays.map(Math.abs));
   if (alike) return { pairs: direct, complete: true };
   const shared = bestShared(low, high);
-  if (shared.length >= Math.max(2, 0.75 * Math.min(low.length, high.length))) return { pairs: shared, complete: false };
-  return oneWay ? { pairs: direct, complete: true } : { pairs: [], complete: false };
+  const fewest = Math.min(low.length, high.length);
+  const wanted = oneWay ? fewest - Math.max(1, Math.floor(fewest / 16)) : 0.75 * fewest;
+  if (shared.length >= Math.max(2, wanted)) return { pairs: shared, complete: false };
+  if (oneWay) return { pairs: direct, complete: true };
+  return { pairs: withoutLowest(low, high), complete: false };
+}
+
+/** A standing train can leave a false pulse or two, low ones: one-to-one pairs without them, if they then run one way. */
+function withoutLowest(low: readonly Pulse[], high: readonly Pulse[]): [Pulse, Pulse][] {
+  const fewest = Math.min(low.length, high.length);
+  const surplus = Math.max(low.length, high.length) - fewest;
+  if (surplus === 0 || surplus > Math.max(1, Math.floor(fewest / 16))) return [];
+  const highest = (pulses: readonly Pulse[]): Pulse[] => {
+    const kept = new Set([...pulses].sort((a, b) => b.height - a.height).slice(0, fewest));
+    return pulses.filter((pulse) => kept.has(pulse));
+  };
+  const others = highest(high);
+  const pairs = highest(low).map((pulse, i): [Pulse, Pulse] => [pulse, others[i]!]);
+  const delays = pairs.map(([a, b]) => b.micros - a.micros);
+  return fewest >= 2 && Math.min(...delays) * Math.max(...delays) > 0 ? pairs : [];
 }
 
 function bestShared(low: readonly Pulse[], high: readonly Pulse[]): [Pulse, Pulse][] {
@@ -186,11 +204,12 @@ function bestShared(low: readonly Pulse[], high: readonly Pulse[]): [Pulse, Puls
   return best;
 }
 
-/** A pulse belongs to a shared delay when it lies within this share of it, s at least. */
+/** A pulse belongs to a shared delay when it lies within this share of it, and within these bounds, µs. */
 const DELAY_SHARE = 0.06;
+const DELAY_WITHIN = [8_000, 150_000] as const;
 
 function pairsAt(low: readonly Pulse[], high: readonly Pulse[], delay: number): [Pulse, Pulse][] {
-  const tolerance = Math.max(8_000, Math.abs(delay) * DELAY_SHARE);
+  const tolerance = Math.min(DELAY_WITHIN[1], Math.max(DELAY_WITHIN[0], Math.abs(delay) * DELAY_SHARE));
   const pairs: [Pulse, Pulse][] = [];
   let from = 0;
   for (const a of low) {
@@ -223,14 +242,15 @@ function placeAxles(pairs: readonly [Pulse, Pulse][], speeds: readonly number[])
 }
 
 /** A pulse stands above noise and above this share of the highest; two pulses are parted by a valley below this share of the lesser. */
-const HEIGHT_SHARE = 0.12;
+const HEIGHT_SHARE = 0.15;
 const VALLEY_SHARE = 0.7;
 const SIGMAS = 8;
 
 /** Crests of the axle pulses in one channel, by a parabola through the top of each. */
 export function axlePulses(channel: RecordChannel): Pulse[] {
   const { x } = channel;
-  const centre = median(x);
+  // The quiet part is the base line: a wheel that stands on a gauge can hold it up for most of the record.
+  const centre = channel.offset === null ? median(x) : 0;
   // Most of a passage is between axles, and the quiet part may hold the first of a creeping train: the lesser is true.
   const noise = Math.min(channel.noise ?? Infinity, 1.4826 * mad(x));
   const highest = x.reduce((most, value) => Math.max(most, value), 0) - centre;

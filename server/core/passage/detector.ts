@@ -47,6 +47,8 @@ export interface TickFeatures {
   /** Noise power per sample of each deck channel that has data. */
   powers: { sensor: string; power: number }[];
   pulses: { sensor: string; micros: Micros }[];
+  /** Magnitude of the live speed, where two axle sensors have told it. */
+  speedMs: number | null;
 }
 
 export type DetectorEvent =
@@ -66,7 +68,8 @@ export interface DetectorSetting {
 
 export interface AxleTrack {
   sensors: readonly string[];
-  /** Axles that find room between the outermost sensors. */
+  /** Distance between the outermost sensors, and how many axles find room between them. */
+  lengthM: number;
   room: number;
 }
 
@@ -158,7 +161,8 @@ function follow(
     events.push({ kind: 'entered', candidate, micros: candidate.onsetTick * TICK_MICROS });
   }
   const quietSeconds = ((tick.number - candidate.lastActiveTick) * TICK_MICROS) / MICROS_PER_SECOND;
-  if (quietSeconds > standingSeconds(detector, setting, candidate)) events.push(...leave(detector, setting, candidate));
+  if (quietSeconds > standingSeconds(detector, setting, candidate, tick.speedMs))
+    events.push(...leave(detector, setting, candidate));
   return events;
 }
 
@@ -173,28 +177,46 @@ function looksLikeTrain(candidate: Candidate, setting: DetectorSetting): boolean
 }
 
 /** How long quiet must last before the passage counts as over: longer while the axle count says that a train stands there. */
-function standingSeconds(detector: Detector, setting: DetectorSetting, candidate: Candidate): number {
+function standingSeconds(
+  detector: Detector,
+  setting: DetectorSetting,
+  candidate: Candidate,
+  speedMs: number | null,
+): number {
   if (candidate.pulseCount === 0) return RULE.quietSeconds;
   if (!candidate.entered) return RULE.pulseWaitSeconds;
-  return Math.max(...setting.axleTracks.map((track) => trackStanding(detector, candidate, track)));
+  const used = setting.axleTracks.filter(({ sensors }) =>
+    sensors.some((sensor) => candidate.pulses[sensor] !== undefined),
+  );
+  return Math.max(...used.map((track) => trackStanding(detector, candidate, track, speedMs)));
 }
 
 /**
  * The same for one track: as many axles must leave as have come. More axles than find room on the bridge cannot stand
  * there: then the other sensor is deaf.
  */
-function trackStanding(detector: Detector, candidate: Candidate, { sensors, room }: AxleTrack): number {
+function trackStanding(
+  detector: Detector,
+  candidate: Candidate,
+  { sensors, room, lengthM }: AxleTrack,
+  speedMs: number | null,
+): number {
   const counts = sensors.map((sensor) => candidate.pulses[sensor] ?? 0);
   const [most, least] = [Math.max(...counts), Math.min(...counts)];
-  if (most === 0 || balanced(most, least) || most - least > room) return RULE.quietSeconds;
+  if (most - least > room) return RULE.quietSeconds;
+  if (most === least) return sensors.length < 2 ? RULE.quietSeconds : nextBogieSeconds(lengthM, speedMs);
+  // A pulse missed now and then does not keep a bridge occupied for long.
+  if (least > 0 && most - least <= Math.max(1, Math.floor(most / 16))) return RULE.pulseWaitSeconds;
   const silent = sensors.filter((sensor) => (candidate.pulses[sensor] ?? 0) === 0);
   const believed = silent.every((sensor) => detector.proven[sensor] === true);
   return believed ? RULE.standSeconds : RULE.standUnprovenSeconds;
 }
 
-/** A pulse missed now and then does not keep a bridge occupied. */
-function balanced(most: number, least: number): boolean {
-  return least > 0 && most - least <= Math.max(1, Math.floor(most / 16));
+/** On a short bridge no axle may be on it between two bogies of one coach: the next may yet come. */
+function nextBogieSeconds(lengthM: number, speedMs: number | null): number {
+  if (speedMs === null || speedMs === 0) return RULE.quietSeconds;
+  const waitSeconds = (RULE.bogieDistanceM - lengthM) / speedMs + 0.3;
+  return Math.min(RULE.pulseWaitSeconds, Math.max(RULE.emptySeconds, waitSeconds));
 }
 
 /** The train has gone: a passage rings on until its free part ends; what was no train is forgotten. */

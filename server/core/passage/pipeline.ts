@@ -9,6 +9,7 @@ import {
   detect,
   interrupt,
   neededFrom,
+  type AxleTrack,
   type Detector,
   type DetectorEvent,
   type DetectorSetting,
@@ -47,7 +48,7 @@ export function createPipeline(definition: BridgeDefinition, definitionVersion: 
     setting: {
       bridge: definition.id,
       freeSeconds: freeSeconds(definition),
-      axleTracks: axleTracks(definition).map((track) => ({ sensors: track.map(({ id }) => id), room: roomFor(track) })),
+      axleTracks: axleTracks(definition).map(trackOf),
     },
     liveSpeed: createLiveSpeed(),
     vitalsMinute: -1,
@@ -149,7 +150,7 @@ function closeTicks(state: PipelineState, output: PipelineOutput, all: boolean):
     const number = Math.min(...taking.map(({ ticks }) => ticks[0]?.number ?? Infinity));
     if (number === Infinity) break;
     if (!all && !complete(taking, number)) break;
-    const features = takeTick(taking, number);
+    const features = takeTick(taking, number, state.liveSpeed.speedMs);
     act(state, detect(state.detector, state.setting, features), output);
     tellVitals(state, number, output);
   }
@@ -166,8 +167,9 @@ function complete(channels: readonly Channel[], number: number): boolean {
   return channels.every((channel) => channel.through >= number || !channel.waitedFor);
 }
 
-function takeTick(channels: readonly Channel[], number: number): TickFeatures {
-  const features: TickFeatures = { number, powers: [], pulses: [] };
+function takeTick(channels: readonly Channel[], number: number, liveSpeedMs: number | null): TickFeatures {
+  const speedMs = liveSpeedMs === null ? null : Math.abs(liveSpeedMs);
+  const features: TickFeatures = { number, powers: [], pulses: [], speedMs };
   for (const channel of channels) {
     while (channel.ticks[0] !== undefined && channel.ticks[0].number <= number) {
       const tick = channel.ticks.shift()!;
@@ -237,10 +239,11 @@ function tellVitals(state: PipelineState, tick: number, output: PipelineOutput):
   }
 }
 
-/** Axles between the outermost sensors of a track: four every 13 m, the densest vehicles in use, and a bogie over. */
-function roomFor(track: readonly Sensor[]): number {
+/** Between the outermost sensors of a track: four axles every 13 m, the densest vehicles in use, and a bogie over. */
+function trackOf(track: readonly Sensor[]): AxleTrack {
   const places = track.map(({ alongM }) => alongM);
-  return 4 * Math.ceil((Math.max(...places) - Math.min(...places)) / 13) + 2;
+  const lengthM = Math.max(...places) - Math.min(...places);
+  return { sensors: track.map(({ id }) => id), lengthM, room: 4 * Math.ceil(lengthM / 13) + 2 };
 }
 
 /** How long the first mode takes to ring off: four time constants of the slowest span, within bounds. */

@@ -28,6 +28,9 @@ export const RULE = {
   activeTicks: 3,
   /** A passage is over after this much quiet, once no axle is known to be on the bridge. */
   quietSeconds: 1.5,
+  /** Quiet that parts two trains when every axle that came has left, and the longest way between axles of one train. */
+  emptySeconds: 0.8,
+  bogieDistanceM: 22,
   /** After a first pulse the next bogie of a creeping train is waited for: 18 m at 3 m/s. */
   pulseWaitSeconds: 6,
   /** How long a train may stand on the bridge while the axle count says it is there. */

@@ -2,7 +2,7 @@ import { describe, expect, it } from 'vitest';
 import { createDetector, detect, interrupt, neededFrom, type DetectorEvent } from '#core/passage/detector.ts';
 import { TICK_MICROS } from '#core/passage/rule.ts';
 
-const SETTING = { bridge: 'b', freeSeconds: 6, axleTracks: [{ sensors: ['S1', 'S2'], room: 10 }] };
+const SETTING = { bridge: 'b', freeSeconds: 6, axleTracks: [{ sensors: ['S1', 'S2'], lengthM: 20, room: 10 }] };
 const FIRST = 17_000_000_000;
 const QUIET = 1e-6;
 const LOUD = 1;
@@ -27,7 +27,7 @@ function run(count: number, scene: Scene, skip: (tick: number) => boolean = () =
     }));
     const micros = (FIRST + i) * TICK_MICROS + 30_000;
     const pulses = (scene.pulses?.(i) ?? []).map((sensor) => ({ sensor, micros }));
-    events.push(...detect(detector, SETTING, { number: FIRST + i, powers, pulses }));
+    events.push(...detect(detector, SETTING, { number: FIRST + i, powers, pulses, speedMs: null }));
   }
   const told = events.map((event) => event.kind);
   return { detector, events, told };
@@ -124,7 +124,11 @@ describe('the passage detector', () => {
     for (let i = 0; i < 3000; i++) {
       const power = 1e-3 * 10 ** (i / 3000);
       const powers = all.map((sensor) => ({ sensor, power }));
-      told.push(...detect(detector, SETTING, { number: FIRST + i, powers, pulses: [] }).map((event) => event.kind));
+      told.push(
+        ...detect(detector, SETTING, { number: FIRST + i, powers, pulses: [], speedMs: null }).map(
+          (event) => event.kind,
+        ),
+      );
     }
     expect(told).toEqual([]);
   });
