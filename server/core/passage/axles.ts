@@ -132,9 +132,9 @@ function pairSensors(nothing: AxleReading, bridge: BridgeDefinition, low: Place,
   const [entry, exit] = rising ? [low, high] : [high, low];
   const lengthM = bridgeLengthM(bridge);
   const moving = quantile(speeds, 0.9);
-  const near = (group: readonly number[]): number => {
+  const near = (group: readonly number[], pulses: readonly Pulse[]): number => {
     const fast = group.filter((v) => v > moving / 2);
-    return fast.length > 0 ? median(fast) : moving;
+    return Math.max(fast.length > 0 ? median(fast) : moving, bogieSpeed(pulses));
   };
   const beforeM = rising ? entry.alongM : lengthM - entry.alongM;
   const afterM = rising ? lengthM - exit.alongM : exit.alongM;
@@ -147,12 +147,25 @@ function pairSensors(nothing: AxleReading, bridge: BridgeDefinition, low: Place,
       ? measured(meanSpeed, error, complete ? 'good' : 'usable', complete ? undefined : notes.at(-1))
       : measured(speed, error, 'usable', notes[0]),
     direction: rising ? 'rising' : 'falling',
-    onMicros: Math.round(entry.pulses[0]!.micros - (beforeM / near(speeds.slice(0, 4))) * MICROS_PER_SECOND),
-    offMicros: Math.round(exit.pulses.at(-1)!.micros + (afterM / near(speeds.slice(-4))) * MICROS_PER_SECOND),
+    onMicros: Math.round(
+      entry.pulses[0]!.micros - (beforeM / near(speeds.slice(0, 4), entry.pulses.slice(0, 4))) * MICROS_PER_SECOND,
+    ),
+    offMicros: Math.round(
+      exit.pulses.at(-1)!.micros + (afterM / near(speeds.slice(-4), exit.pulses.slice(-4))) * MICROS_PER_SECOND,
+    ),
     firstPulse: nothing.firstPulse,
     lastPulse: nothing.lastPulse,
     notes,
   };
+}
+
+/** No bogie is shorter than this, m: two pulses in quick succession give a least speed, also of a train that then stood. */
+const SHORTEST_WHEELBASE_M = 1.8;
+
+function bogieSpeed(pulses: readonly Pulse[]): number {
+  let shortest = Infinity;
+  for (let i = 1; i < pulses.length; i++) shortest = Math.min(shortest, pulses[i]!.micros - pulses[i - 1]!.micros);
+  return (SHORTEST_WHEELBASE_M * MICROS_PER_SECOND) / shortest;
 }
 
 /**

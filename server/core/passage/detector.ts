@@ -153,7 +153,8 @@ function follow(
   const events: DetectorEvent[] = [];
   if (!candidate.entered && looksLikeTrain(candidate, setting)) {
     candidate.entered = true;
-    if (detector.ringing !== null) events.push(...release(detector, (candidate.onsetTick - 2) * TICK_MICROS));
+    if (detector.ringing !== null)
+      events.push(...release(detector, (candidate.onsetTick - RULE.approachTicks) * TICK_MICROS));
     candidate.windowFrom = Math.max(
       candidate.onsetTick * TICK_MICROS - RULE.beforeSeconds * MICROS_PER_SECOND,
       detector.clearFrom,

@@ -6,7 +6,7 @@ import { zeroPhase } from '../signal/zero-phase.ts';
 import { indexAt, type RecordChannel } from './record.ts';
 
 /**
- * Where a bridge begins or ceases to be driven. A deck that nobody drives moves by its own law: each sample follows
+ * Where a bridge begins or ceases to be driven, span by span: the last axle drives the last span alone. A deck that nobody drives moves by its own law: each sample follows
  * from those beside it by one linear recurrence, the same for all channels (the modes' poles). The recurrence is fitted
  * where the deck is free and carried towards the train; from the first sample that does not obey it on, an axle is on
  * the bridge. An axle of a tenth of the deck's mass, 50 ms from a bearing, already shows as tenths of m/s².
@@ -30,36 +30,41 @@ const HOLD = 4;
 const ROUNDS_MOST = 8;
 
 /** Last time, searching from the free stretch back to `untilMicros`, at which the deck was driven; null if it cannot be told. */
-export function lastDriven(deck: readonly RecordChannel[], free: FreeStretch, untilMicros: Micros): Micros | null {
-  const traces = tracesOf(deck, untilMicros, free.toMicros);
-  if (traces === null) return null;
-  const { x, startMicros } = traces;
-  const reversed = x.map((trace) => trace.toReversed());
-  const length = reversed[0]!.length;
+export function lastDriven(spans: readonly RecordChannel[][], free: FreeStretch, untilMicros: Micros): Micros | null {
   const fitted = Math.floor(((free.toMicros - free.fromMicros) * RATE_HZ) / MICROS_PER_SECOND);
-  const found = firstDisobedient(reversed, fitted);
-  return found === null ? null : startMicros + Math.round(((length - 1 - found) * MICROS_PER_SECOND) / RATE_HZ);
+  const edges = spans.map((deck) => {
+    const traces = tracesOf(deck, untilMicros, free.toMicros);
+    if (traces === null) return null;
+    const reversed = traces.map((trace) => trace.toReversed());
+    const found = firstDisobedient(reversed, fitted);
+    return found === null ? null : untilMicros + sampleTime(reversed[0]!.length - 1 - found);
+  });
+  const times = edges.filter((micros) => micros !== null);
+  return times.length === 0 ? null : Math.max(...times);
 }
 
 /** First time, searching from the free stretch on to `untilMicros`, at which the deck is driven. */
-export function firstDriven(deck: readonly RecordChannel[], free: FreeStretch, untilMicros: Micros): Micros | null {
-  const traces = tracesOf(deck, free.fromMicros, untilMicros);
-  if (traces === null) return null;
+export function firstDriven(spans: readonly RecordChannel[][], free: FreeStretch, untilMicros: Micros): Micros | null {
   const fitted = Math.floor(((free.toMicros - free.fromMicros) * RATE_HZ) / MICROS_PER_SECOND);
-  const found = firstDisobedient(traces.x, fitted);
-  return found === null ? null : traces.startMicros + Math.round((found * MICROS_PER_SECOND) / RATE_HZ);
+  const edges = spans.map((deck) => {
+    const traces = tracesOf(deck, free.fromMicros, untilMicros);
+    const found = traces === null ? null : firstDisobedient(traces, fitted);
+    return found === null ? null : free.fromMicros + sampleTime(found);
+  });
+  const times = edges.filter((micros) => micros !== null);
+  return times.length === 0 ? null : Math.min(...times);
+}
+
+function sampleTime(index: number): Micros {
+  return Math.round((index * MICROS_PER_SECOND) / RATE_HZ);
 }
 
 /** Low-passed traces on one grid of RATE_HZ between two times, by straight lines between samples. */
-function tracesOf(
-  deck: readonly RecordChannel[],
-  fromMicros: Micros,
-  toMicros: Micros,
-): { x: Float64Array[]; startMicros: Micros } | null {
+function tracesOf(deck: readonly RecordChannel[], fromMicros: Micros, toMicros: Micros): Float64Array[] | null {
   const length = Math.floor(((toMicros - fromMicros) * RATE_HZ) / MICROS_PER_SECOND);
   const fast = deck.filter(({ rateHz }) => rateHz >= 2 * RATE_HZ);
   if (fast.length === 0 || length < (FREE_SECONDS_LEAST * RATE_HZ) / 2) return null;
-  const x = fast.map((channel) => {
+  return fast.map((channel) => {
     const smooth = zeroPhase(lowpass(4, BAND_HZ, channel.rateHz), channel.x);
     return Float64Array.from({ length }, (_, i) => {
       const place = Math.max(0, indexAt(channel, fromMicros + (i * MICROS_PER_SECOND) / RATE_HZ));
@@ -68,7 +73,6 @@ function tracesOf(
       return (1 - part) * smooth[whole]! + part * smooth[whole + 1]!;
     });
   });
-  return { x, startMicros: fromMicros };
 }
 
 /**

@@ -1,4 +1,4 @@
-import { type BridgeDefinition } from '../contract/bridge.ts';
+import { spanAt, type BridgeDefinition } from '../contract/bridge.ts';
 import { measured, notMeasurable, type Measured, type Quality } from '../contract/measure.ts';
 import type { Passage, Phases } from '../contract/passage.ts';
 import type { WindowChannel } from '../contract/pipeline.ts';
@@ -45,7 +45,7 @@ export function measurePassage(
   const axles = readAxles(bridge, dynamic);
   const noise = rollingNoise(bridge, dynamic, frame.triggerMicros);
   const span = noise === null ? null : noiseSpan(noise);
-  const found = findPhases(frame, axles, span, record);
+  const found = findPhases(bridge, frame, axles, span, record);
   if (found === null) return null;
   const { onMicros, offMicros } = found;
   const readings = dynamic.map((channel) => measureChannel(bridge, channel, onMicros - 200_000, frame.toMicros));
@@ -88,6 +88,7 @@ const SUSTAINED_SECONDS = 0.3;
 const SUSTAINED_UNHEARD_SECONDS = 0.8;
 
 function findPhases(
+  bridge: BridgeDefinition,
   frame: PassageFrame,
   axles: AxleReading,
   span: NoiseSpan | null,
@@ -102,7 +103,7 @@ function findPhases(
   const denied = listening >= 2 && !heard;
   if (span !== null && !denied && span.sustainedSeconds >= least) {
     const notes = listening > 0 ? ['the axle sensors did not see the whole train'] : [];
-    return { ...sharpened(frame, span, record), foundBy: 'wheel-rail noise', quality: 'usable', notes };
+    return { ...sharpened(bridge, frame, span, axles, record), foundBy: 'wheel-rail noise', quality: 'usable', notes };
   }
   if (frame.whole === true) {
     return {
@@ -123,11 +124,14 @@ const EDGE_AGREEMENT_SECONDS = 0.9;
 
 /** Noise finds the train, the deck's own motion finds when its first axle came and its last one left. */
 function sharpened(
+  bridge: BridgeDefinition,
   frame: PassageFrame,
   span: NoiseSpan,
+  axles: AxleReading,
   record: readonly RecordChannel[],
 ): Pick<Phases, 'onMicros' | 'offMicros'> {
   const deck = record.filter((channel) => channel.deck && trusted(channel));
+  const spans = bridge.spans.map(({ id }) => deck.filter(({ sensor }) => spanAt(bridge, sensor.alongM).id === id));
   const margin = EDGE_MARGIN_SECONDS * MICROS_PER_SECOND;
   const reach = EDGE_AGREEMENT_SECONDS * MICROS_PER_SECOND;
   const before = { fromMicros: frame.fromMicros, toMicros: span.onMicros - margin };
@@ -135,11 +139,11 @@ function sharpened(
     fromMicros: span.offMicros + margin,
     toMicros: Math.min(frame.toMicros, span.offMicros + margin + 3 * MICROS_PER_SECOND),
   };
-  const on = firstDriven(deck, before, span.onMicros + reach);
-  const off = lastDriven(deck, after, span.offMicros - reach);
+  const on = firstDriven(spans, before, span.onMicros + reach);
+  const off = lastDriven(spans, after, span.offMicros - reach);
   return {
-    onMicros: on !== null && on < span.offMicros ? on : span.onMicros,
-    offMicros: off !== null && off > span.onMicros ? off : span.offMicros,
+    onMicros: Math.min(on !== null && on < span.offMicros ? on : span.onMicros, axles.firstPulse ?? Infinity),
+    offMicros: Math.max(off !== null && off > span.onMicros ? off : span.offMicros, axles.lastPulse ?? -Infinity),
   };
 }
 

@@ -98,9 +98,8 @@ export function noiseSpan(noise: RollingNoise): NoiseSpan | null {
   if (above.length < 6) return null;
   const level = quantile(above, LEVEL_QUANTILE);
   const deck = Math.max(DECK_SHARE * level, RULE.activeRatio / 2);
-  const first = smooth.findIndex((value) => value > deck);
-  const last = smooth.findLastIndex((value) => value > deck);
-  if (first < 0 || last <= first) return null;
+  const [first, last] = mainStretch(smooth, deck);
+  if (last <= first) return null;
   const on = stepNear(noise.total, first);
   const off = noise.total.length - stepNear(noise.total.toReversed(), noise.total.length - 1 - last);
   return {
@@ -109,6 +108,34 @@ export function noiseSpan(noise: RollingNoise): NoiseSpan | null {
     sustainedSeconds: sustained(smoothed(noise.total, 3)),
     ratio: level,
   };
+}
+
+/** Quiet that parts the passage from a neighbour's approach in the same window, frames. */
+const APART = 100;
+
+/** First and last frame above a level, of the stretch (holding together over quiet of less than a second) with most power. */
+function mainStretch(smooth: Float64Array, level: number): [first: number, last: number] {
+  let best: [number, number] = [0, 0];
+  let most = 0;
+  let first = -1;
+  let last = -1;
+  let power = 0;
+  for (let i = 0; i <= smooth.length; i++) {
+    const ended = first >= 0 && (i === smooth.length || i - last > APART);
+    if (ended && power > most) {
+      most = power;
+      best = [first, last];
+    }
+    if (ended) first = -1;
+    if (i === smooth.length || smooth[i]! <= level) continue;
+    if (first < 0) {
+      first = i;
+      power = 0;
+    }
+    last = i;
+    power += smooth[i]!;
+  }
+  return best;
 }
 
 /** Longest time without a break near the loudest, s. */

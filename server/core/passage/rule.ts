@@ -26,6 +26,8 @@ export const RULE = {
   floorLeast: 0.003,
   /** A train makes this many active ticks in a row, or pulses on two axle sensors. */
   activeTicks: 3,
+  /** The window of one train ends so many ticks before the next sets off: its approach is heard a little earlier. */
+  approachTicks: 5,
   /** A passage is over after this much quiet, once no axle is known to be on the bridge. */
   quietSeconds: 1.5,
   /** Quiet that parts two trains when every axle that came has left, and the longest way between axles of one train. */

@@ -100,7 +100,7 @@ describe('the passage detector', () => {
     const loud = (i: number): string[] => (between(100, 140, all)(i).length > 0 ? all : between(170, 210, all)(i));
     const { events, told } = run(500, { loud });
     expect(told).toEqual(['entered', 'left', 'window', 'entered', 'left', 'window']);
-    expect(events[2]).toMatchObject({ kind: 'window', toMicros: (FIRST + 168) * TICK_MICROS });
+    expect(events[2]).toMatchObject({ kind: 'window', toMicros: (FIRST + 165) * TICK_MICROS });
     // The second window does not reach back into the first train.
     expect(events[5]).toMatchObject({ kind: 'window', fromMicros: (FIRST + 140) * TICK_MICROS });
   });
