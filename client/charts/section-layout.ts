@@ -57,7 +57,9 @@ export interface SpanLevels {
   soffitM: number;
 }
 
+/** Room for a vehicle above the running surface, m, and over it for the speed, px. */
 const UP_M = 4.15;
+const SPEED_ROW = 20;
 
 export function layoutSection(definition: BridgeDefinition, roomPx: number): SectionLayout {
   const lengthM = bridgeLengthM(definition);
@@ -66,7 +68,7 @@ export function layoutSection(definition: BridgeDefinition, roomPx: number): Sec
   const scale = SCALES.find((n) => (PX_PER_M / n) * needM <= width) ?? SCALES.at(-1)!;
   const pxPerM = PX_PER_M / scale;
   const fromM = (lengthM - width / pxPerM) / 2;
-  const top = Math.max(UP_M * pxPerM, 76);
+  const top = Math.max(UP_M * pxPerM, 60) + SPEED_ROW;
   const x = (alongM: number): number => (alongM - fromM) * pxPerM;
   const y = (belowM: number): number => top + belowM * pxPerM;
   const spans = definition.spans.map(levelsOf);

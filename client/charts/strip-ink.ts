@@ -143,7 +143,9 @@ function writer(context: CanvasRenderingContext2D, ink: Ink): Write {
 function yTicks(frame: StripFrame, index: number): number[] {
   const lane = frame.lanes[index]!;
   const { low, high } = frame.ranges[index]!;
-  return lane.kind === 'acceleration' ? ticks(low, high, Math.max(4, lane.height / 20)) : ticks(0, high, 1.6);
+  if (lane.kind !== 'acceleration') return ticks(0, high, 1.6);
+  // A figure at the very edge would run into that of the next lane.
+  return ticks(low, high, Math.max(4, lane.height / 20)).filter((tick) => Math.abs(tick) < high * 0.93);
 }
 
 function drawAxis(sheet: Sheet, frame: StripFrame, index: number, write: Write): void {

@@ -37,12 +37,16 @@ export function stripSensors(definition: BridgeDefinition): Sensor[] {
 }
 
 /** Lanes from top to bottom: accelerations first, gauges that count axles last. */
-export function lanesOf(definition: BridgeDefinition, channels: readonly string[]): { lanes: Lane[]; height: number } {
+export function lanesOf(
+  definition: BridgeDefinition,
+  channels: readonly string[],
+  narrow = false,
+): { lanes: Lane[]; height: number } {
   const sensors = stripSensors(definition).filter(({ id }) => channels.includes(id));
   const order = (sensor: Sensor): number => (isDeckAcceleration(sensor) ? 0 : countsAxles(sensor) ? 2 : 1);
   const sorted = sensors.toSorted((a, b) => order(a) - order(b));
   const traces = sorted.filter((sensor) => order(sensor) < 2).length;
-  const traceHeight = traces <= 4 ? 102 : traces <= 6 ? 70 : traces <= 10 ? 50 : 40;
+  const traceHeight = traces <= 4 ? (narrow ? 78 : 110) : traces <= 6 ? 70 : traces <= 10 ? 50 : 40;
   let top = 4;
   const lanes = sorted.map((sensor) => {
     const kind = order(sensor) === 0 ? 'acceleration' : order(sensor) === 2 ? 'axles' : 'other';
