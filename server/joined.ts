@@ -96,7 +96,10 @@ export function joinBackend(parts: JoinedParts): Backend {
     },
     async waveform(id) {
       const [stored, channels] = await Promise.all([history.passage(id), history.waveform(id)]);
-      return stored === null || channels === null ? null : { passage: stored.passage, channels };
+      if (stored === null || channels === null) return null;
+      const { bridge, provenance } = stored.passage;
+      const given = history.definitionAt(bridge, provenance.definitionVersion);
+      return given === null ? null : { passage: stored.passage, definition: given.definition, channels };
     },
     waveformFile: (id) => history.waveformFile(id),
     async recomputed(id) {

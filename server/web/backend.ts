@@ -1,4 +1,5 @@
 import type { Alarm } from '#core/contract/alarm.ts';
+import type { BridgeDefinition } from '#core/contract/bridge.ts';
 import type {
   Acknowledgement,
   AlarmQuery,
@@ -50,5 +51,7 @@ export interface Backend {
 
 export interface StoredWaveform {
   passage: Passage;
+  /** In force when the passage crossed; for the units. */
+  definition: BridgeDefinition;
   channels: readonly WindowChannel[];
 }

@@ -20,12 +20,13 @@ import {
   Recomputed,
   SpectraView,
 } from '#core/contract/api.ts';
+import { csvOfWindow } from '#core/contract/csv-text.ts';
 import type { Result } from '#core/contract/errors.ts';
 import { BridgeStatus, SystemStatus } from '#core/contract/status.ts';
 import type { Backend, StoredWaveform } from './backend.ts';
 import { answerComplaint } from './complaint.ts';
 import { principalOf } from './principal.ts';
-import { waveformCsv, waveformFrame } from './waveform.ts';
+import { waveformFrame } from './waveform.ts';
 
 /** POST requests a minute from one address. */
 const POSTS_A_MINUTE = 60;
@@ -137,7 +138,7 @@ function passageRoutes(app: App, backend: Backend): void {
       const channels = wanted(waveform, query.sensor);
       if (channels.length === 0) return missing(reply, 'sensor', query.sensor ?? '');
       return asFile(reply, 'text/csv; charset=utf-8; header=present', `${params.passage}.csv`).send(
-        Readable.from(waveformCsv(channels), { objectMode: false }),
+        Readable.from(csvOfWindow(waveform.definition, channels), { objectMode: false }),
       );
     },
   );

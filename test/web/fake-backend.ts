@@ -87,7 +87,7 @@ export function fakeBackend(): Backend & { alarmsById: Map<string, Alarm> } {
           hasWaveform: true,
         }),
       ),
-    waveform: (id) => Promise.resolve(only(id, { passage, channels })),
+    waveform: (id) => Promise.resolve(only(id, { passage, definition, channels })),
     waveformFile: (id) => Promise.resolve(only(id, import.meta.filename)),
     recomputed: (id) =>
       Promise.resolve(
