@@ -5,6 +5,7 @@ import { Asked } from './state.svelte.ts';
 import { zoneOf } from './time.ts';
 
 /** Definitions of bridges, each asked once and kept for all places; asked anew when the server runs anew. */
+// eslint-disable-next-line svelte/prefer-svelte-reactivity -- each entry is reactive itself; which exist is of no interest
 const kept = new Map<string, Asked<BridgeView>>();
 
 /**

@@ -123,7 +123,10 @@ export function openLink(rim: LinkRim, listener: LinkListener): Link {
     const message = parsed(() => JSON.parse(String(data)) as ServerMessage, listener);
     if (!message) return;
     if (message.type === 'hello') {
-      if (message.version !== LIVE_VERSION) return stop(message.version);
+      if (message.version !== LIVE_VERSION) {
+        stop(message.version);
+        return;
+      }
       if (run !== null && run !== message.run) listener.restarted();
       run = message.run;
       attempt = 0;
@@ -137,7 +140,10 @@ export function openLink(rim: LinkRim, listener: LinkListener): Link {
     isOpen = false;
     endPulse();
     if (closed || state.kind === 'other version') return;
-    if (code === CLOSE.version) return stop(0);
+    if (code === CLOSE.version) {
+      stop(0);
+      return;
+    }
     attempt += 1;
     const wait = waitMs(attempt, rim.chance());
     const since = state.kind === 'lost' || state.kind === 'stale' ? state.sinceMs : rim.now();

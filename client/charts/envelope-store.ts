@@ -24,23 +24,25 @@ export class EnvelopeStore {
     this.capacity = capacity;
   }
 
-  /** Takes a frame; one of another column width belongs to an earlier wish and is left. @returns whether it was taken */
+  /**
+   * Takes a frame. Slow channels and the farther past come in wider columns: each fills all of the columns it covers.
+   * Narrower ones, of an earlier wish, are merged.
+   *
+   * @returns whether anything was taken
+   */
   take({ header, data }: Frame): boolean {
     if (header.kind !== 'live' || header.layout !== 'envelope') return false;
     let taken = false;
     for (const { sensor, startMicros, stepMicros, count, at } of header.channels) {
-      if (stepMicros !== this.columnMicros) continue;
       const ring = this.#ring(sensor);
-      if (!ring) continue;
-      const first = Math.round(startMicros / this.columnMicros);
-      for (let i = Math.max(0, count - this.capacity); i < count; i++) {
+      if (!ring || !(stepMicros > 0)) continue;
+      for (let i = 0; i < count; i++) {
         const low = data[at + 2 * i]!;
-        const high = data[at + 2 * i + 1]!;
         if (Number.isNaN(low)) continue;
-        this.#write(ring, first + i, low, high);
+        this.#fill(ring, startMicros + i * stepMicros, stepMicros, low, data[at + 2 * i + 1]!);
         taken = true;
       }
-      this.newestMicros = Math.max(this.newestMicros, (first + count) * this.columnMicros);
+      this.newestMicros = Math.max(this.newestMicros, startMicros + count * stepMicros);
     }
     return taken;
   }
@@ -96,6 +98,13 @@ export class EnvelopeStore {
       high = Math.max(high, ring.high[place]!);
     }
     return low > high ? null : { low, high };
+  }
+
+  #fill(ring: Ring, startMicros: Micros, stepMicros: number, low: number, high: number): void {
+    const first = Math.floor(startMicros / this.columnMicros);
+    const end = Math.max(first + 1, Math.round((startMicros + stepMicros) / this.columnMicros));
+    for (let column = Math.max(first, end - this.capacity); column < end; column++)
+      this.#write(ring, column, low, high);
   }
 
   #write(ring: Ring, column: number, low: number, high: number): void {

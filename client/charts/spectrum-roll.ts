@@ -173,7 +173,7 @@ function drawMarks(u: uPlot, { marks, rows, toHz }: RollSpec, ink: Ink): void {
   context.setLineDash([]);
   write('now', 0, foot, ink.ink, 'left', 500);
   const back = rows.length - 1;
-  if (back > 0) {
+  if (back > 4) {
     const y = foot - back * STEP_PX;
     const minutes = Math.round((rows[back]!.micros - rows[0]!.micros) / 60e6);
     write(`${minutes} min`, 0, Math.min(y, foot - 26), ink.ink3, 'left');

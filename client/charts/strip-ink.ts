@@ -252,8 +252,8 @@ function drawCount(sheet: Sheet, frame: StripFrame, index: number, write: Write)
   const peak = frame.peaks[index];
   const right = sheet.width - 2;
   const y = lane.top + lane.height / 2 + 5;
-  if (!peak || peak.peak === null) return write('no data', right, y, frame.ink.signal, 'right', 600, 13);
-  if (lane.kind === 'axles') {
+  if (!peak || peak.peak === null) write('no data', right, y, frame.ink.signal, 'right', 600, 13);
+  else if (lane.kind === 'axles') {
     if (frame.axles > 0) write(`${frame.axles} axles`, right, y, frame.ink.ink, 'right', 600, 13);
     else write('no axles', right, y, frame.ink.ink2, 'right');
   } else write(`${fixed(peak.peak, 2)} ${lane.unit}`, right, y, frame.ink.ink, 'right', 600, 13);

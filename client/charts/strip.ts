@@ -200,7 +200,10 @@ export function mountStrips(host: HTMLElement, firstHeight: number, source: Stri
     wake,
     rebuild,
     step(pixels) {
-      if (pixels === null) return plot.setCursor({ left: -10, top: -10 });
+      if (pixels === null) {
+        plot.setCursor({ left: -10, top: -10 });
+        return;
+      }
       const left = plot.cursor.left ?? -1;
       const width = plot.over.clientWidth;
       plot.setCursor({ left: left < 0 ? width : Math.max(0, Math.min(width, left + pixels)), top: 10 });
