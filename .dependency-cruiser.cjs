@@ -16,7 +16,10 @@ module.exports = {
       comment: 'Shells import the core, never each other; app.ts joins them.',
       severity: 'error',
       from: { path: `^server/${shell}/` },
-      to: { path: '^(server|client|simulator|test)/', pathNot: ['^server/core/', `^server/${shell}/`, '^server/report\\.ts$', '^server/yaml\\.ts$'] },
+      to: {
+        path: '^(server|client|simulator|test)/',
+        pathNot: ['^server/core/', `^server/${shell}/`, '^server/report\\.ts$', '^server/yaml\\.ts$'],
+      },
     })),
     {
       name: 'client-sees-core-only',
@@ -48,6 +51,9 @@ module.exports = {
     exclude: { path: 'client/dist' },
     tsPreCompilationDeps: true,
     tsConfig: { fileName: 'server/tsconfig.json' },
-    enhancedResolveOptions: { exportsFields: ['exports'], conditionNames: ['import', 'node', 'default', 'types', 'svelte'] },
+    enhancedResolveOptions: {
+      exportsFields: ['exports'],
+      conditionNames: ['import', 'node', 'default', 'types', 'svelte'],
+    },
   },
 };

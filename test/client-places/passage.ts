@@ -88,6 +88,7 @@ export function passageOf({
     bridge: 'b',
     startMicros: START,
     endMicros: START + 14_000_000,
+    triggerMicros: START + 2_000_000,
     phases: {
       onMicros: on,
       offMicros: on + 4_000_000,

@@ -2,7 +2,7 @@
 import { spawnSync } from 'node:child_process';
 
 const CHECKS: readonly (readonly [name: string, command: string])[] = [
-  ['types', 'tsc -b --pretty'],
+  ['types', 'tsc -b --pretty && tsc -p test --pretty'],
   ['components', 'svelte-check --workspace client --tsconfig tsconfig.json --fail-on-warnings --output human'],
   ['lint', 'eslint --config test/tidy/eslint.config.js --max-warnings 0 server client simulator test'],
   ['form', 'prettier --check --log-level warn .'],

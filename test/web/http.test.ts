@@ -10,7 +10,7 @@ import { decodeFrame } from '#core/contract/frame.ts';
 import type { Complaint } from '#core/contract/errors.ts';
 import { originAllowed } from '../../server/web/origin.ts';
 import { startWeb, type Web } from '../../server/web/web.ts';
-import { aPassage, aWindow, DAWN } from '../support/specimen.ts';
+import { aPassage, aWindow } from '../support/specimen.ts';
 import { fakeBackend } from './fake-backend.ts';
 
 const passage = aPassage({ peaks: { A1: 2.9, A2: 2.1, A3: 0.7, A4: 0.2 } });

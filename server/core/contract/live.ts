@@ -16,7 +16,14 @@ export const ViewerMessage = Type.Union([
     {
       type: Type.Literal('watch'),
       bridge: Type.String({ maxLength: 64 }),
-      columnMicros: Type.Union(COLUMN_MICROS.map((width) => Type.Literal(width))),
+      columnMicros: Type.Union([
+        Type.Literal(5_000),
+        Type.Literal(10_000),
+        Type.Literal(20_000),
+        Type.Literal(40_000),
+        Type.Literal(80_000),
+        Type.Literal(160_000),
+      ]),
       /** All sensors where absent. */
       sensors: Type.Optional(Type.Array(Type.String({ maxLength: 64 }), { maxItems: 256 })),
       /** How much of the past to send first, s. */

@@ -60,11 +60,10 @@ export function measureFreeDecay(
     rateHz,
     expectedHz === undefined ? {} : { expectedHz },
   );
+  if (!('verdict' in found)) return none(found.reason, endMicros);
   const mode = found.modes[0];
-  if (mode === undefined)
-    return none('reason' in found && found.reason !== undefined ? found.reason : 'no mode was found', endMicros);
-  const quality = 'verdict' in found ? found.verdict : 'poor';
-  const reason = 'reason' in found ? found.reason : undefined;
+  if (mode === undefined) return none('no mode was found', endMicros);
+  const { verdict: quality, reason } = found;
   return {
     f1Hz: measured(mode.frequencyHz, mode.frequencyStandardError, quality, reason),
     zeta1: measured(mode.dampingRatio, mode.dampingStandardError, quality, reason),

@@ -39,7 +39,7 @@ export interface Vitals {
   /** Offset of the first full minute. */
   offsetAtStart: number | null;
   /** Conditions that hold, and when they were last seen. */
-  active: Partial<Record<ConditionCode, Micros>>;
+  active: { [code in ConditionCode]?: Micros | undefined };
 }
 
 const FLAT_SECONDS = 5;
@@ -238,6 +238,5 @@ function begin(vitals: Vitals, code: ConditionCode, micros: Micros, detail: stri
 function end(vitals: Vitals, code: ConditionCode, micros: Micros, detail: string, note: Note): void {
   if (vitals.active[code] === undefined) return;
   note(code, 'ended', micros, detail);
-  // A record of open conditions: what ended is gone.
-  delete vitals.active[code];
+  vitals.active[code] = undefined;
 }
