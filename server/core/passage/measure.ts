@@ -119,8 +119,9 @@ function findPhases(
 
 /** The free stretches beside a train keep this distance from where noise says that it came and went, s. */
 const EDGE_MARGIN_SECONDS = 0.6;
-/** How far noise and motion may differ, s: beyond that the motion speaks of something else. */
-const EDGE_AGREEMENT_SECONDS = 0.9;
+/** How far from there motion is looked at, s, and how far the two may be apart and still speak of one axle. */
+const EDGE_REACH_SECONDS = 0.9;
+const EDGE_APART_SECONDS = 0.3;
 
 /** Noise finds the train, the deck's own motion finds when its first axle came and its last one left. */
 function sharpened(
@@ -133,7 +134,7 @@ function sharpened(
   const deck = record.filter((channel) => channel.deck && trusted(channel));
   const spans = bridge.spans.map(({ id }) => deck.filter(({ sensor }) => spanAt(bridge, sensor.alongM).id === id));
   const margin = EDGE_MARGIN_SECONDS * MICROS_PER_SECOND;
-  const reach = EDGE_AGREEMENT_SECONDS * MICROS_PER_SECOND;
+  const reach = EDGE_REACH_SECONDS * MICROS_PER_SECOND;
   const before = { fromMicros: frame.fromMicros, toMicros: span.onMicros - margin };
   const after = {
     fromMicros: span.offMicros + margin,
@@ -142,9 +143,17 @@ function sharpened(
   const on = firstDriven(spans, before, span.onMicros + reach);
   const off = lastDriven(spans, after, span.offMicros - reach);
   return {
-    onMicros: Math.min(on !== null && on < span.offMicros ? on : span.onMicros, axles.firstPulse ?? Infinity),
-    offMicros: Math.max(off !== null && off > span.onMicros ? off : span.offMicros, axles.lastPulse ?? -Infinity),
+    onMicros: Math.min(edgeOf(span.onMicros, on, Math.min), axles.firstPulse ?? Infinity),
+    offMicros: Math.max(edgeOf(span.offMicros, off, Math.max), axles.lastPulse ?? -Infinity),
   };
+}
+
+/** Motion places an edge more sharply than noise; where they are apart, one of them has not seen the outermost axle. */
+function edgeOf(byNoise: Micros, byMotion: Micros | null, outermost: (...times: number[]) => number): Micros {
+  if (byMotion === null) return byNoise;
+  return Math.abs(byMotion - byNoise) <= EDGE_APART_SECONDS * MICROS_PER_SECOND
+    ? byMotion
+    : outermost(byNoise, byMotion);
 }
 
 /** Axle sensors settle the phases; noise that goes on far longer than they say is worth a word. */

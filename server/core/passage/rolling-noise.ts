@@ -90,6 +90,7 @@ const LEVEL_QUANTILE = 0.6;
 /** On the deck the noise is above this share of its level; on the approach it is 10 to 25 dB lower. */
 const DECK_SHARE = 0.2;
 const SUSTAIN_SHARE = 0.1;
+const SUSTAIN_QUANTILE = 0.9;
 
 /** Where the noise says that axles were on the deck; null where nothing rises above the floor. */
 export function noiseSpan(noise: RollingNoise): NoiseSpan | null {
@@ -138,9 +139,10 @@ function mainStretch(smooth: Float64Array, level: number): [first: number, last:
   return best;
 }
 
-/** Longest time without a break near the loudest, s. */
+/** Longest time without a break near the level of the loud frames, s; one blow in the middle of a train is not that level. */
 function sustained(smooth: Float64Array): number {
-  const least = Math.max(SUSTAIN_SHARE * smooth.reduce((most, value) => Math.max(most, value), 0), RULE.activeRatio);
+  const loud = smooth.filter((value) => value > RULE.activeRatio);
+  const least = Math.max(SUSTAIN_SHARE * (loud.length === 0 ? 0 : quantile(loud, SUSTAIN_QUANTILE)), RULE.activeRatio);
   let longest = 0;
   let row = 0;
   for (const value of smooth) {
