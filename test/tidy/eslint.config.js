@@ -5,7 +5,9 @@ import ts from 'typescript-eslint';
 import svelteConfig from '../../client/svelte.config.js';
 
 export default ts.config(
-  { ignores: ['**/node_modules/**', 'client/dist/**', 'coverage/**', '**/*.js', '**/*.mjs', '**/*.cjs', '.spanbeat/**'] },
+  {
+    ignores: ['**/node_modules/**', 'client/dist/**', 'coverage/**', '**/*.js', '**/*.mjs', '**/*.cjs', '.spanbeat/**'],
+  },
   js.configs.recommended,
   ts.configs.strictTypeChecked,
   ...svelte.configs.recommended,
@@ -40,7 +42,17 @@ export default ts.config(
   {
     files: ['server/core/**/*.ts'],
     rules: {
-      'no-restricted-globals': ['error', 'Date', 'performance', 'process', 'setTimeout', 'setInterval', 'console', 'fetch', 'globalThis'],
+      'no-restricted-globals': [
+        'error',
+        'Date',
+        'performance',
+        'process',
+        'setTimeout',
+        'setInterval',
+        'console',
+        'fetch',
+        'globalThis',
+      ],
       'no-restricted-properties': [
         'error',
         { object: 'Math', property: 'random', message: 'the core is deterministic; take a generator as an argument' },
