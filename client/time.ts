@@ -67,7 +67,10 @@ export function offsetIn(micros: Micros, zone: string): string {
   const name = formatter(zone, { hour: '2-digit', timeZoneName: 'shortOffset' })
     .formatToParts(micros / 1000)
     .find(({ type }) => type === 'timeZoneName')?.value;
-  return (name ?? 'UTC').replace('GMT', 'UTC').replace('-', '−');
+  return (name ?? 'UTC')
+    .replace('GMT', 'UTC')
+    .replace('-', '−')
+    .replace(/^UTC\+0$/, 'UTC');
 }
 
 /**
