@@ -173,7 +173,7 @@ describe('the edge of forced motion', () => {
 describe('a free decay', () => {
   it('too short for a fit is not measurable, with the reason', () => {
     // The next train follows so closely that only a fraction of a second rings freely.
-    const passages = passagesOn(plainBridge(), 60, crossing(20, 'light engine', 40), crossing(22, 'light engine', 40));
+    const passages = passagesOn(plainBridge(), 60, crossing(20, 'light engine', 40), crossing(22.3, 'light engine', 40));
     const first = passages[0]!;
     expect(first.f1Hz.value).toBeNull();
     expect(first.f1Hz).toHaveProperty('reason', expect.stringMatching(/free decay of \d\.\d s is too short|too few/));
