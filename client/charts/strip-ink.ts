@@ -145,7 +145,7 @@ function yTicks(frame: StripFrame, index: number): number[] {
   const { low, high } = frame.ranges[index]!;
   if (lane.kind !== 'acceleration') return ticks(0, high, 1.6);
   // A figure at the very edge would run into that of the next lane.
-  return ticks(low, high, Math.max(4, lane.height / 20)).filter((tick) => Math.abs(tick) < high * 0.93);
+  return ticks(low, high, Math.max(4.6, lane.height / 20)).filter((tick) => Math.abs(tick) < high * 0.93);
 }
 
 function drawAxis(sheet: Sheet, frame: StripFrame, index: number, write: Write): void {
