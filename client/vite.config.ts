@@ -13,6 +13,7 @@ export default defineConfig({
     target: 'es2023',
     // Type is never inlined: the page's policy lets fonts and pictures come from its own server only.
     assetsInlineLimit: 0,
+    cssCodeSplit: false,
     rolldownOptions: {
       treeshake: {
         // The contract builds its schemas when it is loaded. The page uses its types and functions, not the schemas.
