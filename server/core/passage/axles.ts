@@ -190,19 +190,26 @@ export function matchPulses(
   return { pairs: withoutLowest(low, high), complete: false };
 }
 
+/** A pulse lower than this share of the usual one may be left out for the sake of the others. */
+const FALSE_SHARE = 0.4;
+
 /** A standing train can leave a false pulse or two, low ones: one-to-one pairs without them, if they then run one way. */
 function withoutLowest(low: readonly Pulse[], high: readonly Pulse[]): [Pulse, Pulse][] {
   const fewest = Math.min(low.length, high.length);
   const surplus = Math.max(low.length, high.length) - fewest;
-  if (surplus === 0 || surplus > Math.max(1, Math.floor(fewest / 16))) return [];
+  if (fewest < 2 || surplus === 0 || surplus > Math.max(2, Math.floor(fewest / 8))) return [];
   const highest = (pulses: readonly Pulse[]): Pulse[] => {
-    const kept = new Set([...pulses].sort((a, b) => b.height - a.height).slice(0, fewest));
-    return pulses.filter((pulse) => kept.has(pulse));
+    const byHeight = [...pulses].sort((a, b) => b.height - a.height);
+    const kept = new Set(byHeight.slice(0, fewest));
+    const usual = median(byHeight.slice(0, fewest).map(({ height }) => height));
+    return pulses.filter((pulse) => kept.has(pulse) || pulse.height > FALSE_SHARE * usual);
   };
   const others = highest(high);
-  const pairs = highest(low).map((pulse, i): [Pulse, Pulse] => [pulse, others[i]!]);
+  const own = highest(low);
+  if (own.length !== others.length) return [];
+  const pairs = own.map((pulse, i): [Pulse, Pulse] => [pulse, others[i]!]);
   const delays = pairs.map(([a, b]) => b.micros - a.micros);
-  return fewest >= 2 && Math.min(...delays) * Math.max(...delays) > 0 ? pairs : [];
+  return Math.min(...delays) * Math.max(...delays) > 0 ? pairs : [];
 }
 
 function bestShared(low: readonly Pulse[], high: readonly Pulse[]): [Pulse, Pulse][] {
@@ -255,7 +262,7 @@ function placeAxles(pairs: readonly [Pulse, Pulse][], speeds: readonly number[])
 }
 
 /** A pulse stands above noise and above this share of the highest; two pulses are parted by a valley below this share of the lesser. */
-const HEIGHT_SHARE = 0.15;
+const HEIGHT_SHARE = 0.2;
 const VALLEY_SHARE = 0.7;
 const SIGMAS = 8;
 

@@ -37,6 +37,8 @@ export interface Candidate {
   pulses: Record<string, number>;
   pulseCount: number;
   lastPulseMicros: Micros;
+  /** Times of the newest pulses of each axle sensor, at most `NEWEST_PULSES`. */
+  newest: Record<string, Micros[]>;
   freeUntilTick: number;
   /** Window, once closed. */
   windowFrom: Micros;
@@ -116,6 +118,7 @@ function createCandidate(bridge: string, onsetTick: number): Candidate {
     pulses: {},
     pulseCount: 0,
     lastPulseMicros: 0,
+    newest: {},
     freeUntilTick: 0,
     windowFrom: 0,
   };
@@ -148,6 +151,7 @@ function follow(
     candidate.pulses[sensor] = (candidate.pulses[sensor] ?? 0) + 1;
     candidate.pulseCount += 1;
     candidate.lastPulseMicros = Math.max(candidate.lastPulseMicros, micros);
+    candidate.newest[sensor] = [...(candidate.newest[sensor] ?? []), micros].slice(-NEWEST_PULSES);
   }
   if (votes || tick.pulses.length > 0) candidate.lastActiveTick = tick.number;
   const events: DetectorEvent[] = [];
@@ -205,19 +209,48 @@ function trackStanding(
   const counts = sensors.map((sensor) => candidate.pulses[sensor] ?? 0);
   const [most, least] = [Math.max(...counts), Math.min(...counts)];
   if (most - least > room) return RULE.quietSeconds;
-  if (most === least) return sensors.length < 2 ? RULE.quietSeconds : nextBogieSeconds(lengthM, speedMs);
+  if (most === least)
+    return sensors.length < 2 ? RULE.quietSeconds : nextBogieSeconds(candidate, sensors, lengthM, speedMs);
   // A pulse missed now and then does not keep a bridge occupied for long.
-  if (least > 0 && most - least <= Math.max(1, Math.floor(most / 16))) return RULE.pulseWaitSeconds;
+  if (least > 0 && most - least <= Math.max(1, Math.floor(most / 16))) {
+    return Math.max(RULE.pulseWaitSeconds, nextBogieSeconds(candidate, sensors, lengthM, speedMs));
+  }
   const silent = sensors.filter((sensor) => (candidate.pulses[sensor] ?? 0) === 0);
   const believed = silent.every((sensor) => detector.proven[sensor] === true);
   return believed ? RULE.standSeconds : RULE.standUnprovenSeconds;
 }
 
-/** On a short bridge no axle may be on it between two bogies of one coach: the next may yet come. */
-function nextBogieSeconds(lengthM: number, speedMs: number | null): number {
-  if (speedMs === null || speedMs === 0) return RULE.quietSeconds;
-  const waitSeconds = (RULE.bogieDistanceM - lengthM) / speedMs + 0.3;
-  return Math.min(RULE.pulseWaitSeconds, Math.max(RULE.emptySeconds, waitSeconds));
+/** Pulses that are kept of each sensor to tell the speed of the last axles. */
+const NEWEST_PULSES = 4;
+
+/**
+ * On a short bridge no axle may be on it between two bogies of one coach: the next may yet come, at the speed of the
+ * last axle. A train that brakes may stand astride of the bridge.
+ */
+function nextBogieSeconds(
+  candidate: Candidate,
+  sensors: readonly string[],
+  lengthM: number,
+  speedMs: number | null,
+): number {
+  const speeds = lastAxleSpeeds(candidate, sensors, lengthM);
+  const last = speeds.at(-1) ?? speedMs;
+  if (last === null || last === 0) return RULE.quietSeconds;
+  const wayM = RULE.bogieDistanceM - lengthM;
+  const braking = wayM > 0 && last < RULE.brakingShare * Math.max(speedMs ?? 0, ...speeds);
+  if (braking) return RULE.brakingWaitSeconds;
+  return Math.min(RULE.brakingWaitSeconds, Math.max(RULE.emptySeconds, wayM / last + 0.3));
+}
+
+/** Speeds of the last axles that have passed both outermost sensors, oldest first, m/s. */
+function lastAxleSpeeds(candidate: Candidate, sensors: readonly string[], lengthM: number): number[] {
+  const one = candidate.newest[sensors[0]!] ?? [];
+  const other = candidate.newest[sensors.at(-1)!] ?? [];
+  const count = Math.min(one.length, other.length);
+  return Array.from({ length: count }, (_, i) => {
+    const delay = Math.abs(one[one.length - count + i]! - other[other.length - count + i]!);
+    return delay === 0 ? Infinity : (lengthM * MICROS_PER_SECOND) / delay;
+  });
 }
 
 /** The train has gone: a passage rings on until its free part ends; what was no train is forgotten. */

@@ -25,9 +25,14 @@ const ORDER = 16;
 /** The free stretch must hold this much, s. */
 const FREE_SECONDS_LEAST = 0.8;
 /** The residual is told from noise by this ratio of mean squares over `HOLD` samples. */
-const RATIO = 16;
+const RATIO = 12;
 const HOLD = 4;
 const ROUNDS_MOST = 8;
+/**
+ * Share of the motion by which a deck may depart from one linear law and still be free: ballast is softer at larger
+ * amplitude, some tenths of a percent of frequency per m/s².
+ */
+const SOFTENING = 0.01;
 
 /** Last time, searching from the free stretch back to `untilMicros`, at which the deck was driven; null if it cannot be told. */
 export function lastDriven(spans: readonly RecordChannel[][], free: FreeStretch, untilMicros: Micros): Micros | null {
@@ -36,7 +41,7 @@ export function lastDriven(spans: readonly RecordChannel[][], free: FreeStretch,
     const traces = tracesOf(deck, untilMicros, free.toMicros);
     if (traces === null) return null;
     const reversed = traces.map((trace) => trace.toReversed());
-    const found = firstDisobedient(reversed, fitted);
+    const found = firstDisobedient(reversed, fitted, SOFTENING);
     return found === null ? null : untilMicros + sampleTime(reversed[0]!.length - 1 - found);
   });
   const times = edges.filter((micros) => micros !== null);
@@ -48,7 +53,7 @@ export function firstDriven(spans: readonly RecordChannel[][], free: FreeStretch
   const fitted = Math.floor(((free.toMicros - free.fromMicros) * RATE_HZ) / MICROS_PER_SECOND);
   const edges = spans.map((deck) => {
     const traces = tracesOf(deck, free.fromMicros, untilMicros);
-    const found = traces === null ? null : firstDisobedient(traces, fitted);
+    const found = traces === null ? null : firstDisobedient(traces, fitted, 0);
     return found === null ? null : free.fromMicros + sampleTime(found);
   });
   const times = edges.filter((micros) => micros !== null);
@@ -77,14 +82,15 @@ function tracesOf(deck: readonly RecordChannel[], fromMicros: Micros, toMicros: 
 
 /**
  * Index from which on the traces do not follow the recurrence fitted before it. What was found too early by a mode that
- * had died away in the stretch first fitted is learnt by fitting again up to there, until nothing moves.
+ * had died away in the stretch first fitted is learnt by fitting again up to there, until nothing moves. `slack` is the
+ * share of the motion that may depart from the law.
  */
-function firstDisobedient(x: readonly Float64Array[], free: number): number | null {
+function firstDisobedient(x: readonly Float64Array[], free: number, slack: number): number | null {
   if (free < FREE_SECONDS_LEAST * RATE_HZ) return null;
   let found: number | null = null;
   let fitted = free;
   for (let round = 0; round < ROUNDS_MOST; round++) {
-    const next = search(x, fitted);
+    const next = search(x, fitted, slack);
     if (next === null || (found !== null && next <= found + 1)) return next ?? found;
     found = next;
     fitted = next - 2;
@@ -92,7 +98,7 @@ function firstDisobedient(x: readonly Float64Array[], free: number): number | nu
   return found;
 }
 
-function search(x: readonly Float64Array[], fitted: number): number | null {
+function search(x: readonly Float64Array[], fitted: number, slack: number): number | null {
   const weights = recurrence(x, fitted);
   if (weights === null) return null;
   const residuals = x.map((trace) => residualOf(trace, weights));
@@ -101,7 +107,10 @@ function search(x: readonly Float64Array[], fitted: number): number | null {
   let held = 0;
   for (let i = fitted; i < length; i++) {
     let ratio = 0;
-    residuals.forEach((r, c) => (ratio += r[i]! ** 2 / (floors[c]! + 1e-12)));
+    residuals.forEach((r, c) => {
+      const motion = meanSquare(x[c]!, i - ORDER, i);
+      ratio += r[i]! ** 2 / (floors[c]! + slack * slack * motion + 1e-12);
+    });
     held = ratio / x.length > RATIO ? held + 1 : 0;
     if (held === HOLD) return i - HOLD + 1;
   }

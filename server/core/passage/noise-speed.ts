@@ -9,7 +9,7 @@ type NoiseSpeed = Pick<Passage, 'speedMs' | 'direction'>;
 const SLOWEST = 3;
 const FASTEST = 110;
 /** Steps of slowness on each side of zero. */
-const STEPS = 600;
+const STEPS = 300;
 /** The aligned traces must hold at least this share of the power of the single ones, beyond what chance gives. */
 const SEMBLANCE_LEAST = 0.35;
 /** Of several alignments about as good (a train is periodic), the fastest is taken. */
@@ -96,6 +96,20 @@ function bestSlowness(traces: readonly Trace[], seconds: number): number | null 
   return good.reduce((a, b) => (Math.abs(b.slowness) < Math.abs(a.slowness) ? b : a)).slowness;
 }
 
+/** The best alignment within a quarter of a slowness: how far one sensor more or less moves it. */
+function nearBest(traces: readonly Trace[], best: number, seconds: number): number {
+  const step = Math.abs(best) / 80;
+  const slowest = (0.5 * seconds) / spreadOf(traces);
+  let found = { slowness: best, score: -1 };
+  for (let k = -20; k <= 20; k++) {
+    const slowness = best + k * step;
+    if (Math.abs(slowness) > slowest) continue;
+    const score = semblance(traces, slowness);
+    if (score > found.score) found = { slowness, score };
+  }
+  return found.slowness;
+}
+
 /** Power of the mean of the aligned traces over the mean of their powers, 0 to 1, less 1/n, which chance gives. */
 function semblance(traces: readonly Trace[], slowness: number): number {
   const length = traces[0]!.y.length;
@@ -128,8 +142,7 @@ function slownessError(traces: readonly Trace[], seconds: number, best: number, 
   const others = traces
     .map((_, leftOut) => traces.filter((__, i) => i !== leftOut))
     .filter((rest) => spreadOf(rest) >= 3)
-    .map((rest) => bestSlowness(rest, seconds))
-    .filter((slowness) => slowness !== null);
+    .map((rest) => nearBest(rest, best, seconds));
   if (others.length < 2) return 3 * floor;
   const n = others.length;
   const squares = others.reduce((sum, slowness) => sum + (slowness - best) ** 2, 0);

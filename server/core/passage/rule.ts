@@ -33,6 +33,9 @@ export const RULE = {
   /** Quiet that parts two trains when every axle that came has left, and the longest way between axles of one train. */
   emptySeconds: 0.8,
   bogieDistanceM: 22,
+  /** An axle this much slower than the fastest before it brakes: its train may stand with no axle on a short bridge. */
+  brakingShare: 0.7,
+  brakingWaitSeconds: 60,
   /** After a first pulse the next bogie of a creeping train is waited for: 18 m at 3 m/s. */
   pulseWaitSeconds: 6,
   /** How long a train may stand on the bridge while the axle count says it is there. */
