@@ -185,7 +185,12 @@ function addSimulate(program: Command, console: Console, set: SetExit): void {
     .command('simulate')
     .description('Let trains cross a bridge, to a CSV file or to an MQTT broker, with the truth beside.')
     .requiredOption('-b, --bridge <file>', 'definition, or one of ottermere, fennick, sallow')
-    .requiredOption('--to <where>', 'CSV file, - for standard output, or mqtt://host:port')
+    .requiredOption('--to <where>', 'file, - for standard output, or mqtt://host:port')
+    .addOption(
+      new Option('--as <form>', 'of a file: CSV, or a SenML pack (RFC 8428, JSON) a line, to be published line by line')
+        .choices(['csv', 'senml'])
+        .default('csv'),
+    )
     .addOption(new Option('-t, --train <type>', 'what crosses').choices(TRAIN_CHOICES).default('mixed'))
     .option('-n, --count <number>', 'how many', whole, 3)
     .option('--speed <m/s>', 'of all of them; by their type where absent', speed)
@@ -221,6 +226,7 @@ const TRAIN_CHOICES = [
 interface SimulateOptions {
   bridge: string;
   to: string;
+  as: 'csv' | 'senml';
   train: (typeof TRAIN_CHOICES)[number];
   count: number;
   speed?: number;

@@ -3,11 +3,12 @@ import { setTimeout as sleep } from 'node:timers/promises';
 import type { SampleBlock } from '#core/contract/block.ts';
 import { bridgeLengthM, type BridgeDefinition } from '#core/contract/bridge.ts';
 import { SpanbeatError } from '#core/contract/errors.ts';
-import { MICROS_PER_SECOND, type Micros } from '#core/contract/time.ts';
+import { MICROS_PER_SECOND, sampleMicros, type Micros } from '#core/contract/time.ts';
 import { createFaultyLogger, drawFaults, type FaultyLogger } from '../../simulator/faults.ts';
 import { createLoggers } from '../../simulator/logger.ts';
 import { bridgeParameters } from '../../simulator/parameters.ts';
 import { offMicros, type PassageEvent } from '../../simulator/passage.ts';
+import { senmlPayload } from '../../simulator/payload.ts';
 import { connectLogger, type LoggerPublisher } from '../../simulator/publisher.ts';
 import { RandomStream } from '../../simulator/random.ts';
 import { createBridgeSimulation } from '../../simulator/simulation.ts';
@@ -28,8 +29,10 @@ export interface SimulateSettings {
   /** Speed of all trains, m/s; by the type of train where null. */
   speedMs: number | null;
   direction: 'rising' | 'falling' | 'both';
-  /** CSV file, `-` for standard output, or an MQTT address. */
+  /** File, `-` for standard output, or an MQTT address. */
   to: string;
+  /** What goes into a file: CSV, or a SenML pack a line, each line a message that a logger would send. */
+  as: 'csv' | 'senml';
   /** First level of the topics. */
   root: string;
   username?: string | undefined;
@@ -73,7 +76,7 @@ export async function simulate(settings: SimulateSettings, console: Console): Pr
   try {
     const sink = isMqtt(settings.to)
       ? await mqttSink(definition, settings, console)
-      : await csvSink(definition, settings.to, console);
+      : await (settings.as === 'senml' ? senmlSink : csvSink)(definition, settings.to, console);
     const truths = await run(definition, settings, sink);
     await writeTruth(definition, settings, truths, console);
     return EXIT.good;
@@ -154,23 +157,35 @@ function plan(
   return { events, lengthS: Math.ceil(onS) };
 }
 
-function startOf({ startMicros, to, realTime }: SimulateSettings, lengthS: number): Micros {
+function startOf({ startMicros, to, as, realTime }: SimulateSettings, lengthS: number): Micros {
   if (startMicros !== null) return startMicros;
-  if (!isMqtt(to)) return DEFAULT_START_MICROS;
+  if (!isMqtt(to) && as === 'csv') return DEFAULT_START_MICROS;
   const nowS = Math.floor(Date.now() / 1000);
   // A server believes no time ahead of its clock, so what is sent fast lies in the past.
   return (realTime ? nowS : nowS - lengthS) * MICROS_PER_SECOND;
 }
 
+/** Where lines go. */
+interface Output {
+  write(text: string): Promise<void>;
+  close(): Promise<void>;
+}
+
+async function openOutput(file: string, console: Console): Promise<Output> {
+  if (file === '-') return { write: (text) => console.out(text), close: () => Promise.resolve() };
+  const handle = await open(file, 'w').catch((error: unknown) => Promise.reject(unwritable(file, error)));
+  return {
+    async write(text) {
+      await handle.write(text).catch((error: unknown) => Promise.reject(unwritable(file, error)));
+    },
+    close: () => handle.close(),
+  };
+}
+
 async function csvSink(definition: BridgeDefinition, file: string, console: Console): Promise<Sink> {
   const ids = definition.sensors.map(({ id }) => id);
-  const handle =
-    file === '-' ? null : await open(file, 'w').catch((error: unknown) => Promise.reject(unwritable(file, error)));
-  const write = async (text: string): Promise<void> => {
-    if (handle === null) await console.out(text);
-    else await handle.write(text).catch((error: unknown) => Promise.reject(unwritable(file, error)));
-  };
-  await write(csvHeader(ids));
+  const output = await openOutput(file, console);
+  await output.write(csvHeader(ids));
   return {
     async take(blocks) {
       const tracks = definition.sensors.map(({ id, rateHz }) => ({
@@ -180,9 +195,32 @@ async function csvSink(definition: BridgeDefinition, file: string, console: Cons
           channels.filter(({ sensor }) => sensor === id).map(({ samples }) => ({ startMicros, samples })),
         ),
       }));
-      for (const rows of csvRows(tracks)) await write(rows);
+      for (const rows of csvRows(tracks)) await output.write(rows);
     },
-    close: async () => handle?.close(),
+    close: () => output.close(),
+  };
+}
+
+/** A pack a block (RFC 8428, JSON), in the sensors' own units and names; the logger is told by the topic it is sent to. */
+async function senmlSink(definition: BridgeDefinition, file: string, console: Console): Promise<Sink> {
+  const units = new Map(definition.sensors.map(({ id, unit }) => [id, unit]));
+  const output = await openOutput(file, console);
+  return {
+    async take(blocks) {
+      for (const { startMicros, rateHz, channels } of blocks) {
+        const readings = channels.flatMap(({ sensor, samples }) =>
+          Array.from(samples, (value, index) => ({
+            name: sensor,
+            unit: units.get(sensor) ?? '',
+            // Six digits are finer than any logger's converter.
+            value: Number(value.toPrecision(6)),
+            micros: sampleMicros(startMicros, index, rateHz),
+          })),
+        );
+        await output.write(`${senmlPayload(readings).toString()}\n`);
+      }
+    },
+    close: () => output.close(),
   };
 }
 

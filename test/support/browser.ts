@@ -54,7 +54,11 @@ export async function openBrowser(options: BrowserOptions = {}): Promise<Browser
   let complaints: string[] = [];
   const listen = (page: Page): void => {
     page.on('pageerror', (error) => complaints.push(`${page.url()}: ${error.message}`));
+    page.on('response', (response) => {
+      if (response.status() >= 400) complaints.push(`${page.url()}: ${response.status()} for ${response.url()}`);
+    });
     page.on('console', (message) => {
+      if (message.text().startsWith('Failed to load resource')) return; // told with its address above
       // Violations of the Content-Security-Policy are told on the console, too.
       if (message.type() === 'error' || message.type() === 'warning') {
         complaints.push(`${page.url()}: ${message.text()}`);
