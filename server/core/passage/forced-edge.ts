@@ -25,14 +25,14 @@ const ORDER = 16;
 /** The free stretch must hold this much, s. */
 const FREE_SECONDS_LEAST = 0.8;
 /** The residual is told from noise by this ratio of mean squares over `HOLD` samples. */
-const RATIO = 12;
+const RATIO = 16;
 const HOLD = 4;
 const ROUNDS_MOST = 8;
 /**
  * Share of the motion by which a deck may depart from one linear law and still be free: ballast is softer at larger
  * amplitude, some tenths of a percent of frequency per m/s².
  */
-const SOFTENING = 0.01;
+const SOFTENING = 0.003;
 
 /** Last time, searching from the free stretch back to `untilMicros`, at which the deck was driven; null if it cannot be told. */
 export function lastDriven(spans: readonly RecordChannel[][], free: FreeStretch, untilMicros: Micros): Micros | null {

@@ -87,8 +87,8 @@ export interface NoiseSpan {
 
 /** Level of a rolling train: this quantile of the frames above the floor. */
 const LEVEL_QUANTILE = 0.6;
-/** On the deck the noise is above this share of its level; on the approach it is 10 to 25 dB lower. */
-const DECK_SHARE = 0.2;
+/** The edges are first looked for at this share of the level: the quieter of two trains is still above it, most of an approach below. */
+const DECK_SHARE = 0.04;
 const SUSTAIN_SHARE = 0.1;
 const SUSTAIN_QUANTILE = 0.9;
 

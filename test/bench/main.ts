@@ -1,0 +1,38 @@
+/** `npm run bench [-- section …]`: figures of this machine, as they are now. Quote ratios from one run: machines are noisy. */
+import { benchDecay } from './decay.ts';
+import { benchLatency } from './latency.ts';
+import { benchPipeline } from './pipeline.ts';
+import { benchStream } from './stream.ts';
+
+/** One line of the table. */
+export interface Figure {
+  what: string;
+  value: number;
+  unit: string;
+  /** What is aimed at, for the reader. */
+  aim?: string;
+}
+
+const SECTIONS: Readonly<Record<string, () => Figure[] | Promise<Figure[]>>> = {
+  pipeline: benchPipeline,
+  decay: benchDecay,
+  stream: benchStream,
+  latency: benchLatency,
+};
+
+const wanted = process.argv.slice(2);
+const unknown = wanted.filter((name) => !(name in SECTIONS));
+if (unknown.length > 0) {
+  console.error(`no section ${unknown.join(', ')}; there are ${Object.keys(SECTIONS).join(', ')}`);
+  process.exit(2);
+}
+for (const [name, measure] of Object.entries(SECTIONS)) {
+  if (wanted.length > 0 && !wanted.includes(name)) continue;
+  console.log(`\n${name}`);
+  for (const { what, value, unit, aim } of await measure()) {
+    const number = value.toLocaleString('en', { maximumSignificantDigits: 4 });
+    console.log(
+      `  ${what.padEnd(66)} ${number.padStart(12)} ${unit.padEnd(10)} ${aim === undefined ? '' : `aim ${aim}`}`,
+    );
+  }
+}
