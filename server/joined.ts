@@ -5,6 +5,7 @@ import { refuse } from '#core/contract/errors.ts';
 import type { BridgeStatus, SystemStatus } from '#core/contract/status.ts';
 import type { Micros } from '#core/contract/time.ts';
 import { bandOfLimit } from '#core/passage/band.ts';
+import { rollingStepHz } from '#core/passage/rolling-spectrum.ts';
 import { badComplaint, type BadDefinition } from './bridges.ts';
 import type { History } from './history/store.ts';
 import { recomputedOf } from './recomputed.ts';
@@ -72,8 +73,12 @@ export function joinBackend(parts: JoinedParts): Backend {
     bridge,
     definitionText,
     spectra(id, sensor) {
-      const wanted = sensor ?? watches.get(id)?.definition.sensors.find(isDeckAcceleration)?.id;
-      return wanted === undefined ? null : history.spectra(id, wanted);
+      const sensors = watches.get(id)?.definition.sensors ?? [];
+      const wanted = sensors.find((each) => (sensor === undefined ? isDeckAcceleration(each) : each.id === sensor));
+      if (wanted === undefined) return null;
+      // In the first minute there is no line yet.
+      const none = { sensor: wanted.id, stepHz: rollingStepHz(wanted.rateHz), lines: [] };
+      return history.spectra(id, wanted.id) ?? none;
     },
 
     passages: (query) => history.passages(query),

@@ -26,18 +26,21 @@ describe.skipIf(!available('chromium'))('in a browser, over the demonstration', 
   const start = (): Promise<ServerProcess> =>
     startServerProcess(['demo', '--port', String(port), '--data', data.path, '--past-days', '0']);
 
+  /** What was begun, to be ended in the opposite order, however far it came. */
+  const begun: (() => Promise<unknown>)[] = [];
   beforeAll(async () => {
     data = await temporaryFolder('journeys');
+    begun.push(() => data.remove());
     port = await freePort();
     browser = await openBrowser();
+    begun.push(() => browser.close());
     page = browser.page;
     server = await start();
+    begun.push(() => server.interrupt());
   }, LIMIT_MS);
 
   afterAll(async () => {
-    await browser?.close();
-    await server?.interrupt();
-    await data?.remove();
+    for (const undo of begun.reverse()) await undo();
   }, LIMIT_MS);
 
   it('watches a train cross on Live: axles, strips, and what it did, without a mouse', async () => {
@@ -89,11 +92,13 @@ describe.skipIf(!available('chromium'))('in a browser, over the demonstration', 
 
   it('goes back and forward through what was seen', async () => {
     const here = page.url();
-    await page.goBack();
-    await page.goBack();
+    await page.goBack(); // the choice of a sensor was no step of its own
     await page.waitForURL('**/live/ottermere');
     await page.getByRole('heading', { name: 'Long section' }).waitFor();
+    await page.goBack();
+    await page.getByRole('heading', { name: 'Network', level: 1 }).waitFor();
     await page.goForward();
+    await page.waitForURL('**/live/ottermere');
     await page.goForward();
     await page.waitForURL(here);
     await page.getByRole('heading', { name: 'Measures' }).waitFor();
@@ -255,7 +260,7 @@ async function expectText(locator: ReturnType<Page['locator']>, pattern: RegExp)
 /** How many colours the first canvas has: an empty one has a single one. */
 function inkOf(page: Page): Promise<number> {
   return page.evaluate(() => {
-    const canvas = document.querySelector('main canvas') as HTMLCanvasElement | null;
+    const canvas = document.querySelector<HTMLCanvasElement>('main canvas');
     const context = canvas?.getContext('2d');
     if (!canvas || !context) return 0;
     const { data } = context.getImageData(0, 0, canvas.width, canvas.height);

@@ -39,5 +39,5 @@ function blindFocus(): string | null {
   if (element.matches('.skip')) return null;
   // Chromium marks the day, month or year inside a date field.
   if (element.matches('input[type=date]')) return null;
-  return `${element.tagName.toLowerCase()} "${(element.textContent ?? '').trim().slice(0, 40)}"`;
+  return `${element.tagName.toLowerCase()} "${element.textContent.trim().slice(0, 40)}"`;
 }

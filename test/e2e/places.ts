@@ -14,7 +14,11 @@ export interface PlaceOnScreen {
 export function placesOf(bridge: string, passage: string, alarm: string): PlaceOnScreen[] {
   const heading = (name: string) => (page: Page) => page.getByRole('heading', { name, exact: true }).first().waitFor();
   return [
-    { name: 'network', path: '/', drawn: (page) => page.getByRole('main').getByText('km 41.320').first().waitFor() },
+    {
+      name: 'network',
+      path: '/',
+      drawn: (page) => page.getByRole('article', { name: 'Ottermere Trough' }).getByText('today').first().waitFor(),
+    },
     {
       name: 'live',
       path: `/live/${bridge}`,

@@ -21,17 +21,20 @@ describe.skipIf(!able)("the README's example of a logger, typed as it stands", {
   let browser: Browser;
   let blocks: string[];
 
+  /** What was begun, to be ended in the opposite order, however far it came. */
+  const begun: (() => Promise<unknown>)[] = [];
   beforeAll(async () => {
     await rm(FOLDER, { recursive: true, force: true });
+    begun.push(() => rm(FOLDER, { recursive: true, force: true }));
     blocks = blocksOf(await readFile(join(ROOT, 'README.md'), 'utf8'));
     terminal = openTerminal(ROOT);
+    begun.push(() => terminal.close());
     browser = await openBrowser();
+    begun.push(() => browser.close());
   }, LIMIT_MS);
 
   afterAll(async () => {
-    await browser?.close();
-    await terminal?.close();
-    await rm(FOLDER, { recursive: true, force: true });
+    for (const undo of begun.reverse()) await undo();
   }, LIMIT_MS);
 
   /** Types the blocks up to and with the one that holds the words. */

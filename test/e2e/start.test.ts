@@ -38,16 +38,21 @@ describe.skipIf(!available('chromium'))('npm run demo', { timeout: LIMIT_MS }, (
       .waitFor();
   };
 
+  /** What was begun, to be ended in the opposite order, however far it came. */
+  const begun: (() => Promise<unknown>)[] = [];
   beforeAll(async () => {
     data = await temporaryFolder('start');
+    begun.push(
+      () => data.remove(),
+      async () => server?.kill(),
+    );
     port = await freePort();
     browser = await openBrowser();
+    begun.push(() => browser.close());
   }, LIMIT_MS);
 
   afterAll(async () => {
-    await browser?.close();
-    await server?.kill();
-    await data?.remove();
+    for (const undo of begun.reverse()) await undo();
   }, LIMIT_MS);
 
   it('shows samples, records a passage and raises an alarm', async () => {
@@ -71,6 +76,7 @@ describe.skipIf(!available('chromium'))('npm run demo', { timeout: LIMIT_MS }, (
 
   it('keeps the history for the second start', async () => {
     server = await start();
+    tell('second start, address on the terminal');
     await firstSample();
     tell('second start, first sample in the browser');
     const { rows } = await ask<PassagePage>(server, `/api/passages?bridge=${BRIDGE}&order=time`);

@@ -18,9 +18,18 @@ const SEGMENT_SECONDS = 4;
 const MINUTE_MICROS = 60 * MICROS_PER_SECOND;
 
 export function createRollingSpectrum(rateHz: number): RollingSpectrum {
-  const segment = 2 ** Math.round(Math.log2(SEGMENT_SECONDS * rateHz));
-  return { spectrum: createSpectrum(rateHz, { segment, detrend: 'none' }), minute: -1 };
+  return { spectrum: createSpectrum(rateHz, { segment: segmentOf(rateHz), detrend: 'none' }), minute: -1 };
 }
+
+/**
+ * Distance of the bins of a rolling spectrum, Hz.
+ *
+ * @param rateHz samples per second
+ * @example rollingStepHz(512) // 0.25
+ */
+export const rollingStepHz = (rateHz: number): number => rateHz / segmentOf(rateHz);
+
+const segmentOf = (rateHz: number): number => 2 ** Math.round(Math.log2(SEGMENT_SECONDS * rateHz));
 
 /** Takes samples in order; tells a line whenever a minute is over and at least one segment was whole. */
 export function rollSpectrum(
