@@ -17,8 +17,11 @@ describe.skipIf(!available('chromium'))(
     let browser: Browser;
     let loggers: ChildProcess | null = null;
 
+    /** What was begun, to be ended in the opposite order, however far it came. */
+    const begun: (() => unknown)[] = [];
     beforeAll(async () => {
       data = await temporaryFolder('states');
+      begun.push(() => data.remove());
       const bridges = join(data.path, 'bridges');
       await mkdir(bridges);
       const good = join(ROOT, 'simulator', 'bridges', 'ottermere.yaml');
@@ -42,14 +45,14 @@ describe.skipIf(!available('chromium'))(
           'error',
         ],
       ]);
+      begun.push(() => server.interrupt());
       browser = await openBrowser();
+      begun.push(() => browser.close());
     }, LIMIT_MS);
 
     afterAll(async () => {
       loggers?.kill('SIGKILL');
-      await browser?.close();
-      await server?.interrupt();
-      await data?.remove();
+      for (const undo of begun.reverse()) await undo();
     }, LIMIT_MS);
 
     it('says on Network and Bridges what is wrong in a definition, with line and field', async () => {

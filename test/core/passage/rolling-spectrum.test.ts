@@ -1,6 +1,11 @@
 import { describe, expect, it } from 'vitest';
 import type { SpectrumLine } from '#core/contract/pipeline.ts';
-import { createRollingSpectrum, rollSpectrum, SPECTRUM_BINS_MOST } from '#core/passage/rolling-spectrum.ts';
+import {
+  createRollingSpectrum,
+  rollingStepHz,
+  rollSpectrum,
+  SPECTRUM_BINS_MOST,
+} from '#core/passage/rolling-spectrum.ts';
 import { createRandom } from '../../support/random.ts';
 
 const RATE = 128;
@@ -29,6 +34,7 @@ describe('the rolling spectrum', () => {
     const [line] = roll(tone, 64);
     // Hann, on a bin: peak A²/(2 · 1.5 · df), neighbours a quarter of it (reference values of Welch's method).
     expect(line!.stepHz).toBe(0.25);
+    expect(rollingStepHz(RATE)).toBe(0.25);
     const bin = 10 / line!.stepHz;
     expect(line!.psd[bin]).toBeCloseTo(4 / (2 * 1.5 * 0.25), 5);
     expect(line!.psd[bin - 1]).toBeCloseTo(4 / (2 * 1.5 * 0.25) / 4, 5);
