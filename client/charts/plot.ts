@@ -321,7 +321,9 @@ function drawOver(u: uPlot, spec: PlotSpec, ink: Ink, ratio: number): void {
     context.lineWidth = 0.7;
     context.setLineDash([...DASHES.chain]);
     line(context, px, box.top - 4, px, box.bottom);
-    write(label, [px + 5, box.top + 6 + 14 * rows[i]!], ink.ink, 'left', 500);
+    // At the right edge the words stand before their line.
+    const before = px + 5 + context.measureText(label).width > box.right;
+    write(label, [before ? px - 5 : px + 5, box.top + 6 + 14 * rows[i]!], ink.ink, before ? 'right' : 'left', 500);
   }
 
   context.setLineDash([]);
