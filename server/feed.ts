@@ -13,6 +13,8 @@ export interface Feed {
   thread: Thread;
   /** While false, live blocks are left out: they are taken from the journal. */
   live: boolean;
+  /** Counts the pipelines it has had: whoever feeds an earlier one stops. */
+  generation: number;
   /** The newest live block that was left out. */
   skippedTo: Position | null;
   /** Up to here its snapshot had taken the journal. */
@@ -49,6 +51,7 @@ export function newFeed(definition: BridgeDefinition, version: number, thread: T
     version,
     thread,
     live: false,
+    generation: 0,
     skippedTo: null,
     through: null,
     openedAt: null,

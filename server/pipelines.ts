@@ -64,8 +64,7 @@ export const PIPELINE_LIMITS: PipelineLimits = {
 const IDLE_SNAPSHOT_MS = 600_000;
 /** How long stopping waits for what is in hand. */
 const STOP_MS = 10_000;
-const FIRST_PAUSE_MS = 200;
-const LONGEST_PAUSE_MS = 30_000;
+const PAUSE_MS = { first: 200, longest: 30_000 };
 /** Records of the journal after which others get their turn. */
 const RECORDS_A_TURN = 32;
 /** Blocks that are left out because they made the pipeline fail; beyond, the oldest is tried again. */
@@ -120,7 +119,7 @@ class PipelinePool implements Pipelines {
       thread.feeds.add(feed);
       this.#feeds.set(definition.id, feed);
     }
-    this.#startRecovery([...this.#feeds.values()]);
+    if (this.#feeds.size > 0) this.#track(this.#recover([...this.#feeds.values()]));
     this.#idle = setInterval(() => this.#snapshotIdle(), IDLE_SNAPSHOT_MS);
     this.#idle.unref();
   }
@@ -210,7 +209,7 @@ class PipelinePool implements Pipelines {
     thread.blocks = thread.bytes = 0;
     release(thread);
     const recovery = (async () => {
-      await sleep(Math.min(LONGEST_PAUSE_MS, FIRST_PAUSE_MS * 2 ** (thread.failures - 1)), undefined, { ref: false });
+      await sleep(Math.min(PAUSE_MS.longest, PAUSE_MS.first * 2 ** (thread.failures - 1)), undefined, { ref: false });
       if (this.#stopping !== null) return;
       thread.worker = newWorker();
       this.#listen(thread);
@@ -288,8 +287,12 @@ class PipelinePool implements Pipelines {
     this.#pause(feed);
     this.#track(
       (async () => {
-        if (position === null) await removeSnapshot(this.#options.folder, feed.bridge);
-        await this.#recover([feed]);
+        if (position === null) {
+          // It did not even open: its snapshot is no good, or the trouble lies deeper.
+          await removeSnapshot(this.#options.folder, feed.bridge);
+          await sleep(PAUSE_MS.first, undefined, { ref: false });
+        }
+        if (!this.#isStopping()) await this.#recover([feed]);
       })(),
     );
   }
@@ -298,6 +301,7 @@ class PipelinePool implements Pipelines {
   #pause(feed: Feed): void {
     if (feed.live) feed.skippedTo = feed.through;
     feed.live = false;
+    feed.generation += 1;
     for (const { bytes } of feed.inFlight) {
       feed.thread.blocks -= 1;
       feed.thread.bytes -= bytes;
@@ -305,10 +309,6 @@ class PipelinePool implements Pipelines {
     feed.inFlight = [];
     feed.replaysInFlight = 0;
     this.#endSnapshot(feed);
-  }
-
-  #startRecovery(feeds: Feed[]): void {
-    this.#track(this.#recover(feeds));
   }
 
   #track(recovery: Promise<void>): void {
@@ -321,31 +321,34 @@ class PipelinePool implements Pipelines {
   }
 
   /** Opens the pipelines from their snapshots and feeds them from the journal until they are abreast of it. */
-  async #recover(feeds: Feed[]): Promise<void> {
+  async #recover(feeds: readonly Feed[]): Promise<void> {
+    const generations = new Map(feeds.map((feed) => [feed.bridge, feed.generation]));
+    // A bridge whose pipeline failed meanwhile has a recovery of its own.
+    const isMine = (feed: Feed): boolean => feed.generation === generations.get(feed.bridge);
     for (const feed of feeds) await this.#openFrom(feed);
-    const own = new Map(feeds.map((feed) => [feed.bridge, feed]));
     let at = oldest(feeds.map(({ openedAt }) => openedAt));
     for (;;) {
-      at = await this.#replay(own, at);
-      if (this.#isStopping()) return;
+      at = await this.#replay(isMine, at);
+      const mine = feeds.filter(isMine);
+      if (this.#isStopping() || mine.length === 0) return;
       const reached = at;
-      if (feeds.every(({ skippedTo }) => skippedTo === null || !isAfter(skippedTo, reached))) break;
+      if (mine.every(({ skippedTo }) => skippedTo === null || !isAfter(skippedTo, reached))) break;
       // What was left out is on its way to the disk.
       while (!isAfter(this.#options.journal.newest(), reached) && !this.#isStopping()) await sleep(5);
     }
-    for (const feed of feeds) {
+    for (const feed of feeds.filter(isMine)) {
       feed.live = true;
       feed.skippedTo = null;
     }
   }
 
-  async #replay(own: ReadonlyMap<string, Feed>, after: Position | null): Promise<Position | null> {
+  async #replay(isMine: (feed: Feed) => boolean, after: Position | null): Promise<Position | null> {
     let at = after;
     let records = 0;
     for await (const { position, record } of this.#options.journal.readFrom(after)) {
       for (const block of this.#options.decode(record)) {
-        const feed = own.get(block.bridge);
-        if (feed === undefined || !isAfter(position, feed.openedAt)) continue;
+        const feed = this.#feeds.get(block.bridge);
+        if (feed === undefined || !isMine(feed) || !isAfter(position, feed.openedAt)) continue;
         this.#dispatch(feed, block, position, record.receivedMicros);
         await this.#room(feed.thread);
       }
@@ -357,8 +360,10 @@ class PipelinePool implements Pipelines {
   }
 
   async #openFrom(feed: Feed): Promise<void> {
+    const { generation } = feed;
     const { folder, report, recall } = this.#options;
     const reading = await readSnapshot(folder, feed.bridge);
+    if (feed.generation !== generation) return;
     let state: Uint8Array | null = null;
     feed.through = feed.openedAt = null;
     const snapshot = reading.ok ? reading.value : null;

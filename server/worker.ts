@@ -56,6 +56,14 @@ function run(port: NonNullable<typeof parentPort>): void {
     const detail = failure instanceof Error ? (failure.stack ?? failure.message) : String(failure);
     port.postMessage({ kind: 'fault', bridge, detail } satisfies FromWorker);
   };
+  const open = ({ bridge, definition, version, state }: Extract<ToWorker, { kind: 'open' }>): void => {
+    try {
+      const pipeline = state === null ? createPipeline(definition, version) : (deserialize(state) as PipelineState);
+      pipelines.set(bridge, pipeline);
+    } catch (failure) {
+      fault(bridge, failure);
+    }
+  };
   const take = (block: SampleBlock): void => {
     const state = pipelines.get(block.bridge);
     if (state === undefined) return;
@@ -69,14 +77,9 @@ function run(port: NonNullable<typeof parentPort>): void {
 
   port.on('message', (message: ToWorker) => {
     switch (message.kind) {
-      case 'open': {
-        const { bridge, definition, version, state } = message;
-        pipelines.set(
-          bridge,
-          state === null ? createPipeline(definition, version) : (deserialize(state) as PipelineState),
-        );
+      case 'open':
+        open(message);
         return;
-      }
       case 'block': {
         take(message.block);
         return;

@@ -7,7 +7,7 @@ import { startClient, type OutsideSettings } from './client.ts';
 import { decodeMessage } from './decode.ts';
 import type { Journal, Position } from './journal.ts';
 import type { Incoming, Link, LinkStatus, PublishOptions } from './link.ts';
-import { addressOf, type Directory } from './topics.ts';
+import { addressOf, type Address, type Directory } from './topics.ts';
 
 export type IngestSettings = EmbeddedSettings | OutsideSettings;
 
@@ -51,6 +51,8 @@ export interface Ingest {
   stop(): Promise<void>;
 }
 
+type Counts = Omit<IngestStatus, 'broker'>;
+
 const LIMIT_STATUS_BYTES = 1024;
 
 /**
@@ -79,45 +81,52 @@ export async function startIngest(options: IngestOptions): Promise<Ingest> {
   };
 }
 
-async function takeMessage(
-  { directory, journal, clock, report, onMessage, onLoggerStatus }: IngestOptions,
-  counts: Omit<IngestStatus, 'broker'>,
-  { topic, payload }: Incoming,
-): Promise<void> {
+/** A throw of the takers is our own mistake and comes out at the socket; only the journal's failure is a rejection. */
+function takeMessage(options: IngestOptions, counts: Counts, message: Incoming): Promise<void> {
+  const { directory, journal, clock, report, onMessage } = options;
+  const { topic, payload } = message;
   const receivedMicros = clock();
   counts.messages += 1;
   counts.bytes += payload.length;
   const known = directory();
   const address = addressOf(known, topic);
   if (address.ok && address.value.kind === 'status') {
-    if (!isStatusOfKnownLogger(known, topic)) {
-      counts.refused += 1;
-      const { bridge, logger } = address.value;
-      const code = known.bridge(bridge) === undefined ? 'BRIDGE_UNKNOWN' : 'LOGGER_UNKNOWN';
-      report({ code, where: topic.slice(0, 200), detail: `status of ${bridge.slice(0, 64)}/${logger.slice(0, 64)}` });
-      return;
-    }
-    const text = Buffer.from(payload.subarray(0, LIMIT_STATUS_BYTES)).toString('utf8');
-    onLoggerStatus({ bridge: address.value.bridge, logger: address.value.logger, text, receivedMicros });
-    return;
+    takeStatus(options, counts, message, address.value, receivedMicros);
+    return Promise.resolve();
   }
   const { blocks, complaints } = decodeMessage(known, topic, payload, { nowMicros: receivedMicros });
   for (const complaint of complaints) report(complaint);
   if (blocks.length === 0) {
     if (complaints.length > 0) counts.refused += 1;
-    return;
+    return Promise.resolve();
   }
   const { position, durable } = journal.append({ receivedMicros, topic, payload });
   if (position !== null) onMessage(blocks, position, receivedMicros);
-  try {
-    await durable;
-  } catch (error) {
+  return durable.catch((error: unknown) => {
     counts.notKept += 1;
-    // The journal itself tells of a failed write, once; here only what it had no room to take.
-    if (position === null && error instanceof SpanbeatError)
-      report({ code: error.code, where: topic, detail: error.message });
+    // The journal itself tells of a failed write, once; here only of what it had no room to take.
+    if (position === null && error instanceof SpanbeatError) {
+      report({ code: error.code, where: topic, detail: 'the message was not taken' });
+    }
     throw error;
+  });
+}
+
+function takeStatus(
+  { directory, report, onLoggerStatus }: IngestOptions,
+  counts: Counts,
+  { topic, payload }: Incoming,
+  { bridge, logger }: Address,
+  receivedMicros: Micros,
+): void {
+  if (isStatusOfKnownLogger(directory(), topic)) {
+    const text = Buffer.from(payload.subarray(0, LIMIT_STATUS_BYTES)).toString('utf8');
+    onLoggerStatus({ bridge, logger, text, receivedMicros });
+    return;
   }
+  counts.refused += 1;
+  const code = directory().bridge(bridge) === undefined ? 'BRIDGE_UNKNOWN' : 'LOGGER_UNKNOWN';
+  report({ code, where: topic.slice(0, 200), detail: 'a status of a logger that is not defined' });
 }
 
 /** `<root>/<bridge>/passages` and `<root>/<bridge>/alarms`, on which only this server speaks. */

@@ -1,0 +1,232 @@
+import { encode } from 'cbor-x';
+import fc from 'fast-check';
+import { describe, expect, it } from 'vitest';
+import { BLOCK_LIMITS } from '#core/contract/block.ts';
+import { decodeMessage, type Decoded } from '../../server/ingest/decode.ts';
+import { buildDirectory } from '../../server/ingest/topics.ts';
+import { createRandom } from '../support/random.ts';
+import { BRIDGE, codes, directoryOf, NOW } from './specimen.ts';
+
+const directory = directoryOf();
+const TOPIC = 'spanbeat/specimen/L1/samples';
+const START = NOW - 1_000_000;
+
+const take = (message: unknown, topic = TOPIC, nowMicros: number | null = NOW): Decoded =>
+  decodeMessage(directory, topic, encode(message), { nowMicros });
+
+const good = (): { start: number; rate: number; seq: number; channels: Record<string, unknown> } => ({
+  start: START,
+  rate: 500,
+  seq: 7,
+  channels: { A1: Float32Array.of(1, 2, 3), A2: Int16Array.of(-1, 0, 1) },
+});
+
+describe('decodeMessage of samples', () => {
+  it('gives one block of all channels with the start, rate and number that the logger says', () => {
+    expect(take(good())).toEqual({
+      blocks: [
+        {
+          bridge: 'specimen',
+          logger: 'L1',
+          sequence: 7,
+          startMicros: START,
+          rateHz: 500,
+          channels: [
+            { sensor: 'A1', samples: Float64Array.of(1, 2, 3) },
+            { sensor: 'A2', samples: Float64Array.of(-1, 0, 1) },
+          ],
+        },
+      ],
+      complaints: [],
+    });
+  });
+
+  it('multiplies by one scale for all or by one a sensor', () => {
+    const scaled = take({ ...good(), scale: 0.5 }).blocks[0]!.channels;
+    expect(scaled.map(({ samples }) => [...samples])).toEqual([
+      [0.5, 1, 1.5],
+      [-0.5, 0, 0.5],
+    ]);
+    const single = take({ ...good(), scale: { A2: 10 } }).blocks[0]!.channels;
+    expect(single.map(({ samples }) => [...samples])).toEqual([
+      [1, 2, 3],
+      [-10, 0, 10],
+    ]);
+  });
+
+  it('takes plain arrays, empty channels, no number, and keys it does not know', () => {
+    const message: Record<string, unknown> = { ...good() };
+    delete message['seq'];
+    const { blocks, complaints } = take({ ...message, firmware: '1.2', channels: { A1: [1, 2.5], A2: [] } });
+    expect(complaints).toEqual([]);
+    expect(blocks).toHaveLength(1);
+    expect(blocks[0]!.sequence).toBeNull();
+    expect(blocks[0]!.channels).toEqual([{ sensor: 'A1', samples: Float64Array.of(1, 2.5) }]);
+  });
+
+  it('puts channels of different lengths into blocks of their own', () => {
+    const { blocks } = take({ ...good(), channels: { A1: [1, 2, 3], A2: [1, 2] } });
+    expect(blocks.map(({ channels }) => channels.map(({ sensor }) => sensor))).toEqual([['A1'], ['A2']]);
+  });
+
+  it('keeps the good channels beside every kind of bad one', () => {
+    const { blocks, complaints } = take({
+      ...good(),
+      channels: { A1: Float32Array.of(1), XX: Float32Array.of(1), A2: 'text', T1: Float32Array.of(1), B1: [1] },
+    });
+    expect(blocks).toHaveLength(1);
+    expect(blocks[0]!.channels).toEqual([{ sensor: 'A1', samples: Float64Array.of(1) }]);
+    expect(codes(complaints).sort()).toEqual(['MESSAGE_SHAPE', 'RATE_WRONG', 'SENSOR_UNKNOWN', 'SENSOR_UNKNOWN']);
+  });
+
+  it('turns values that are not finite into NaN and counts them', () => {
+    const { blocks, complaints } = take({ ...good(), channels: { A1: Float32Array.of(1, Infinity, NaN, -Infinity) } });
+    expect(blocks[0]!.channels[0]!.samples).toEqual(Float64Array.of(1, NaN, NaN, NaN));
+    expect(complaints).toEqual([
+      { code: 'VALUE_NOT_FINITE', where: `${TOPIC} A1`, detail: '3 of 4 values are not finite' },
+    ]);
+  });
+
+  it('takes a rate within 0.5 % of the definition and refuses one beyond', () => {
+    expect(take({ ...good(), rate: 502.4 }).blocks).toHaveLength(1);
+    expect(codes(take({ ...good(), rate: 502.6 }).complaints)).toEqual(['RATE_WRONG', 'RATE_WRONG']);
+    expect(codes(take({ ...good(), rate: 497.4 }).complaints)).toEqual(['RATE_WRONG', 'RATE_WRONG']);
+  });
+
+  it('takes times up to 60 s ahead, from 2000 to 2100, and refuses those beyond', () => {
+    const at = (start: number, nowMicros: number | null = NOW): string[] =>
+      codes(take({ ...good(), start, channels: { A1: [1] } }, TOPIC, nowMicros).complaints);
+    expect(at(NOW + 60_000_000)).toEqual([]);
+    expect(at(NOW + 60_000_001)).toEqual(['TIME_IN_FUTURE']);
+    expect(at(NOW + 60_000_001, null)).toEqual([]);
+    expect(at(946_684_800_000_000)).toEqual([]);
+    expect(at(946_684_799_999_999)).toEqual(['TIME_OUT_OF_RANGE']);
+    expect(at(0)).toEqual(['TIME_OUT_OF_RANGE']);
+    expect(at(4_102_444_800_000_000, null)).toEqual([]);
+    expect(at(4_102_444_800_000_001, null)).toEqual(['TIME_OUT_OF_RANGE']);
+  });
+
+  it.each<[string, unknown, string]>([
+    ['no map', [1, 2, 3], 'MESSAGE_SHAPE'],
+    ['no start', { rate: 500, channels: {} }, 'MESSAGE_SHAPE'],
+    ['a start in text', { ...good(), start: '2026-12-01' }, 'MESSAGE_SHAPE'],
+    ['a start beyond 2^53', { ...good(), start: 2n ** 60n }, 'TIME_OUT_OF_RANGE'],
+    ['a start that is no whole number', { ...good(), start: 1.5 }, 'MESSAGE_SHAPE'],
+    ['a rate of zero', { ...good(), rate: 0 }, 'MESSAGE_SHAPE'],
+    ['a rate that is infinite', { ...good(), rate: Infinity }, 'MESSAGE_SHAPE'],
+    ['a rate that is not a number', { ...good(), rate: NaN }, 'MESSAGE_SHAPE'],
+    ['a negative number of the message', { ...good(), seq: -1 }, 'MESSAGE_SHAPE'],
+    ['a scale in text', { ...good(), scale: 'big' }, 'MESSAGE_SHAPE'],
+    ['a scale that is infinite', { ...good(), scale: Infinity }, 'MESSAGE_SHAPE'],
+    ['channels that are no map', { ...good(), channels: 5 }, 'MESSAGE_SHAPE'],
+  ])('refuses a message with %s', (_what, message, code) => {
+    const { blocks, complaints } = take(message);
+    expect(blocks).toEqual([]);
+    expect(codes(complaints)).toEqual([code]);
+  });
+
+  it('refuses 10 000 sensors in one message, and takes 256', () => {
+    const many = (count: number): Record<string, unknown> =>
+      Object.fromEntries(Array.from({ length: count }, (_, i) => [`X${i}`, [1]]));
+    expect(codes(take({ ...good(), channels: many(10_000) }).complaints)).toEqual(['SENSOR_TOO_MANY']);
+    const { complaints } = take({ ...good(), channels: many(256) });
+    expect(complaints).toHaveLength(65);
+    expect(complaints.at(-1)!.detail).toBe('and 192 more complaints');
+  });
+
+  it('refuses a channel of more samples than a block may have', () => {
+    const over = new Int8Array(BLOCK_LIMITS.samplesPerChannel + 1);
+    const { blocks, complaints } = take({
+      ...good(),
+      start: NOW - 3600e6,
+      channels: { A1: over, A2: over.subarray(1) },
+    });
+    expect(codes(complaints)).toEqual(['MESSAGE_TOO_LARGE']);
+    expect(blocks[0]!.channels[0]!.sensor).toBe('A2');
+  });
+
+  it('refuses a message larger than a block may be, unread', () => {
+    const { complaints } = decodeMessage(directory, TOPIC, new Uint8Array(BLOCK_LIMITS.bytes + 1), { nowMicros: NOW });
+    expect(codes(complaints)).toEqual(['MESSAGE_TOO_LARGE']);
+  });
+
+  it('names an unknown bridge, an unknown logger, and a topic that is neither', () => {
+    expect(codes(take(good(), 'spanbeat/nowhere/L1/samples').complaints)).toEqual(['BRIDGE_UNKNOWN']);
+    expect(codes(take(good(), 'spanbeat/specimen/L9/samples').complaints)).toEqual(['LOGGER_UNKNOWN']);
+    for (const topic of ['', 'spanbeat', 'spanbeat/specimen/L1', 'spanbeat//L1/samples', 'other/specimen/L1/samples']) {
+      expect(codes(take(good(), topic).complaints)).toEqual(['MESSAGE_TOPIC']);
+    }
+  });
+
+  it('takes a mapped topic with the names of the logger', () => {
+    const { blocks, complaints } = take({ ...good(), channels: { ch0: [1], ch1: [2], C1: [3] } }, 'plant/3/blocks');
+    expect(blocks[0]!.channels.map(({ sensor }) => sensor)).toEqual(['C1', 'C2']);
+    expect(blocks[0]!.logger).toBe('L3');
+    expect(codes(complaints)).toEqual(['MESSAGE_SHAPE']);
+  });
+
+  it('never throws, whatever bytes of a valid message are changed, cut or doubled', () => {
+    const message = encode({ ...good(), scale: { A1: 2 } });
+    const random = createRandom(20_261_201);
+    for (let i = 0; i < 20_000; i += 1) {
+      const bytes = Buffer.from(message);
+      for (let change = random.integer(1, 4); change > 0; change -= 1) {
+        bytes[random.integer(0, bytes.length - 1)] = random.integer(0, 255);
+      }
+      const cut = bytes.subarray(0, random.integer(0, 3) === 0 ? random.integer(0, bytes.length) : bytes.length);
+      const { blocks, complaints } = decodeMessage(directory, TOPIC, cut, { nowMicros: NOW });
+      expect(blocks.length + complaints.length, `seed ${random.seed}, case ${i}`).toBeGreaterThan(-1);
+      for (const { channels } of blocks) {
+        for (const { samples } of channels)
+          expect(samples.every((x) => Number.isFinite(x) || Number.isNaN(x))).toBe(true);
+      }
+    }
+  });
+
+  it('never throws on random bytes on any topic', () => {
+    const topics = [TOPIC, 'spanbeat/specimen/L1/senml', 'site/7/raw', 'plant/x/blocks', '\u0000', '$SYS/x'];
+    fc.assert(
+      fc.property(fc.constantFrom(...topics), fc.uint8Array({ maxLength: 120 }), (topic, bytes) => {
+        const { complaints, blocks } = decodeMessage(directory, topic, bytes, { nowMicros: NOW });
+        expect(blocks.length > 0 || complaints.length > 0 || bytes.length > 0).toBe(true);
+      }),
+      { numRuns: 5000 },
+    );
+  });
+});
+
+describe('buildDirectory', () => {
+  it('subscribes to the contract and to each mapped topic', () => {
+    expect(directory.filters()).toEqual([
+      'spanbeat/+/+/samples',
+      'spanbeat/+/+/senml',
+      'spanbeat/+/+/status',
+      'site/7/raw',
+      'plant/+/blocks',
+    ]);
+  });
+
+  it('matches wildcards as MQTT 5 section 4.7 does', () => {
+    const of = (topic: string): typeof directory =>
+      buildDirectory([{ ...BRIDGE, loggers: [{ id: 'L1', topic }] }]).directory;
+    expect(of('a/#').mapped('a')).toBeDefined();
+    expect(of('a/#').mapped('a/b/c')).toBeDefined();
+    expect(of('a/+').mapped('a')).toBeUndefined();
+    expect(of('a/+').mapped('a/')).toBeDefined();
+    expect(of('a/+').mapped('a/b/c')).toBeUndefined();
+    expect(of('+/b').mapped('$SYS/b')).toBeUndefined();
+    expect(of('#').mapped('$SYS/b')).toBeUndefined();
+    expect(of('#').mapped('x')).toBeDefined();
+  });
+
+  it('complains of a topic that is mapped twice and of one that is no filter, and keeps the others', () => {
+    const loggers = [
+      { id: 'L1', topic: 'one' },
+      { id: 'L2', topic: 'one' },
+      { id: 'L3', topic: 'a/b#' },
+    ];
+    const { directory: built, complaints } = buildDirectory([{ ...BRIDGE, loggers }]);
+    expect(codes(complaints)).toEqual(['DEFINITION_DUPLICATE_ID', 'DEFINITION_INVALID']);
+    expect(built.mapped('one')?.logger).toBe('L1');
+  });
+});
