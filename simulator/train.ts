@@ -33,11 +33,6 @@ export function trainLengthM(train: Train): number {
   return train.axles.at(-1)?.behindFirstM ?? 0;
 }
 
-/** Mass of the train, t. */
-export function trainMassT(train: Train): number {
-  return train.axles.reduce((sum, axle) => sum + axle.loadKn, 0) / 9.80665;
-}
-
 /** A vehicle: length over buffers, axle places from its front buffer, mean axle load. */
 interface Vehicle {
   lengthM: number;

@@ -191,7 +191,7 @@ describe('a server with its own broker', () => {
     const expected = (await passagesOf(whole, 2)).rows.map(({ id }) => id);
     const first = await start();
     await send(first, blocks.slice(0, 52));
-    await until(async () => first.pipelines.figures().blocksInFlight === 0);
+    await until(() => Promise.resolve(first.pipelines.figures().blocksInFlight === 0));
     await first.stop();
     const second = await start();
     await send(second, blocks.slice(52));

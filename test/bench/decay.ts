@@ -1,6 +1,6 @@
 import { identifyDecay } from '#core/signal/decay.ts';
 import { createRandom } from '../support/random.ts';
-import type { Figure } from './main.ts';
+import type { Figure } from './figure.ts';
 
 /** Free-decay identification of one passage: 16 channels, 10 s, 500 Hz, two modes in noise. */
 export function benchDecay(): Figure[] {

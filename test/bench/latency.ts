@@ -3,7 +3,7 @@ import { connectAsync } from 'mqtt';
 import { WebSocket } from 'ws';
 import type { ServerMessage } from '#core/contract/live.ts';
 import { RATE_HZ, startBench } from './server.ts';
-import type { Figure } from './main.ts';
+import type { Figure } from './figure.ts';
 
 const BRIDGES = 10;
 const BLOCK = 50;

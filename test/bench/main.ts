@@ -1,17 +1,9 @@
 /** `npm run bench [-- section …]`: figures of this machine, as they are now. Quote ratios from one run: machines are noisy. */
 import { benchDecay } from './decay.ts';
+import type { Figure } from './figure.ts';
 import { benchLatency } from './latency.ts';
 import { benchPipeline } from './pipeline.ts';
 import { benchStream } from './stream.ts';
-
-/** One line of the table. */
-export interface Figure {
-  what: string;
-  value: number;
-  unit: string;
-  /** What is aimed at, for the reader. */
-  aim?: string;
-}
 
 const SECTIONS: Readonly<Record<string, () => Figure[] | Promise<Figure[]>>> = {
   pipeline: benchPipeline,

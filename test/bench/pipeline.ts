@@ -7,7 +7,7 @@ import { simulate } from '../../simulator/scene.ts';
 import { createTrain } from '../../simulator/train.ts';
 import { deckSensor, plainBridge } from '../support/bridges.ts';
 import { blocksOf } from '../support/scenes.ts';
-import type { Figure } from './main.ts';
+import type { Figure } from './figure.ts';
 
 const CHANNELS = 16;
 const RATE_HZ = 500;

@@ -1,6 +1,6 @@
 import { connectAsync } from 'mqtt';
 import { startBench } from './server.ts';
-import type { Figure } from './main.ts';
+import type { Figure } from './figure.ts';
 
 const SECONDS = 120;
 const BLOCK = 250;

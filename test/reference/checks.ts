@@ -85,12 +85,6 @@ export function check<E extends TSchema, I extends TSchema = TSchema>(
   };
 }
 
-/** Ids of all groups, for example to see which begin with `beam.`. */
-export function checkIds(): string[] {
-  groups ??= load();
-  return [...groups.keys()];
-}
-
 function load(): Map<string, Group> {
   const file = Value.Parse(Type.Object({ checks: Type.Array(Group) }), JSON.parse(readFileSync(CHECKS, 'utf8')));
   return new Map(file.checks.map((group) => [group.id, group]));

@@ -1,15 +1,9 @@
-import type { Span, Structure, TrackType } from '../contract/bridge.ts';
+import type { Span, Structure } from '../contract/bridge.ts';
 
 /**
  * Values of EN 1990:2002/A1:2005 Annex A2 and EN 1991-2:2003 section 6.4 as far as the program uses them. They are
  * recommended values; the national annex and the responsible engineer decide.
  */
-
-/** Largest peak deck acceleration, m/s², EN 1990 A2.4.4.2.1(4)P: γbt and γdf. */
-export const PEAK_DECK_ACCELERATION: Readonly<Record<TrackType, number>> = {
-  ballasted: 3.5,
-  'direct fastened': 5.0,
-};
 
 /** The frequency up to which deck acceleration counts, and what set it. */
 export interface BandEdge {

@@ -158,9 +158,9 @@ describe('the edge of forced motion', () => {
   };
   const record = arrangeRecord(bridge, windowsOf({ A1: motion(1, 0.5), A2: motion(2, 0.9) }), FROM, at(10));
 
-  it('is found within 50 ms, from well after it', () => {
+  it('is found within the 0.1 s that are promised of phases, from well after it', () => {
     const edge = lastDriven([record], { fromMicros: at(4.7), toMicros: at(8) }, at(3))!;
-    expect(Math.abs(edge - at(4)) / 1e6).toBeLessThan(0.05);
+    expect(Math.abs(edge - at(4)) / 1e6).toBeLessThan(0.1);
   });
 
   it('is not made up where the deck is free all the time, or the free stretch is too short to learn from', () => {
@@ -173,7 +173,12 @@ describe('the edge of forced motion', () => {
 describe('a free decay', () => {
   it('too short for a fit is not measurable, with the reason', () => {
     // The next train follows so closely that only a fraction of a second rings freely.
-    const passages = passagesOn(plainBridge(), 60, crossing(20, 'light engine', 40), crossing(22.3, 'light engine', 40));
+    const passages = passagesOn(
+      plainBridge(),
+      60,
+      crossing(20, 'light engine', 40),
+      crossing(22.3, 'light engine', 40),
+    );
     const first = passages[0]!;
     expect(first.f1Hz.value).toBeNull();
     expect(first.f1Hz).toHaveProperty('reason', expect.stringMatching(/free decay of \d\.\d s is too short|too few/));
