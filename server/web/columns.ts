@@ -128,6 +128,12 @@ export function gather(
       if (value > max) max = value;
     }
   }
+  // A slow channel has at most one sample a column: nothing is left to wait for, and the newest value is shown at once.
+  if (rateHz * stepMicros <= MICROS_PER_SECOND && min <= max) {
+    finished(number, min, max);
+    min = Infinity;
+    max = -Infinity;
+  }
   gathering.number = number;
   gathering.min = min;
   gathering.max = max;
