@@ -34,6 +34,26 @@ describe('the exact step of one oscillator', () => {
     expect(error(5e-4)).toBeLessThan(error(1e-3) / 3);
   });
 
+  it('is as exact in steps so small that differences of near equal numbers would spoil it', () => {
+    // A constant force of 1 m/s² settles at F/ω² about which it swings: w = (1 − cos ωt) / ω² without damping.
+    const stepS = 1e-5;
+    const steps = 20_000;
+    const displacement = new Float64Array(steps + 1);
+    run(
+      oscillator(0, stepS),
+      0,
+      new Float64Array(steps + 1).fill(1),
+      0,
+      steps,
+      new Float64Array(steps + 1),
+      displacement,
+    );
+    const wanted = (1 - Math.cos(omega * steps * stepS)) / omega ** 2;
+    expect(Math.abs(displacement[steps]! - wanted)).toBeLessThan(1e-10 * (2 / omega ** 2) + 1e-15);
+    const half = steps / 2;
+    expect(Math.abs(displacement[half]! * omega ** 2 - (1 - Math.cos(omega * half * stepS)))).toBeLessThan(1e-9);
+  });
+
   it('keeps the frequency that average acceleration in 5 ms steps would shift by 0.2 % (sim.newmark)', () => {
     // 25 s of 5 Hz are 125 whole cycles; average acceleration would be a quarter of a cycle behind by then.
     const steps = 5000;

@@ -187,6 +187,13 @@ describe('the laws of mechanics', () => {
     expect(Math.abs(motion.velocityMs - v)).toBeLessThan(1e-8);
   });
 
+  it('have a limit where the force keeps time with the beam: free amplitude π/2 of the static one (beam.free_maxima at K = 1)', () => {
+    const exit = movingForceMotion(beam(0), 2e5, 200, 0.1);
+    const statically = (2 * 2e5) / (1e4 * 20 * (10 * Math.PI) ** 2);
+    const amplitude = freeAccelerationAmplitude(beam(0), exit) / (10 * Math.PI) ** 2;
+    expect(Math.abs(amplitude / statically / (Math.PI / 2) - 1)).toBeLessThan(1e-9);
+  });
+
   it('say that nothing moves before the force comes', () => {
     expect(movingForceMotion(beam(0.01), 2e5, 50, -1)).toEqual({ displacementM: 0, velocityMs: 0, accelerationMs2: 0 });
   });
