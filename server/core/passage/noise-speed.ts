@@ -10,6 +10,8 @@ const SLOWEST = 3;
 const FASTEST = 110;
 /** Steps of slowness on each side of zero. */
 const STEPS = 300;
+/** The search looks at every so many frames; the refinement at all. */
+const COARSE_STRIDE = 2;
 /** The aligned traces must hold at least this share of the power of the single ones, beyond what chance gives. */
 const SEMBLANCE_LEAST = 0.35;
 /** Of several alignments about as good (a train is periodic), the fastest is taken. */
@@ -29,8 +31,9 @@ export function noiseSpeed(noise: RollingNoise, onMicros: Micros, offMicros: Mic
   const traces = tracesOf(noise, onMicros, offMicros);
   const seconds = (traces[0]!.y.length * FRAME_MICROS) / MICROS_PER_SECOND;
   if (seconds < 0.6) return none('the passage is too short for a speed from noise');
-  const best = bestSlowness(traces, seconds);
-  if (best === null) return none('the deck sensors do not hear the train one after the other');
+  const coarse = bestSlowness(traces, seconds);
+  if (coarse === null) return none('the deck sensors do not hear the train one after the other');
+  const best = nearBest(traces, coarse, seconds);
   const error = slownessError(traces, seconds, best, spread);
   const speed = 1 / Math.abs(best);
   const standardError = speed * speed * error;
@@ -81,7 +84,9 @@ function bestSlowness(traces: readonly Trace[], seconds: number): number | null 
   const step = (slowest - fastest) / STEPS;
   const candidates: { slowness: number; score: number }[] = [];
   for (const sign of [1, -1]) {
-    const scores = Array.from({ length: STEPS + 1 }, (_, k) => semblance(traces, sign * (fastest + k * step)));
+    const scores = Array.from({ length: STEPS + 1 }, (_, k) =>
+      semblance(traces, sign * (fastest + k * step), COARSE_STRIDE),
+    );
     scores.forEach((score, k) => {
       const [before = -1, after = -1] = [scores[k - 1], scores[k + 1]];
       if (score < before || score < after) return;
@@ -110,37 +115,44 @@ function nearBest(traces: readonly Trace[], best: number, seconds: number): numb
   return found.slowness;
 }
 
-/** Power of the mean of the aligned traces over the mean of their powers, 0 to 1, less 1/n, which chance gives. */
-function semblance(traces: readonly Trace[], slowness: number): number {
-  const length = traces[0]!.y.length;
+/**
+ * Power of the mean of the aligned traces over the mean of their powers, 0 to 1, less 1/n, which chance gives.
+ *
+ * @param stride take every so many frames
+ */
+function semblance(traces: readonly Trace[], slowness: number, stride = 1): number {
+  const n = traces.length;
   const shifts = traces.map(({ alongM }) => (alongM * slowness * MICROS_PER_SECOND) / FRAME_MICROS);
-  const least = Math.min(...shifts);
-  const most = Math.max(...shifts);
-  let stacked = 0;
+  const from = Math.ceil(-Math.min(...shifts));
+  const to = traces[0]!.y.length - Math.max(...shifts) - 1;
+  const frames = Math.max(0, Math.ceil((to - from) / stride));
+  const stack = new Float64Array(frames);
   let single = 0;
-  for (let t = Math.ceil(-least); t + most + 1 < length; t++) {
-    let sum = 0;
-    for (let i = 0; i < traces.length; i++) {
-      const place = t + shifts[i]!;
-      const whole = Math.floor(place);
-      const part = place - whole;
-      const { y } = traces[i]!;
-      const value = (1 - part) * y[whole]! + part * y[whole + 1]!;
-      sum += value;
+  for (let i = 0; i < n; i++) {
+    const { y } = traces[i]!;
+    const whole = Math.floor(shifts[i]!);
+    const part = shifts[i]! - whole;
+    let at = from + whole;
+    for (let k = 0; k < frames; k++, at += stride) {
+      const value = (1 - part) * y[at]! + part * y[at + 1]!;
+      stack[k]! += value;
       single += value * value;
     }
-    stacked += sum * sum;
   }
-  const n = traces.length;
+  let stacked = 0;
+  for (const sum of stack) stacked += sum * sum;
   return single === 0 ? 0 : (stacked / (n * single) - 1 / n) / (1 - 1 / n);
 }
 
-/** Standard error of the slowness, s/m: by leaving out each sensor in turn; a frame over the spread at least. */
+/** Most groups of sensors that are left out in turn. */
+const GROUPS_MOST = 5;
+
+/** Standard error of the slowness, s/m, by leaving out groups of sensors in turn (jackknife); part of a frame over the spread at least. */
 function slownessError(traces: readonly Trace[], seconds: number, best: number, spread: number): number {
   const floor = (0.3 * FRAME_MICROS) / MICROS_PER_SECOND / spread;
   if (traces.length < 3) return 3 * floor;
-  const others = traces
-    .map((_, leftOut) => traces.filter((__, i) => i !== leftOut))
+  const groups = Math.min(GROUPS_MOST, traces.length);
+  const others = Array.from({ length: groups }, (_, group) => traces.filter((__, i) => i % groups !== group))
     .filter((rest) => spreadOf(rest) >= 3)
     .map((rest) => nearBest(rest, best, seconds));
   if (others.length < 2) return 3 * floor;
