@@ -7,10 +7,11 @@ import type { SceneVerdict } from './verdict.ts';
 /**
  * The main job on 2 000 simulated passages of all train types with all nuisances: meets, stops on the bridge, light
  * engines, blows, wind, walkers, dead and failing channels; seven bridges in ten with axle sensors, the others with
- * accelerometers alone. SPANBEAT_CAMPAIGN=200 makes it shorter at the desk.
+ * accelerometers alone. SPANBEAT_CAMPAIGN=200 makes it shorter at the desk, SPANBEAT_CAMPAIGN_SEED draws others.
  */
 const PASSAGES = Number(process.env['SPANBEAT_CAMPAIGN'] ?? 2000);
-const SEED = 1;
+/** Nothing was adjusted on the scenes of this seed; on those of 1 and 2 the rules were. */
+const SEED = Number(process.env['SPANBEAT_CAMPAIGN_SEED'] ?? 3);
 const PROCESSES = 2;
 /** Phases are right within this, s, and must be so for this share. */
 const PHASE_SECONDS = 0.1;

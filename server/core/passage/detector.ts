@@ -1,6 +1,7 @@
 import { timeName, type Micros } from '../contract/time.ts';
 import { MICROS_PER_SECOND } from '../contract/time.ts';
 import { RULE, TICK_MICROS } from './rule.ts';
+import { countAxle, standingSeconds, type AxleCount, type AxleTrack } from './standing.ts';
 
 /**
  * Finds stretches of time that may hold a passage, one tick of all channels at a time. It only opens and closes the
@@ -34,11 +35,9 @@ export interface Candidate {
   longestRow: number;
   /** A train, as far as can be told live. */
   entered: boolean;
-  pulses: Record<string, number>;
+  /** What each axle sensor has counted; no entry before its first pulse. */
+  counts: Record<string, AxleCount>;
   pulseCount: number;
-  lastPulseMicros: Micros;
-  /** Times of the newest pulses of each axle sensor, at most `NEWEST_PULSES`. */
-  newest: Record<string, Micros[]>;
   freeUntilTick: number;
   /** Window, once closed. */
   windowFrom: Micros;
@@ -66,13 +65,6 @@ export interface DetectorSetting {
   freeSeconds: number;
   /** The sensors at which each axle leaves a pulse, track by track. */
   axleTracks: readonly AxleTrack[];
-}
-
-export interface AxleTrack {
-  sensors: readonly string[];
-  /** Distance between the outermost sensors, and how many axles find room between them. */
-  lengthM: number;
-  room: number;
 }
 
 /** Takes the next tick of the bridge; ticks come in rising order, with holes where there was no data at all. */
@@ -115,10 +107,8 @@ function createCandidate(bridge: string, onsetTick: number): Candidate {
     row: 0,
     longestRow: 0,
     entered: false,
-    pulses: {},
+    counts: {},
     pulseCount: 0,
-    lastPulseMicros: 0,
-    newest: {},
     freeUntilTick: 0,
     windowFrom: 0,
   };
@@ -148,10 +138,8 @@ function follow(
   candidate.row = votes ? candidate.row + 1 : 0;
   candidate.longestRow = Math.max(candidate.longestRow, candidate.row);
   for (const { sensor, micros } of tick.pulses) {
-    candidate.pulses[sensor] = (candidate.pulses[sensor] ?? 0) + 1;
+    candidate.counts[sensor] = countAxle(candidate.counts[sensor], micros);
     candidate.pulseCount += 1;
-    candidate.lastPulseMicros = Math.max(candidate.lastPulseMicros, micros);
-    candidate.newest[sensor] = [...(candidate.newest[sensor] ?? []), micros].slice(-NEWEST_PULSES);
   }
   if (votes || tick.pulses.length > 0) candidate.lastActiveTick = tick.number;
   const events: DetectorEvent[] = [];
@@ -166,13 +154,13 @@ function follow(
     events.push({ kind: 'entered', candidate, micros: candidate.onsetTick * TICK_MICROS });
   }
   const quietSeconds = ((tick.number - candidate.lastActiveTick) * TICK_MICROS) / MICROS_PER_SECOND;
-  if (quietSeconds > standingSeconds(detector, setting, candidate, tick.speedMs))
+  if (quietSeconds > waitSeconds(detector, setting, candidate, tick.speedMs))
     events.push(...leave(detector, setting, candidate));
   return events;
 }
 
 function looksLikeTrain(candidate: Candidate, setting: DetectorSetting): boolean {
-  const speaking = Object.keys(candidate.pulses).length;
+  const speaking = Object.keys(candidate.counts).length;
   return (
     candidate.longestRow >= RULE.activeTicks ||
     // two pulses at one place are a bogie
@@ -181,8 +169,8 @@ function looksLikeTrain(candidate: Candidate, setting: DetectorSetting): boolean
   );
 }
 
-/** How long quiet must last before the passage counts as over: longer while the axle count says that a train stands there. */
-function standingSeconds(
+/** How long quiet must last before the passage counts as over: longer while an axle may be on the bridge, or the next one come. */
+function waitSeconds(
   detector: Detector,
   setting: DetectorSetting,
   candidate: Candidate,
@@ -191,66 +179,12 @@ function standingSeconds(
   if (candidate.pulseCount === 0) return RULE.quietSeconds;
   if (!candidate.entered) return RULE.pulseWaitSeconds;
   const used = setting.axleTracks.filter(({ sensors }) =>
-    sensors.some((sensor) => candidate.pulses[sensor] !== undefined),
+    sensors.some((sensor) => candidate.counts[sensor] !== undefined),
   );
-  return Math.max(...used.map((track) => trackStanding(detector, candidate, track, speedMs)));
-}
-
-/**
- * The same for one track: as many axles must leave as have come. More axles than find room on the bridge cannot stand
- * there: then the other sensor is deaf.
- */
-function trackStanding(
-  detector: Detector,
-  candidate: Candidate,
-  { sensors, room, lengthM }: AxleTrack,
-  speedMs: number | null,
-): number {
-  const counts = sensors.map((sensor) => candidate.pulses[sensor] ?? 0);
-  const [most, least] = [Math.max(...counts), Math.min(...counts)];
-  if (most - least > room) return RULE.quietSeconds;
-  if (most === least)
-    return sensors.length < 2 ? RULE.quietSeconds : nextBogieSeconds(candidate, sensors, lengthM, speedMs);
-  // A pulse missed now and then does not keep a bridge occupied for long.
-  if (least > 0 && most - least <= Math.max(1, Math.floor(most / 16))) {
-    return Math.max(RULE.pulseWaitSeconds, nextBogieSeconds(candidate, sensors, lengthM, speedMs));
-  }
-  const silent = sensors.filter((sensor) => (candidate.pulses[sensor] ?? 0) === 0);
-  const believed = silent.every((sensor) => detector.proven[sensor] === true);
-  return believed ? RULE.standSeconds : RULE.standUnprovenSeconds;
-}
-
-/** Pulses that are kept of each sensor to tell the speed of the last axles. */
-const NEWEST_PULSES = 4;
-
-/**
- * On a short bridge no axle may be on it between two bogies of one coach: the next may yet come, at the speed of the
- * last axle. A train that brakes may stand astride of the bridge.
- */
-function nextBogieSeconds(
-  candidate: Candidate,
-  sensors: readonly string[],
-  lengthM: number,
-  speedMs: number | null,
-): number {
-  const speeds = lastAxleSpeeds(candidate, sensors, lengthM);
-  const last = speeds.at(-1) ?? speedMs;
-  if (last === null || last === 0) return RULE.quietSeconds;
-  const wayM = RULE.bogieDistanceM - lengthM;
-  const braking = wayM > 0 && last < RULE.brakingShare * Math.max(speedMs ?? 0, ...speeds);
-  if (braking) return RULE.brakingWaitSeconds;
-  return Math.min(RULE.brakingWaitSeconds, Math.max(RULE.emptySeconds, wayM / last + 0.3));
-}
-
-/** Speeds of the last axles that have passed both outermost sensors, oldest first, m/s. */
-function lastAxleSpeeds(candidate: Candidate, sensors: readonly string[], lengthM: number): number[] {
-  const one = candidate.newest[sensors[0]!] ?? [];
-  const other = candidate.newest[sensors.at(-1)!] ?? [];
-  const count = Math.min(one.length, other.length);
-  return Array.from({ length: count }, (_, i) => {
-    const delay = Math.abs(one[one.length - count + i]! - other[other.length - count + i]!);
-    return delay === 0 ? Infinity : (lengthM * MICROS_PER_SECOND) / delay;
-  });
+  const activeMicros = candidate.lastActiveTick * TICK_MICROS;
+  return Math.max(
+    ...used.map((track) => standingSeconds(track, candidate.counts, detector.proven, speedMs, activeMicros)),
+  );
 }
 
 /** The train has gone: a passage rings on until its free part ends; what was no train is forgotten. */
@@ -258,7 +192,7 @@ function leave(detector: Detector, setting: DetectorSetting, candidate: Candidat
   detector.open = null;
   if (!candidate.entered) return [];
   for (const sensor of setting.axleTracks.flatMap(({ sensors }) => sensors)) {
-    if ((candidate.pulses[sensor] ?? 0) > 0) detector.proven[sensor] = true;
+    if (candidate.counts[sensor] !== undefined) detector.proven[sensor] = true;
     else if (waitedInVain(detector, candidate)) detector.proven[sensor] = false;
   }
   candidate.freeUntilTick = candidate.lastActiveTick + 1 + Math.ceil(setting.freeSeconds * 10);

@@ -9,7 +9,6 @@ import {
   detect,
   interrupt,
   neededFrom,
-  type AxleTrack,
   type Detector,
   type DetectorEvent,
   type DetectorSetting,
@@ -19,6 +18,7 @@ import { createLiveSpeed, noteLivePulse, type LiveSpeed } from './live-speed.ts'
 import { measurePassage } from './measure.ts';
 import { forgetBefore, recall } from './memory.ts';
 import { RULE, RULE_VERSION, TICK_MICROS } from './rule.ts';
+import type { AxleTrack } from './standing.ts';
 
 /** State layout and rules; a stored state of another version is not taken up again. */
 export const PIPELINE_VERSION = `1/${RULE_VERSION}`;

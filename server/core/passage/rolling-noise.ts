@@ -142,7 +142,8 @@ function mainStretch(smooth: Float64Array, level: number): [first: number, last:
 /** Longest time without a break near the level of the loud frames, s; one blow in the middle of a train is not that level. */
 function sustained(smooth: Float64Array): number {
   const loud = smooth.filter((value) => value > RULE.activeRatio);
-  const least = Math.max(SUSTAIN_SHARE * (loud.length === 0 ? 0 : quantile(loud, SUSTAIN_QUANTILE)), RULE.activeRatio);
+  const level = loud.length === 0 ? 0 : quantile(loud, SUSTAIN_QUANTILE);
+  const least = Math.max(SUSTAIN_SHARE * level, RULE.activeRatio / 2);
   let longest = 0;
   let row = 0;
   for (const value of smooth) {

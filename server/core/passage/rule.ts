@@ -2,7 +2,7 @@
  * The rules by which passages are found and measured, in one place and under one version. A stored passage names the
  * version it was made with; any change here that can change a number needs a new one.
  */
-export const RULE_VERSION = '2026-12-1';
+export const RULE_VERSION = '2026-12-2';
 
 /** Features of the stream are gathered on a fixed grid of event time, so that no split of the samples can matter. */
 export const TICK_MICROS = 100_000;
@@ -33,14 +33,15 @@ export const RULE = {
   /** Quiet that parts two trains when every axle that came has left, and the longest way between axles of one train. */
   emptySeconds: 0.8,
   bogieDistanceM: 22,
-  /** An axle this much slower than the fastest before it brakes: its train may stand with no axle on a short bridge. */
-  brakingShare: 0.7,
-  brakingWaitSeconds: 60,
+  /** An axle this much slower than the fastest before it brakes: its train may stop, if it can within the way left. */
+  brakingShare: 0.9,
+  /** No train brakes harder, m/s²: full braking of passenger stock (common practice). */
+  brakingMs2: 1.3,
   /** After a first pulse the next bogie of a creeping train is waited for: 18 m at 3 m/s. */
   pulseWaitSeconds: 6,
   /** How long a train may stand on the bridge while the axle count says it is there. */
   standSeconds: 900,
-  /** The same where one of the axle sensors has said nothing yet. */
+  /** The same where that is less sure: a sensor has said nothing yet, or one pulse may have been missed. */
   standUnprovenSeconds: 120,
   /** Quiet part before the train, and bounds of the free part after it. */
   beforeSeconds: 5,

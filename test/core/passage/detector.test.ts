@@ -15,8 +15,14 @@ interface Scene {
 }
 
 /** Runs ticks [0, count) and lists events as `kind@tick`. */
-function run(count: number, scene: Scene, skip: (tick: number) => boolean = () => false) {
+function run(
+  count: number,
+  scene: Scene,
+  track: { lengthM: number; room: number } = { lengthM: 20, room: 10 },
+  skip: (tick: number) => boolean = () => false,
+) {
   const detector = createDetector();
+  const setting = { ...SETTING, axleTracks: [{ sensors: ['S1', 'S2'], ...track }] };
   const events: DetectorEvent[] = [];
   for (let i = 0; i < count; i++) {
     if (skip(i)) continue;
@@ -27,7 +33,7 @@ function run(count: number, scene: Scene, skip: (tick: number) => boolean = () =
     }));
     const micros = (FIRST + i) * TICK_MICROS + 30_000;
     const pulses = (scene.pulses?.(i) ?? []).map((sensor) => ({ sensor, micros }));
-    events.push(...detect(detector, SETTING, { number: FIRST + i, powers, pulses, speedMs: null }));
+    events.push(...detect(detector, setting, { number: FIRST + i, powers, pulses, speedMs: null }));
   }
   const told = events.map((event) => event.kind);
   return { detector, events, told };
@@ -38,6 +44,26 @@ const between =
   (from: number, to: number, names: string[]) =>
   (tick: number): string[] =>
     tick >= from && tick < to ? names : [];
+
+/** Two coaches: distance of each axle behind the first, m. */
+const TWO_COACHES = [0, 2.5, 16, 18.5, 25, 27.5, 41, 43.5];
+
+/**
+ * Pulses of a train that reaches the first sensor at tick 100, brakes at 0.8 m/s² until its first axle has come
+ * `stopM` beyond it, rests, and goes on at 5 m/s.
+ */
+function braking(train: { axlesM: number[]; lengthM: number; stopM: number; restTicks: number }) {
+  const { axlesM, lengthM, stopM, restTicks } = train;
+  const v0 = Math.sqrt(2 * 0.8 * stopM);
+  const secondsAt = (wayM: number): number =>
+    wayM <= stopM ? (v0 - Math.sqrt(v0 * v0 - 1.6 * wayM)) / 0.8 : v0 / 0.8 + restTicks / 10 + (wayM - stopM) / 5;
+  const ticksOf = (sensorM: number): number[] => axlesM.map((axle) => 100 + Math.floor(10 * secondsAt(axle + sensorM)));
+  const [entry, exit] = [ticksOf(0), ticksOf(lengthM)];
+  return (tick: number): string[] => [
+    ...entry.filter((at) => at === tick).map(() => 'S1'),
+    ...exit.filter((at) => at === tick).map(() => 'S2'),
+  ];
+}
 
 describe('the passage detector', () => {
   it('makes one window of a train: quiet before, free part after', () => {
@@ -74,16 +100,39 @@ describe('the passage detector', () => {
   });
 
   it('keeps a passage open while the axle count says that a train stands on the bridge', () => {
-    // Both gauges have spoken in an earlier passage; then eight axles enter, four leave, a minute of rest, four leave.
-    const pulses = (i: number): string[] => {
-      if (i >= 100 && i < 108) return ['S1'];
-      if ((i >= 104 && i < 108) || (i >= 700 && i < 704)) return ['S2'];
-      return [];
-    };
-    const both = (i: number): string[] => [...pulses(i), ...(i >= 104 && i < 108 ? ['S2'] : [])];
-    const { told } = run(900, { pulses: (i) => (i < 108 ? both(i).slice(0, 2) : pulses(i)) });
-    expect(told.filter((kind) => kind === 'entered')).toHaveLength(1);
+    // Eight axles enter, four leave, a minute of rest, four leave.
+    const { told } = run(1200, { pulses: braking({ axlesM: TWO_COACHES, lengthM: 20, stopM: 44, restTicks: 600 }) });
     expect(told).toEqual(['entered', 'left', 'window']);
+  });
+
+  it('keeps a passage open while a train stands astride of a bridge shorter than its coaches', () => {
+    // Rests with the bogies of one coach on either side: as many axles have left as have come.
+    const { told } = run(
+      1200,
+      { pulses: braking({ axlesM: TWO_COACHES, lengthM: 8, stopM: 12, restTicks: 600 }) },
+      { lengthM: 8, room: 6 },
+    );
+    expect(told).toEqual(['entered', 'left', 'window']);
+  });
+
+  it('keeps a passage open while one axle of a braking train is on the bridge', () => {
+    const { told } = run(1200, { pulses: braking({ axlesM: TWO_COACHES, lengthM: 20, stopM: 21, restTicks: 600 }) });
+    expect(told).toEqual(['entered', 'left', 'window']);
+  });
+
+  it('parts two fast trains although one gauge is dead: what runs fast cannot have stopped on the bridge', () => {
+    const fast = (from: number) => (i: number) => (i >= from && i < from + 4 ? ['S1'] : []);
+    const first = fast(100);
+    const second = fast(140);
+    const { told } = run(
+      400,
+      {
+        loud: (i) => [...between(100, 112, all)(i), ...between(140, 152, all)(i)],
+        pulses: (i) => [...first(i), ...second(i)],
+      },
+      { lengthM: 10, room: 6 },
+    );
+    expect(told).toEqual(['entered', 'left', 'window', 'entered', 'left', 'window']);
   });
 
   it('gives up waiting for a gauge that has never spoken', () => {
@@ -106,7 +155,7 @@ describe('the passage detector', () => {
   });
 
   it('closes at once where the data end for longer than the quiet it would wait for', () => {
-    const { told } = run(400, { loud: between(100, 140, all) }, (i) => i >= 140 && i < 300);
+    const { told } = run(400, { loud: between(100, 140, all) }, undefined, (i) => i >= 140 && i < 300);
     expect(told).toEqual(['entered', 'left', 'window']);
   });
 
