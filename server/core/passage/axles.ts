@@ -7,6 +7,8 @@ import { microsOf, type RecordChannel } from './record.ts';
 
 /** What the axle sensors of a passage say, with hindsight. */
 export interface AxleReading {
+  /** How many tracks saw axles. */
+  trains: number;
   count: Measured;
   axles: Axle[];
   speedMs: Measured;
@@ -30,34 +32,50 @@ const PLACE_ERROR_M = 0.02;
 
 /** Reads the axle sensors of each track; two tracks that both saw axles are two trains at once, and that is said. */
 export function readAxles(bridge: BridgeDefinition, record: readonly RecordChannel[]): AxleReading {
-  const seen = axleTracks(bridge)
-    .map((track) => readTrack(bridge, placesOf(track, record)))
-    .filter((reading) => reading !== null);
-  const [only, other] = seen;
+  const tracks = axleTracks(bridge).map((track) => listening(track, record));
+  const seen = tracks.flatMap((channels) => readTrack(bridge, placesOf(channels), channels.length) ?? []);
+  // Of two sensors on one track one alone may err, where another track has told of a whole train.
+  const certain = seen.filter(({ lonely }) => !lonely);
+  const told = certain.some(({ onMicros }) => onMicros !== null) ? certain : seen;
+  const [only, other] = told;
   if (only === undefined) return nothingSeen(record.some(({ axles }) => axles));
-  return other === undefined ? only : together(seen);
+  const reading = other === undefined ? only : together(told);
+  const doubted = seen.filter((each) => !told.includes(each)).flatMap(({ notes }) => notes);
+  return { ...reading, notes: [...reading.notes, ...doubted.map((note) => `${note}: not believed`)] };
 }
 
-function placesOf(track: readonly Sensor[], record: readonly RecordChannel[]): Place[] {
-  return record
-    .filter((channel) => track.some(({ id }) => id === channel.sensor.id) && !channel.flags.includes('flat'))
+function listening(track: readonly Sensor[], record: readonly RecordChannel[]): RecordChannel[] {
+  return record.filter(
+    (channel) => track.some(({ id }) => id === channel.sensor.id) && !channel.flags.includes('flat'),
+  );
+}
+
+function placesOf(channels: readonly RecordChannel[]): Place[] {
+  return channels
     .map((channel) => ({ alongM: channel.sensor.alongM, id: channel.sensor.id, pulses: axlePulses(channel) }))
     .filter(({ pulses }) => pulses.length > 0)
     .sort((a, b) => a.alongM - b.alongM);
 }
 
-function readTrack(bridge: BridgeDefinition, places: readonly Place[]): AxleReading | null {
+/** A reading of one track; lonely where one sensor spoke and another that listens there did not. */
+interface TrackReading extends AxleReading {
+  lonely: boolean;
+}
+
+function readTrack(bridge: BridgeDefinition, places: readonly Place[], listeners: number): TrackReading | null {
   const first = places[0];
   const last = places.at(-1);
   if (first === undefined || last === undefined) return null;
   const all = places.flatMap(({ pulses }) => pulses.map(({ micros }) => micros));
-  const nothing = { ...nothingSeen(true), firstPulse: Math.min(...all), lastPulse: Math.max(...all) };
-  if (last.alongM - first.alongM < 1) return oneSensor(nothing, first.pulses, first.id);
-  return pairSensors(nothing, bridge, first, last);
+  const nothing = { ...nothingSeen(true), trains: 1, firstPulse: Math.min(...all), lastPulse: Math.max(...all) };
+  if (last.alongM - first.alongM < 1)
+    return { ...oneSensor(nothing, first.pulses, first.id), lonely: places.length < listeners };
+  return { ...pairSensors(nothing, bridge, first, last), lonely: false };
 }
 
 function nothingSeen(sensors: boolean): AxleReading {
   return {
+    trains: 0,
     count: notMeasurable(sensors ? 'the axle sensors saw nothing' : 'the bridge has no axle sensor'),
     axles: [],
     speedMs: notMeasurable('no two axle sensors saw the train'),
@@ -82,6 +100,7 @@ function together(readings: readonly AxleReading[]): AxleReading {
   const reason = `${readings.length} trains at once: ${words.join('; ')}`;
   const axles = readings.reduce((sum, { count }) => sum + (count.value ?? 0), 0);
   return {
+    trains: readings.length,
     count: measured(axles, null, 'usable', reason),
     axles: readings.flatMap((reading) => reading.axles).sort((a, b) => a.micros - b.micros),
     speedMs: notMeasurable(reason),
@@ -139,6 +158,7 @@ function pairSensors(nothing: AxleReading, bridge: BridgeDefinition, low: Place,
   const beforeM = rising ? entry.alongM : lengthM - entry.alongM;
   const afterM = rising ? lengthM - exit.alongM : exit.alongM;
   return {
+    trains: 1,
     count: complete
       ? measured(pairs.length, 0)
       : measured(Math.max(low.pulses.length, high.pulses.length), null, 'usable', notes.at(-1) ?? ''),

@@ -171,7 +171,9 @@ function speedOf(
   noise: RollingNoise | null,
   phases: FoundPhases,
 ): Pick<Passage, 'speedMs' | 'direction'> {
-  if (axles.speedMs.value !== null || noise === null) return { speedMs: axles.speedMs, direction: axles.direction };
+  if (axles.speedMs.value !== null || axles.trains > 1 || noise === null) {
+    return { speedMs: axles.speedMs, direction: axles.direction };
+  }
   return noiseSpeed(noise, phases.onMicros, phases.offMicros);
 }
 

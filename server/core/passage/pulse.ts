@@ -4,8 +4,10 @@
  * axles.ts; this one serves the moving picture and the count of axles on the bridge.
  */
 export interface PulseFinder {
-  /** Running mean of the signal between pulses, and of its squared deviation. */
+  /** Running mean of the signal between pulses. */
   base: number;
+  /** Running mean with a short memory, and of the squared deviation from it: a wheel at rest near the gauge is no noise. */
+  near: number;
   variance: number;
   seen: number;
   /** Typical pulse height of late; 0 before the first. */
@@ -25,12 +27,25 @@ export interface PulseFinder {
 /** Samples over which the base line is learnt before pulses are believed, s; and its memory after that, s. */
 const LEARN_SECONDS = 1;
 const BASE_SECONDS = 10;
+const NEAR_SECONDS = 0.5;
 /** A crest stands above the base by this many standard deviations, and by this share of the usual height. */
 const SIGMAS = 8;
 const SHARE = 0.15;
 
 export function createPulseFinder(): PulseFinder {
-  return { base: 0, variance: 0, seen: 0, height: 0, crest: 0, age: 0, before: 0, after: 0, last: 0, valley: 0 };
+  return {
+    base: 0,
+    near: 0,
+    variance: 0,
+    seen: 0,
+    height: 0,
+    crest: 0,
+    age: 0,
+    before: 0,
+    after: 0,
+    last: 0,
+    valley: 0,
+  };
 }
 
 /** @param tell index in `x` of a crest, fractional and perhaps below zero; and its height */
@@ -44,6 +59,7 @@ export function findPulses(
 ): void {
   const learn = Math.ceil(LEARN_SECONDS * rateHz);
   const slow = 1 / (BASE_SECONDS * rateHz);
+  const quick = 1 / (NEAR_SECONDS * rateHz);
   for (let i = from; i < to; i++) {
     const value = x[i]! - finder.base;
     const threshold = Math.max(SIGMAS * Math.sqrt(finder.variance), SHARE * finder.height, 1e-9);
@@ -51,7 +67,10 @@ export function findPulses(
       finder.seen += 1;
       const gain = Math.max(1 / finder.seen, slow);
       finder.base += gain * value;
-      finder.variance += gain * (value * value - finder.variance);
+      if (finder.seen === 1) finder.near = x[i]!;
+      const beside = x[i]! - finder.near;
+      finder.near += Math.max(1 / finder.seen, quick) * beside;
+      finder.variance += gain * (beside * beside - finder.variance);
     }
     if (finder.seen >= learn) follow(finder, value, i, threshold, tell);
     finder.last = value;

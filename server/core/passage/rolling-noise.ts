@@ -99,14 +99,14 @@ export function noiseSpan(noise: RollingNoise): NoiseSpan | null {
   if (above.length < 6) return null;
   const level = quantile(above, LEVEL_QUANTILE);
   const deck = Math.max(DECK_SHARE * level, RULE.activeRatio / 2);
-  const [first, last] = mainStretch(smooth, deck);
+  const [first, last] = mainStretch(smooth, deck, level);
   if (last <= first) return null;
   const on = stepNear(noise.total, first);
   const off = noise.total.length - stepNear(noise.total.toReversed(), noise.total.length - 1 - last);
   return {
     onMicros: noise.startMicros + on * FRAME_MICROS,
     offMicros: noise.startMicros + Math.max(off, on + 1) * FRAME_MICROS,
-    sustainedSeconds: sustained(smoothed(noise.total, 3)),
+    sustainedSeconds: sustained(smoothed(noise.total, 3).subarray(first, last + 1)),
     ratio: level,
   };
 }
@@ -114,17 +114,20 @@ export function noiseSpan(noise: RollingNoise): NoiseSpan | null {
 /** Quiet that parts the passage from a neighbour's approach in the same window, frames. */
 const APART = 100;
 
-/** First and last frame above a level, of the stretch (holding together over quiet of less than a second) with most power. */
-function mainStretch(smooth: Float64Array, level: number): [first: number, last: number] {
+/**
+ * First and last frame above a level, of the stretch (holding together over quiet of less than a second) with most
+ * power; power above `most` counts as `most`, since a blow in the free part is loud but short.
+ */
+function mainStretch(smooth: Float64Array, level: number, most: number): [first: number, last: number] {
   let best: [number, number] = [0, 0];
-  let most = 0;
+  let greatest = 0;
   let first = -1;
   let last = -1;
   let power = 0;
   for (let i = 0; i <= smooth.length; i++) {
     const ended = first >= 0 && (i === smooth.length || i - last > APART);
-    if (ended && power > most) {
-      most = power;
+    if (ended && power > greatest) {
+      greatest = power;
       best = [first, last];
     }
     if (ended) first = -1;
@@ -134,7 +137,7 @@ function mainStretch(smooth: Float64Array, level: number): [first: number, last:
       power = 0;
     }
     last = i;
-    power += smooth[i]!;
+    power += Math.min(smooth[i]!, most);
   }
   return best;
 }

@@ -37,6 +37,7 @@ export function countAxle(count: AxleCount | undefined, micros: Micros): AxleCou
  * @param proven sensors that are known to speak
  * @param speedMs magnitude of the live speed at the head of the train, m/s
  * @param activeMicros when the train was last heard
+ * @returns time of quiet; below zero where the axles have told so while something is still heard
  */
 export function standingSeconds(
   track: AxleTrack,
@@ -50,32 +51,47 @@ export function standingSeconds(
   const axles = track.sensors.map((sensor) => counts[sensor]?.axles ?? 0);
   const surplus = Math.max(...axles) - Math.min(...axles);
   if (surplus > track.room) return RULE.quietSeconds;
-  const overheard = Math.min(...axles) > 0 && surplus <= Math.max(1, Math.floor(Math.max(...axles) / 16));
-  if (overheard) {
+  const silent = track.sensors.filter((sensor) => counts[sensor] === undefined);
+  if (silent.length === 0) {
     const one = counts[track.sensors[0]!]!;
     const other = counts[track.sensors.at(-1)!]!;
-    return surplus === 0 ? untilNextBogie(track, one, other, speedMs) : untilLastAxle(track, one, other, speedMs);
+    if (surplus === 0) return untilNextBogie(track, one, other, speedMs, activeMicros);
+    if (surplus <= Math.max(1, Math.floor(Math.max(...axles) / 16))) return untilLastAxle(track, one, other, speedMs);
+    if (rolledOff(track, one, other)) return RULE.quietSeconds;
   }
-  const silent = track.sensors.filter((sensor) => counts[sensor] === undefined);
-  return untilHidden(
-    track,
-    heard,
-    silent.every((sensor) => proven[sensor] === true),
-    activeMicros,
-  );
+  const believed = silent.every((sensor) => proven[sensor] === true);
+  return untilHidden(track, heard, believed, activeMicros);
 }
 
 /**
  * On a short bridge no axle may be on it between two bogies of one coach: the next may yet come, at the speed of the
  * last axle, or later from a train that stands astride of the bridge.
  */
-function untilNextBogie(track: AxleTrack, one: AxleCount, other: AxleCount, speedMs: number | null): number {
-  const wayM = RULE.bogieDistanceM - track.lengthM;
-  const { lastMs, braking } = tail(track, one, other, speedMs);
+function untilNextBogie(
+  track: AxleTrack,
+  one: AxleCount,
+  other: AxleCount,
+  speedMs: number | null,
+  activeMicros: Micros,
+): number {
+  const { lastMs, braking, even } = tail(track, one, other, speedMs);
   if (lastMs === null) return RULE.quietSeconds;
-  if (wayM <= 0) return RULE.emptySeconds;
+  // Equal numbers that do not belong together hide an axle: no train gains speed like that.
+  if (!even) {
+    const leastMs = leastSpeed(one.newest.at(-1)! > other.newest.at(-1)! ? one : other) ?? lastMs;
+    if (stopsWithin(leastMs, track.lengthM)) return RULE.standUnprovenSeconds;
+    return Math.max(RULE.quietSeconds, track.lengthM / leastMs);
+  }
+  const wayM = Math.max(0, RULE.bogieDistanceM - track.lengthM);
   if (braking && stopsWithin(lastMs, wayM)) return RULE.standUnprovenSeconds;
-  return Math.max(RULE.emptySeconds, rollingSeconds(lastMs, wayM, braking) + 0.3);
+  // What is heard now may be the approach of the next train: the axles alone tell that this one has left.
+  const lastPulse = Math.max(one.newest.at(-1)!, other.newest.at(-1)!);
+  return sincePulse(Math.max(RULE.emptySeconds, rollingSeconds(lastMs, wayM, braking) + 0.3), lastPulse, activeMicros);
+}
+
+/** Time after a pulse, told as time after the train was last heard. */
+function sincePulse(seconds: number, pulseMicros: Micros, activeMicros: Micros): number {
+  return seconds - (activeMicros - pulseMicros) / MICROS_PER_SECOND;
 }
 
 /** An axle or so is on the bridge, or its pulse was overheard: it has the length of the bridge to roll off or stop. */
@@ -94,26 +110,55 @@ function untilHidden(track: AxleTrack, heard: readonly AxleCount[], believed: bo
   if (leastMs === null || stopsWithin(leastMs, track.lengthM)) {
     return believed ? RULE.standSeconds : RULE.standUnprovenSeconds;
   }
-  const sinceHeard = (activeMicros - busiest.newest.at(-1)!) / MICROS_PER_SECOND;
-  return Math.max(RULE.quietSeconds, track.lengthM / leastMs - sinceHeard);
+  return Math.max(RULE.quietSeconds, sincePulse(track.lengthM / leastMs, busiest.newest.at(-1)!, activeMicros));
 }
 
-/**
- * Speed of the last axle that has passed both sensors, null if unknown; and whether it is slower than those before it.
- * An axle that stood between the sensors says little; then the rhythm of the last bogies does.
- */
-function tail(
-  track: AxleTrack,
-  one: AxleCount,
-  other: AxleCount,
-  speedMs: number | null,
-): { lastMs: number | null; braking: boolean } {
+interface Tail {
+  /** Least speed of the last axles that have passed both sensors, m/s; null if unknown. */
+  lastMs: number | null;
+  /** Whether that is slower than the axles before them. */
+  braking: boolean;
+  /** Whether none of them is much faster than the one before it. */
+  even: boolean;
+}
+
+const TAIL_AXLES = 3;
+/** From axle to axle no train gains so much speed over a whole bridge. */
+const GAIN_MOST = 1.5;
+
+/** An axle that stood between the sensors says little of the speed; then the rhythm of the last bogies does. */
+function tail(track: AxleTrack, one: AxleCount, other: AxleCount, speedMs: number | null): Tail {
   const speeds = axleSpeeds(track, one, other);
-  const known = speeds.at(-1) ?? speedMs;
-  if (known === null || known === 0) return { lastMs: null, braking: false };
+  const last = speeds.slice(-TAIL_AXLES);
+  const known = last.length > 0 ? Math.min(...last) : speedMs;
+  if (known === null || known === 0) return { lastMs: null, braking: false, even: true };
   const newer = one.newest.at(-1)! > other.newest.at(-1)! ? one : other;
   const lastMs = Math.max(known, leastSpeed(newer) ?? 0);
-  return { lastMs, braking: lastMs < RULE.brakingShare * Math.max(speedMs ?? 0, ...speeds) };
+  const braking = lastMs < RULE.brakingShare * Math.max(speedMs ?? 0, ...speeds);
+  const even = last.every((speed, i) => i === 0 || speed < GAIN_MOST * last[i - 1]!);
+  return { lastMs, braking, even };
+}
+
+/** How much the delays of the last axles may differ, as a share of the time between two of them. */
+const DELAYS_ALIKE = 0.3;
+/** The longest wheelbase over the shortest, with a margin. */
+const WHEELBASES = 2.2;
+
+/**
+ * Whether the last four pulses of one sensor are those of the other, one way over the bridge later: then the train has
+ * left, whatever was miscounted before. Their speed must fit the rhythm of the bogies, which no other axles would do.
+ */
+function rolledOff(track: AxleTrack, one: AxleCount, other: AxleCount): boolean {
+  const [first, then] = one.newest.at(-1)! < other.newest.at(-1)! ? [one, other] : [other, one];
+  const [came, left] = [first.newest.slice(-RHYTHM_PULSES), then.newest.slice(-RHYTHM_PULSES)];
+  const leastMs = leastSpeed(first);
+  if (leastMs === null || came.length !== left.length) return false;
+  const delays = came.map((micros, i) => left[i]! - micros);
+  const [shortest, longest] = [Math.min(...delays), Math.max(...delays)];
+  const between = Math.min(...came.slice(1).map((micros, i) => micros - came[i]!));
+  if (shortest <= 0 || longest - shortest > DELAYS_ALIKE * between) return false;
+  const speed = (track.lengthM * MICROS_PER_SECOND) / longest;
+  return speed > 0.9 * leastMs && speed < WHEELBASES * leastMs;
 }
 
 /** Speeds of the axles that have passed both outermost sensors, by their number in the train, oldest first, m/s. */
