@@ -46,6 +46,12 @@ describe(`${PASSAGES} simulated passages`, () => {
     expect(right).toBeGreaterThanOrEqual(PHASE_SHARE);
   });
 
+  it('have a speed within two of its stated standard errors for 90 % where accelerometers alone tell it', () => {
+    const sigmas = verdicts.filter(({ gauges }) => !gauges).flatMap(({ speedSigmas }) => speedSigmas);
+    expect(sigmas.length).toBeGreaterThan(PASSAGES / 20);
+    expect(sigmas.filter((sigma) => Math.abs(sigma) <= 2).length / sigmas.length).toBeGreaterThanOrEqual(0.9);
+  });
+
   it('have their axles counted exactly where axle sensors saw a single train', () => {
     const errors = verdicts.flatMap(({ axleErrors }) => axleErrors);
     expect(errors.filter((error) => error === 0).length / errors.length).toBeGreaterThanOrEqual(0.99);

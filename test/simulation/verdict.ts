@@ -17,8 +17,9 @@ export interface SceneVerdict {
   /** Of each found passage, recorded less true, s. */
   onErrors: number[];
   offErrors: number[];
-  /** Of passages of one train at nearly constant speed: relative error of speed; difference of axle count. */
+  /** Of passages of one train that did not stop: relative error of speed, the same in its stated standard errors; difference of axle count. */
   speedErrors: number[];
+  speedSigmas: number[];
   axleErrors: number[];
 }
 
@@ -40,6 +41,7 @@ export function judgeScene(index: number, seed: number): SceneVerdict {
     onErrors: [],
     offErrors: [],
     speedErrors: [],
+    speedSigmas: [],
     axleErrors: [],
   };
   const free = new Set(found);
@@ -70,6 +72,10 @@ function compare(
   verdict.offErrors.push((passage.phases.offMicros - occupation.offMicros) / 1e6);
   const [train, other] = occupation.trains.map((index) => truths[index]);
   if (train === undefined || other !== undefined || train.stopped) return;
-  if (passage.speedMs.value !== null) verdict.speedErrors.push(passage.speedMs.value / train.speedMs - 1);
+  const { speedMs } = passage;
+  if (speedMs.value !== null) {
+    verdict.speedErrors.push(speedMs.value / train.speedMs - 1);
+    verdict.speedSigmas.push((speedMs.value - train.speedMs) / (speedMs.standardError ?? Infinity));
+  }
   if (passage.axleCount.value !== null) verdict.axleErrors.push(passage.axleCount.value - train.train.axles.length);
 }
