@@ -24,7 +24,7 @@ for (const [name, measure] of Object.entries(SECTIONS)) {
   for (const { what, value, unit, aim } of await measure()) {
     const number = value.toLocaleString('en', { maximumSignificantDigits: 4 });
     console.log(
-      `  ${what.padEnd(66)} ${number.padStart(12)} ${unit.padEnd(10)} ${aim === undefined ? '' : `aim ${aim}`}`,
+      `  ${what.padEnd(78)} ${number.padStart(12)} ${unit.padEnd(10)} ${aim === undefined ? '' : `aim ${aim}`}`,
     );
   }
 }

@@ -3,13 +3,14 @@ import { lowpass } from '../signal/butterworth.ts';
 import { factorise, solveInto } from '../signal/positive-definite.ts';
 import { median } from '../signal/robust.ts';
 import { zeroPhase } from '../signal/zero-phase.ts';
-import { indexAt, type RecordChannel } from './record.ts';
+import { indexAt, rangeOf, type RecordChannel } from './record.ts';
 
 /**
- * Where a bridge begins or ceases to be driven, span by span: the last axle drives the last span alone. A deck that nobody drives moves by its own law: each sample follows
- * from those beside it by one linear recurrence, the same for all channels (the modes' poles). The recurrence is fitted
- * where the deck is free and carried towards the train; from the first sample that does not obey it on, an axle is on
- * the bridge. An axle of a tenth of the deck's mass, 50 ms from a bearing, already shows as tenths of m/s².
+ * Where a bridge begins or ceases to be driven, span by span: the last axle drives the last span alone. A deck that
+ * nobody drives moves by its own law: each sample follows from those beside it by one linear recurrence, the same for
+ * all channels (the modes' poles). The recurrence is fitted where the deck is free and carried towards the train; from
+ * the first sample that does not obey it on, an axle is on the bridge. An axle of a tenth of the deck's mass, 50 ms from
+ * a bearing, already shows as tenths of m/s².
  */
 export interface FreeStretch {
   /** Where the deck is known to be free, next to the edge. */
@@ -20,6 +21,8 @@ export interface FreeStretch {
 /** Band and sample rate of the motion that is looked at: above the first modes, below wheel-rail noise. */
 const BAND_HZ = 20;
 const RATE_HZ = 100;
+/** Samples beside the stretch in which the filter settles. */
+const SETTLE_MICROS = MICROS_PER_SECOND;
 /** Order of the recurrence: two for each mode in the band and some for noise. */
 const ORDER = 16;
 /** The free stretch must hold this much, s. */
@@ -68,16 +71,19 @@ function sampleTime(index: number): Micros {
 function tracesOf(deck: readonly RecordChannel[], fromMicros: Micros, toMicros: Micros): Float64Array[] | null {
   const length = Math.floor(((toMicros - fromMicros) * RATE_HZ) / MICROS_PER_SECOND);
   const fast = deck.filter(({ rateHz }) => rateHz >= 2 * RATE_HZ);
-  if (fast.length === 0 || length < (FREE_SECONDS_LEAST * RATE_HZ) / 2) return null;
-  return fast.map((channel) => {
-    const smooth = zeroPhase(lowpass(4, BAND_HZ, channel.rateHz), channel.x);
+  if (length < (FREE_SECONDS_LEAST * RATE_HZ) / 2) return null;
+  const traces = fast.flatMap((channel) => {
+    const [from, to] = rangeOf(channel, fromMicros - SETTLE_MICROS, toMicros + SETTLE_MICROS);
+    if (to - from < 2) return [];
+    const smooth = zeroPhase(lowpass(4, BAND_HZ, channel.rateHz), channel.x.subarray(from, to));
     return Float64Array.from({ length }, (_, i) => {
-      const place = Math.max(0, indexAt(channel, fromMicros + (i * MICROS_PER_SECOND) / RATE_HZ));
+      const place = Math.max(0, indexAt(channel, fromMicros + (i * MICROS_PER_SECOND) / RATE_HZ) - from);
       const whole = Math.min(Math.floor(place), smooth.length - 2);
       const part = Math.min(1, place - whole);
       return (1 - part) * smooth[whole]! + part * smooth[whole + 1]!;
     });
   });
+  return traces.length === 0 ? null : traces;
 }
 
 /**
@@ -126,22 +132,40 @@ function robustMeanSquare(x: Float64Array): number {
 function recurrence(x: readonly Float64Array[], fitted: number): Float64Array | null {
   const normal = new Float64Array(ORDER * ORDER);
   const right = new Float64Array(ORDER);
-  for (const trace of x) {
-    const scale = 1 / (meanSquare(trace, 0, fitted) + 1e-12);
-    for (let i = ORDER; i < fitted; i++) {
-      for (let a = 0; a < ORDER; a++) {
-        const xa = trace[i - 1 - a]! * scale;
-        right[a]! += xa * trace[i]!;
-        for (let b = 0; b <= a; b++) normal[a * ORDER + b]! += xa * trace[i - 1 - b]!;
-      }
-    }
-  }
+  for (const trace of x) addNormal(normal, right, trace, fitted, 1 / (meanSquare(trace, 0, fitted) + 1e-12));
   // A faint ridge keeps a noiseless record, whose recurrence is shorter, solvable.
   for (let a = 0; a < ORDER; a++) normal[a * ORDER + a]! *= 1 + 1e-6;
   const factored = factorise(normal, ORDER);
   if (factored === null) return null;
   solveInto(factored, right);
   return right;
+}
+
+/**
+ * Adds the products of a trace with its own past over [ORDER, fitted). Along a diagonal the sum moves by one sample at
+ * each step, so that only the first column is summed in full (Makhoul 1975, the covariance method).
+ */
+function addNormal(
+  normal: Float64Array,
+  right: Float64Array,
+  trace: Float64Array,
+  fitted: number,
+  scale: number,
+): void {
+  const lag = (a: number, b: number, i: number): number => trace[i - 1 - a]! * trace[i - 1 - b]!;
+  for (let first = 0; first < ORDER; first++) {
+    let toNow = 0;
+    let sum = 0;
+    for (let i = ORDER; i < fitted; i++) {
+      toNow += trace[i]! * trace[i - 1 - first]!;
+      sum += trace[i - 1]! * trace[i - 1 - first]!;
+    }
+    right[first]! += scale * toNow;
+    for (let a = first, b = 0; a < ORDER; a++, b++) {
+      if (b > 0) sum += lag(a, b, ORDER) - lag(a, b, fitted);
+      normal[a * ORDER + b]! += scale * sum;
+    }
+  }
 }
 
 function residualOf(trace: Float64Array, weights: Float64Array): Float64Array {

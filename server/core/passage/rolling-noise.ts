@@ -179,10 +179,13 @@ function stepNear(total: Float64Array, crossing: number): number {
 
 /** A spike of one cable fills a frame or two; a running median of five leaves steps where they are and spikes out. */
 function medianOfFive(x: Float64Array): Float64Array {
-  const five = new Float64Array(5);
-  return x.map((_, i) => {
-    for (let k = 0; k < 5; k++) five[k] = x[Math.min(x.length - 1, Math.max(0, i + k - 2))]!;
-    return five.sort()[2]!;
+  const { min, max } = Math;
+  const at = (i: number): number => x[max(0, min(x.length - 1, i))]!;
+  return x.map((c, i) => {
+    const [a, b, d, e] = [at(i - 2), at(i - 1), at(i + 1), at(i + 2)];
+    const low = max(min(a, b), min(d, e));
+    const high = min(max(a, b), max(d, e));
+    return max(min(low, high), min(max(low, high), c));
   });
 }
 
