@@ -86,6 +86,9 @@ type FoundPhases = Omit<Phases, 'freeEndMicros'>;
 const SUSTAINED_SECONDS = 0.3;
 /** The same where one axle sensor is there but says nothing; two that say nothing are believed. */
 const SUSTAINED_UNHEARD_SECONDS = 0.8;
+/** Noise that falls by so much within a second rings off after a blow; no train so short grows that quiet. */
+const BLOW_SECONDS = 1;
+const BLOW_FALL = 3;
 
 function findPhases(
   bridge: BridgeDefinition,
@@ -101,7 +104,8 @@ function findPhases(
   const heard = axles.firstPulse !== null;
   const least = listening === 0 || heard ? SUSTAINED_SECONDS : SUSTAINED_UNHEARD_SECONDS;
   const denied = listening >= 2 && !heard;
-  if (span !== null && !denied && span.sustainedSeconds >= least) {
+  const blow = span !== null && !heard && span.sustainedSeconds < BLOW_SECONDS && span.fall > BLOW_FALL;
+  if (span !== null && !denied && !blow && span.sustainedSeconds >= least) {
     const notes = listening > 0 ? ['the axle sensors did not see the whole train'] : [];
     return { ...sharpened(bridge, frame, span, axles, record), foundBy: 'wheel-rail noise', quality: 'usable', notes };
   }

@@ -79,8 +79,10 @@ function framePower(
 export interface NoiseSpan {
   onMicros: Micros;
   offMicros: Micros;
-  /** Longest time without a break in which noise was near its level, s: a hammer rings off at once, a train rolls. */
+  /** Longest time without a break in which noise was near its level, s. */
   sustainedSeconds: number;
+  /** By how much noise fell from the first third of that time to the last, power ratio: a blow rings off, a train rolls. */
+  fall: number;
   /** Level over the quiet floor, power ratio. */
   ratio: number;
 }
@@ -106,7 +108,7 @@ export function noiseSpan(noise: RollingNoise): NoiseSpan | null {
   return {
     onMicros: noise.startMicros + on * FRAME_MICROS,
     offMicros: noise.startMicros + Math.max(off, on + 1) * FRAME_MICROS,
-    sustainedSeconds: sustained(smoothed(noise.total, 3).subarray(first, last + 1)),
+    ...sustained(smoothed(noise.total, 3).subarray(first, last + 1)),
     ratio: level,
   };
 }
@@ -142,18 +144,24 @@ function mainStretch(smooth: Float64Array, level: number, most: number): [first:
   return best;
 }
 
-/** Longest time without a break near the level of the loud frames, s; one blow in the middle of a train is not that level. */
-function sustained(smooth: Float64Array): number {
+/** Longest time without a break near the level of the loud frames; one blow in the middle of a train is not that level. */
+function sustained(smooth: Float64Array): Pick<NoiseSpan, 'sustainedSeconds' | 'fall'> {
   const loud = smooth.filter((value) => value > RULE.activeRatio);
   const level = loud.length === 0 ? 0 : quantile(loud, SUSTAIN_QUANTILE);
   const least = Math.max(SUSTAIN_SHARE * level, RULE.activeRatio / 2);
   let longest = 0;
+  let end = 0;
   let row = 0;
-  for (const value of smooth) {
+  smooth.forEach((value, i) => {
     row = value > least ? row + 1 : 0;
-    longest = Math.max(longest, row);
-  }
-  return (longest * FRAME_MICROS) / MICROS_PER_SECOND;
+    if (row <= longest) return;
+    longest = row;
+    end = i + 1;
+  });
+  const third = Math.floor(longest / 3);
+  const start = end - longest;
+  const fall = third === 0 ? 1 : mean(smooth, start, start + third) / mean(smooth, end - third, end);
+  return { sustainedSeconds: (longest * FRAME_MICROS) / MICROS_PER_SECOND, fall };
 }
 
 /** Frames before and after a first crossing in which the step itself is looked for. */
@@ -167,7 +175,7 @@ const STEP_AFTER = 15;
 function stepNear(total: Float64Array, crossing: number): number {
   const from = Math.max(0, crossing - STEP_BEFORE);
   const to = Math.min(total.length, crossing + STEP_AFTER);
-  const y = Array.from(total.subarray(from, to), (value) => Math.log(value + 0.1));
+  const y = Float64Array.from(total.subarray(from, to), (value) => Math.log(value + 0.1));
   const n = y.length;
   let best = { at: crossing, score: Infinity };
   for (let k = 5; k <= n - 5; k++) {
@@ -189,12 +197,16 @@ function medianOfFive(x: Float64Array): Float64Array {
   });
 }
 
-function variance(y: readonly number[], from: number, to: number): number {
-  let mean = 0;
-  for (let i = from; i < to; i++) mean += y[i]!;
-  mean /= to - from;
+function mean(y: Float64Array, from: number, to: number): number {
+  let sum = 0;
+  for (let i = from; i < to; i++) sum += y[i]!;
+  return sum / (to - from);
+}
+
+function variance(y: Float64Array, from: number, to: number): number {
+  const middle = mean(y, from, to);
   let squares = 0;
-  for (let i = from; i < to; i++) squares += (y[i]! - mean) ** 2;
+  for (let i = from; i < to; i++) squares += (y[i]! - middle) ** 2;
   return squares / (to - from) + 1e-6;
 }
 

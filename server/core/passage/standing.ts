@@ -110,7 +110,8 @@ function untilHidden(track: AxleTrack, heard: readonly AxleCount[], believed: bo
   if (leastMs === null || stopsWithin(leastMs, track.lengthM)) {
     return believed ? RULE.standSeconds : RULE.standUnprovenSeconds;
   }
-  return Math.max(RULE.quietSeconds, sincePulse(track.lengthM / leastMs, busiest.newest.at(-1)!, activeMicros));
+  const rolled = Math.max(track.lengthM, RULE.bogieDistanceM) / leastMs + 0.3;
+  return Math.max(RULE.emptySeconds, sincePulse(rolled, busiest.newest.at(-1)!, activeMicros));
 }
 
 interface Tail {
