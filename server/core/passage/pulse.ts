@@ -31,6 +31,8 @@ const NEAR_SECONDS = 0.5;
 /** A crest stands above the base by this many standard deviations, and by this share of the usual height. */
 const SIGMAS = 8;
 const SHARE = 0.15;
+/** It rises out of the valley before it and falls behind by this share of that: a slowly coming load is no pulse for its noise. */
+const PROMINENCE = 0.75;
 
 export function createPulseFinder(): PulseFinder {
   return {
@@ -86,13 +88,13 @@ function follow(
 ): void {
   if (finder.crest === 0) {
     finder.valley = Math.min(finder.valley, value);
-    if (value > threshold && value - Math.max(finder.valley, 0) > threshold / 2) raise(finder, value);
+    if (value > threshold && value - Math.max(finder.valley, 0) > PROMINENCE * threshold) raise(finder, value);
   } else if (value > finder.crest) {
     raise(finder, value);
   } else {
     finder.age += 1;
     if (finder.age === 1) finder.after = value;
-    if (value < finder.crest / 2) {
+    if (value < finder.crest / 2 && finder.crest - value > PROMINENCE * threshold) {
       const bend = finder.before - 2 * finder.crest + finder.after;
       const shift = bend < 0 ? (0.5 * (finder.before - finder.after)) / bend : 0;
       tell(i - finder.age + Math.max(-0.5, Math.min(0.5, shift)), finder.crest);
