@@ -15,8 +15,10 @@ export async function check(files: readonly string[], console: Console): Promise
       continue;
     }
     const { id, name, spans, sensors, limits } = reading.value.definition;
-    const counts = [`${spans.length} spans`, `${sensors.length} sensors`, `${limits.length} limits`].join(', ');
-    await console.out(`${file}: good; ${id}, ${name}: ${counts}\n`);
+    const counts = [counted(spans.length, 'span'), counted(sensors.length, 'sensor'), counted(limits.length, 'limit')];
+    await console.out(`${file}: good; ${id}, ${name}: ${counts.join(', ')}\n`);
   }
   return exit;
 }
+
+const counted = (number: number, one: string): string => `${number} ${one}${number === 1 ? '' : 's'}`;

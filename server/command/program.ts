@@ -191,6 +191,7 @@ function addSimulate(program: Command, console: Console, set: SetExit): void {
         .choices(['csv', 'senml'])
         .default('csv'),
     )
+    .option('--logger <id>', 'of SenML: the one logger whose sensors are written, where the bridge has several')
     .addOption(new Option('-t, --train <type>', 'what crosses').choices(TRAIN_CHOICES).default('mixed'))
     .option('-n, --count <number>', 'how many', whole, 3)
     .option('--speed <m/s>', 'of all of them; by their type where absent', speed)
@@ -209,8 +210,8 @@ function addSimulate(program: Command, console: Console, set: SetExit): void {
     .action(async (options: SimulateOptions, command: Command) => {
       if (options.fast && options.realTime) command.error('error: --fast and --real-time exclude each other');
       const { simulate } = await import('./simulate.ts');
-      const { speed: speedMs = null, start: startMicros = null, truth = null } = options;
-      set(await simulate({ ...options, speedMs, startMicros, truth }, console));
+      const { speed: speedMs = null, start: startMicros = null, truth = null, logger = null } = options;
+      set(await simulate({ ...options, speedMs, startMicros, truth, logger }, console));
     });
 }
 
@@ -227,6 +228,7 @@ interface SimulateOptions {
   bridge: string;
   to: string;
   as: 'csv' | 'senml';
+  logger?: string;
   train: (typeof TRAIN_CHOICES)[number];
   count: number;
   speed?: number;

@@ -2,7 +2,8 @@ import { open, writeFile } from 'node:fs/promises';
 import { setTimeout as sleep } from 'node:timers/promises';
 import type { SampleBlock } from '#core/contract/block.ts';
 import { bridgeLengthM, type BridgeDefinition } from '#core/contract/bridge.ts';
-import { SpanbeatError } from '#core/contract/errors.ts';
+import { csvHeader, csvRows } from '#core/contract/csv-text.ts';
+import { SpanbeatError, type Complaint } from '#core/contract/errors.ts';
 import { MICROS_PER_SECOND, sampleMicros, type Micros } from '#core/contract/time.ts';
 import { createFaultyLogger, drawFaults, type FaultyLogger } from '../../simulator/faults.ts';
 import { createLoggers } from '../../simulator/logger.ts';
@@ -15,7 +16,6 @@ import { createBridgeSimulation } from '../../simulator/simulation.ts';
 import { createTrain, TRAIN_TYPES, type TrainType } from '../../simulator/train.ts';
 import type { PassageTruth } from '../../simulator/truth.ts';
 import { readDefinition } from '../definition.ts';
-import { csvHeader, csvRows } from '#core/contract/csv-text.ts';
 import { definitionFile } from './definition-file.ts';
 import { complain, complainOf, EXIT, type Console } from './outcome.ts';
 
@@ -33,6 +33,8 @@ export interface SimulateSettings {
   to: string;
   /** What goes into a file: CSV, or a SenML pack a line, each line a message that a logger would send. */
   as: 'csv' | 'senml';
+  /** Of SenML: the only logger that is written; the topic that the packs go to names one. Null: the bridge has no other. */
+  logger: string | null;
   /** First level of the topics. */
   root: string;
   username?: string | undefined;
@@ -73,16 +75,31 @@ export async function simulate(settings: SimulateSettings, console: Console): Pr
   const reading = await readDefinition(definitionFile(settings.bridge));
   if (!reading.ok) return complain(reading.complaints, console);
   const { definition } = reading.value;
+  const unclear = loggerComplaint(definition, settings);
+  if (unclear !== null) return complain([unclear], console);
   try {
-    const sink = isMqtt(settings.to)
-      ? await mqttSink(definition, settings, console)
-      : await (settings.as === 'senml' ? senmlSink : csvSink)(definition, settings.to, console);
+    const sink = await openSink(definition, settings, console);
     const truths = await run(definition, settings, sink);
     await writeTruth(definition, settings, truths, console);
     return EXIT.good;
   } catch (error) {
     return complainOf(error, console);
   }
+}
+
+/** SenML packs do not say of which logger they are. */
+function loggerComplaint({ loggers }: BridgeDefinition, { as, to, logger }: SimulateSettings): Complaint | null {
+  if (as !== 'senml' || isMqtt(to)) return null;
+  const known = loggers.map(({ id }) => id);
+  if (logger === null ? known.length === 1 : known.includes(logger)) return null;
+  return { code: 'USAGE', where: '--logger', detail: `${logger ?? 'none'} given, the bridge has ${known.join(', ')}` };
+}
+
+function openSink(definition: BridgeDefinition, settings: SimulateSettings, console: Console): Promise<Sink> {
+  const { to, as, logger } = settings;
+  if (isMqtt(to)) return mqttSink(definition, settings, console);
+  if (as === 'csv') return csvSink(definition, to, console);
+  return senmlSink(definition, logger ?? definition.loggers[0]!.id, to, console);
 }
 
 const isMqtt = (to: string): boolean => /^(mqtts?|tcp|ssl|tls|wss?):\/\//.test(to);
@@ -202,12 +219,12 @@ async function csvSink(definition: BridgeDefinition, file: string, console: Cons
 }
 
 /** A pack a block (RFC 8428, JSON), in the sensors' own units and names; the logger is told by the topic it is sent to. */
-async function senmlSink(definition: BridgeDefinition, file: string, console: Console): Promise<Sink> {
+async function senmlSink(definition: BridgeDefinition, logger: string, file: string, console: Console): Promise<Sink> {
   const units = new Map(definition.sensors.map(({ id, unit }) => [id, unit]));
   const output = await openOutput(file, console);
   return {
     async take(blocks) {
-      for (const { startMicros, rateHz, channels } of blocks) {
+      for (const { startMicros, rateHz, channels } of blocks.filter((block) => block.logger === logger)) {
         const readings = channels.flatMap(({ sensor, samples }) =>
           Array.from(samples, (value, index) => ({
             name: sensor,

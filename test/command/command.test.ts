@@ -195,7 +195,7 @@ describe('check', () => {
   it('is good about sound definitions and tells what they hold', async () => {
     const { exit, out, err } = await run('check', definitionFile('ottermere'), definitionFile('sallow'));
     expect({ exit, err }).toEqual({ exit: 0, err: '' });
-    expect(out).toContain('sallow, Sallow Water: 2 spans, 11 sensors, 1 limits');
+    expect(out).toContain('sallow, Sallow Water: 2 spans, 11 sensors, 1 limit');
   });
 
   it('tells all that is wrong in all files, one line each, and gives the gravest exit', async () => {
@@ -274,6 +274,23 @@ describe('simulate', () => {
       // within 0.1 s of the truth
       expect(Math.abs(phases.onMicros - truth.passages[index]!.onMicros)).toBeLessThan(100_000);
     }
+  });
+
+  it('writes SenML packs of one logger, and asks which where there are several', async () => {
+    const one = await readFile(definitionFile('fennick'), 'utf8');
+    const two = one
+      .replace('  - { id: FE-1, silentAfterS: 10 }', '  - { id: FE-1, silentAfterS: 10 }\n  - { id: FE-2 }')
+      .replace(/logger: FE-1(, mount: deck.*A2|)/, 'logger: FE-2$1');
+    await writeFile(path('two.yaml'), two);
+    const words = ['-b', path('two.yaml'), '-t', 'light engine', '-n', '1', '--as', 'senml', '--to', path('two.json')];
+    const unclear = await run('simulate', ...words);
+    expect(unclear.exit).toBe(2);
+    expect(unclear.err).toContain('FE-1, FE-2');
+    expect((await run('simulate', ...words, '--logger', 'FE-3')).exit).toBe(2);
+    expect((await run('simulate', ...words, '--logger', 'FE-2')).exit).toBe(0);
+    const packs = (await readFile(path('two.json'), 'utf8')).trim().split('\n');
+    const names = packs.flatMap((pack) => (JSON.parse(pack) as { n: string }[]).map(({ n }) => n));
+    expect([...new Set(names)]).toEqual(['A1']);
   });
 
   it('lets loggers have faults, of which analyse makes the same passages but for what was lost', async () => {
