@@ -31,7 +31,8 @@ const NEW_TRAIN_MICROS = 8_000_000;
 
 /**
  * The train now on the bridge, from its axle pulses: the k-th pulse of each sensor is the k-th axle. Between pulses an
- * axle runs at the estimated speed.
+ * axle runs at the estimated speed; where one that should have reached the last sensor has not, the train has slowed or
+ * stopped, and all of it is held back.
  */
 export class LiveTrain {
   passage: string | null = null;
@@ -66,11 +67,27 @@ export class LiveTrain {
   /** Where the axles are at a moment, m from the first bearing. Without a speed, only those over their sensor. */
   axlesAt(micros: Micros): DrawnAxle[] {
     const drawn: DrawnAxle[] = [];
+    const overdue = this.#overdueMicros(micros);
     for (let index = 0; index < this.#axles.length; index++) {
-      const alongM = this.#placeAt(this.#axles[index]!, micros);
+      const track = this.#axles[index]!;
+      const newest = track.findLast((pulse) => pulse.micros <= micros)?.micros ?? micros;
+      const alongM = this.#placeAt(track, Math.max(newest, micros - overdue));
       if (alongM !== null) drawn.push({ index, alongM });
     }
     return drawn;
+  }
+
+  /** How long the first axle that has not reached the last sensor should have been there, beyond what messages may take. */
+  #overdueMicros(micros: Micros): number {
+    if (this.speedMs === null || this.#counts.size < 2) return 0;
+    const places = this.#axles.flatMap((track) => track.map(({ alongM }) => alongM));
+    const exitM = this.speedMs > 0 ? Math.max(...places) : Math.min(...places);
+    const first = this.#axles.find((track) => track.every(({ alongM, micros: at }) => alongM !== exitM || at > micros));
+    if (first === undefined) return 0;
+    const anchor = first.findLast((pulse) => pulse.micros <= micros);
+    if (anchor === undefined) return 0;
+    const due = anchor.micros + ((exitM - anchor.alongM) / this.speedMs) * 1e6;
+    return Math.max(0, micros - due - LATE_MICROS);
   }
 
   #placeAt(track: AxleTrack, micros: Micros): number | null {
@@ -110,5 +127,7 @@ export class LiveTrain {
   }
 }
 
+/** A pulse may come so late by message and by a train that slows a little. */
+const LATE_MICROS = 500_000;
 /** How long an axle is drawn over its sensor while its speed is unknown. */
 const OVER_SENSOR_MICROS = 120_000;

@@ -46,6 +46,18 @@ describe('the train on the bridge', () => {
     expect(cut.axlesAt(T0 + 5e5)).toEqual(whole.axlesAt(T0 + 5e5));
   });
 
+  it('is held back where its next axle does not come to the last sensor: it has stopped', () => {
+    const train = new LiveTrain();
+    // Two axles cross, the next two have entered and are due at 16 m after 0.4 s.
+    train.take(pulses(1).filter(({ alongM, micros }) => alongM === 0 || micros < T0 + 0.6e6));
+    const due = T0 + ((19 + 16) / V) * 1e6;
+    const soon = train.axlesAt(due + 400_000).map(({ alongM }) => alongM);
+    expect(soon[2]).toBeCloseTo(16 + V * 0.4, 3);
+    const later = train.axlesAt(due + 600_000).map(({ alongM }) => alongM);
+    expect(later[2]).toBeCloseTo(16 + V * 0.5, 3);
+    expect(train.axlesAt(due + 60e6).map(({ alongM }) => alongM)).toEqual(later);
+  });
+
   it('without a speed is only drawn over the sensor that felt it', () => {
     const train = new LiveTrain();
     train.take(pulses(1).slice(0, 1));
