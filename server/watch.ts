@@ -164,7 +164,7 @@ export function createWatch(start: WatchStart): BridgeWatch {
       const heardMicros = clock();
       const known: Record<string, { newestMicros: Micros; heardMicros: Micros }> = {};
       for (const [id, newestMicros] of Object.entries(loggers)) known[id] = { newestMicros, heardMicros };
-      desk = { ...desk, loggers: { ...known, ...desk.loggers } };
+      desk = { ...desk, loggers: { ...known, ...desk.loggers }, conditions: conditionsOf(definition.id, sensors) };
     },
   };
 
@@ -176,6 +176,18 @@ export function createWatch(start: WatchStart): BridgeWatch {
       });
     }
   }
+}
+
+/** What held when the snapshot was taken; the pipeline that goes on from it will say when it ends. */
+function conditionsOf(bridge: string, sensors: readonly SensorHealth[]): DeskState['conditions'] {
+  return Object.fromEntries(
+    sensors.map(({ sensor, active }) => [
+      sensor,
+      active.map(({ code, sinceMicros, detail }) => {
+        return { bridge, sensor, code, state: 'began' as const, micros: sinceMicros, detail };
+      }),
+    ]),
+  );
 }
 
 function statusOf(
