@@ -51,17 +51,17 @@ const saying = (...health: SensorCondition[]): PipelineOutput => ({
   live: [],
 });
 
-it('a restarted watch knows which conditions of its sensors still last, and ends their alarm with the last of them', () => {
+it('a restarted watch knows which conditions of its sensors still last, and ends their alarm with the last of them', async () => {
   const before = watchOf([]);
-  before.watch.take(saying(condition('flat', 'began', 1), condition('noise high', 'began', 2)), false);
+  await before.watch.take(saying(condition('flat', 'began', 1), condition('noise high', 'began', 2)), false);
   const raised = before.told.at(-1)!;
   expect(raised).toMatchObject({ kind: 'sensor', rule: sensor, state: 'unacknowledged' });
 
   const after = watchOf([raised]);
   const sensors: SensorHealth[] = structuredClone(before.watch.remember().sensors);
   after.watch.recall({ loggers: {}, sensors });
-  after.watch.take(saying(condition('flat', 'ended', 10)), false);
+  await after.watch.take(saying(condition('flat', 'ended', 10)), false);
   expect(after.told).toEqual([]);
-  after.watch.take(saying(condition('noise high', 'ended', 11)), false);
+  await after.watch.take(saying(condition('noise high', 'ended', 11)), false);
   expect(after.told.at(-1)).toMatchObject({ id: raised.id, returnedMicros: DAWN + 11_000_000 });
 });
