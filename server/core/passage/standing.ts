@@ -97,9 +97,10 @@ function sincePulse(seconds: number, pulseMicros: Micros, activeMicros: Micros):
 /** An axle or so is on the bridge, or its pulse was overheard: it has the length of the bridge to roll off or stop. */
 function untilLastAxle(track: AxleTrack, one: AxleCount, other: AxleCount, speedMs: number | null): number {
   const wayM = Math.max(track.lengthM, RULE.bogieDistanceM - track.lengthM);
-  const { lastMs, braking } = tail(track, one, other, speedMs);
+  const { lastMs, braking, axles } = tail(track, one, other, speedMs);
   if (lastMs === null) return RULE.pulseWaitSeconds;
-  if (braking && stopsWithin(lastMs, wayM)) return RULE.standUnprovenSeconds;
+  const steady = !braking && axles >= TAIL_AXLES;
+  if (!steady && stopsWithin(lastMs, wayM)) return RULE.standUnprovenSeconds;
   return Math.max(RULE.quietSeconds, rollingSeconds(lastMs, wayM, braking) + 0.3);
 }
 
@@ -117,6 +118,8 @@ function untilHidden(track: AxleTrack, heard: readonly AxleCount[], believed: bo
 interface Tail {
   /** Least speed of the last axles that have passed both sensors, m/s; null if unknown. */
   lastMs: number | null;
+  /** How many axles have passed both. */
+  axles: number;
   /** Whether that is slower than the axles before them. */
   braking: boolean;
   /** Whether none of them is much faster than the one before it. */
@@ -132,12 +135,12 @@ function tail(track: AxleTrack, one: AxleCount, other: AxleCount, speedMs: numbe
   const speeds = axleSpeeds(track, one, other);
   const last = speeds.slice(-TAIL_AXLES);
   const known = last.length > 0 ? Math.min(...last) : speedMs;
-  if (known === null || known === 0) return { lastMs: null, braking: false, even: true };
+  if (known === null || known === 0) return { lastMs: null, axles: 0, braking: false, even: true };
   const newer = one.newest.at(-1)! > other.newest.at(-1)! ? one : other;
   const lastMs = Math.max(known, leastSpeed(newer) ?? 0);
   const braking = lastMs < RULE.brakingShare * Math.max(speedMs ?? 0, ...speeds);
   const even = last.every((speed, i) => i === 0 || speed < GAIN_MOST * last[i - 1]!);
-  return { lastMs, braking, even };
+  return { lastMs, axles: speeds.length, braking, even };
 }
 
 /** How much the delays of the last axles may differ, as a share of the time between two of them. */

@@ -52,6 +52,10 @@ describe('how long a train is waited for after quiet', () => {
     expect(wait({ S1, S2 })).toBe(RULE.standUnprovenSeconds);
   });
 
+  it('is that of a standing train where its second axle is missing and too few have passed to call it steady', () => {
+    expect(wait({ S1: counted([0, 0.6]), S2: counted([7.3]) })).toBe(RULE.standUnprovenSeconds);
+  });
+
   it('is that of a standing train where half of it has left', () => {
     const S1 = counted([0, 0.5, 4, 5]);
     const S2 = counted([4.5, 5.5]);
