@@ -22,7 +22,7 @@ export interface Feed {
   /** The newest block that went in, and the newest that came out with no passage open. */
   through: Position | null;
   quietPosition: Position | null;
-  inFlight: { position: Position; bytes: number }[];
+  inFlight: { position: Position; bytes: number; postedMs: number }[];
   replaysInFlight: number;
   newestMicros: Micros;
   /** All that followed from what came out so far is durable. */

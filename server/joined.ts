@@ -23,6 +23,8 @@ export interface JoinedParts {
   broker: () => SystemStatus['broker'];
   journal: () => SystemStatus['journal'];
   viewers: () => number;
+  durations: Backend['durations'];
+  workersHeapBytes: Backend['workersHeapBytes'];
   /** A watch for a bridge that runs no more, so that its last alarms can be answered. */
   retired: (bridge: string) => BridgeWatch | null;
 }
@@ -131,6 +133,8 @@ export function joinBackend(parts: JoinedParts): Backend {
     },
 
     errors: () => complaints.rows(),
+    durations: parts.durations,
+    workersHeapBytes: parts.workersHeapBytes,
     nowMicros: clock,
   };
 }

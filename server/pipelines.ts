@@ -11,8 +11,9 @@ import { PIPELINE_VERSION } from '#core/passage/pipeline.ts';
 import { isAfter, mismatchOf, newFeed, newer, newThread, oldest, release, type Feed, type Thread } from './feed.ts';
 import { comparePositions, type Journal, type Position } from './ingest/journal.ts';
 import type { JournalRecord } from './ingest/journal-record.ts';
+import { sharedMs, type Stages } from './stages.ts';
 import { readSnapshot, removeSnapshot, writeSnapshot, type Snapshot } from './snapshot.ts';
-import type { FromWorker, ToWorker } from './worker.ts';
+import type { BridgeOutput, FromWorker, ToWorker } from './worker.ts';
 
 /** What the main thread knows of a bridge and keeps in its snapshots. */
 export interface BridgeMemory {
@@ -39,7 +40,9 @@ export interface PipelinesOptions {
   remember: (bridge: string) => BridgeMemory;
   recall: (bridge: string, memory: BridgeMemory) => void;
   report: (complaint: Complaint) => void;
-  /** Threads; all cores but one where absent. */
+  /** Hears how long blocks take; those out of the journal are left out. */
+  stages?: Pick<Stages, 'note'>;
+  /** Threads; see `LEAST_THREADS` where absent. */
   workers?: number;
   limits?: Partial<PipelineLimits>;
 }
@@ -60,6 +63,11 @@ export const PIPELINE_LIMITS: PipelineLimits = {
   snapshotWallMs: 5_000,
 };
 
+/**
+ * More threads than a small machine has cores: measuring a passage takes a tenth of a second and more, in which the
+ * other bridges of its thread wait, but not those of other threads, since the system gives each its turn.
+ */
+const LEAST_THREADS = 8;
 /** A bridge whose data do not move gets a snapshot this often, so that its place in the journal moves on. */
 const IDLE_SNAPSHOT_MS = 600_000;
 /** How long stopping waits for what is in hand. */
@@ -84,6 +92,8 @@ export interface Pipelines {
   stop(): Promise<void>;
   /** For tests and metrics. */
   figures(): { workers: number; blocksInFlight: number; snapshots: number; failures: number };
+  /** What the threads have taken for their heaps. */
+  heapBytes(): Promise<number>;
   /** Ends the thread of a bridge as a crash would; for tests. */
   crash(bridge: string): Promise<void>;
 }
@@ -111,10 +121,10 @@ class PipelinePool implements Pipelines {
   constructor(options: PipelinesOptions) {
     this.#options = options;
     this.#limits = { ...PIPELINE_LIMITS, ...options.limits };
-    const wanted = options.workers ?? Math.max(1, availableParallelism() - 1);
+    const wanted = options.workers ?? Math.max(LEAST_THREADS, availableParallelism());
     for (let i = 0; i < Math.min(wanted, Math.max(1, options.bridges.length)); i++) this.#threads.push(this.#thread());
-    for (const { definition, version } of options.bridges) {
-      const thread = this.#threads[threadNumber(definition.id) % this.#threads.length]!;
+    for (const [index, { definition, version }] of options.bridges.entries()) {
+      const thread = this.#threads[index % this.#threads.length]!;
       const feed = newFeed(definition, version, thread);
       thread.feeds.add(feed);
       this.#feeds.set(definition.id, feed);
@@ -150,6 +160,12 @@ class PipelinePool implements Pipelines {
   figures(): ReturnType<Pipelines['figures']> {
     const blocksInFlight = this.#threads.reduce((sum, { blocks }) => sum + blocks, 0);
     return { workers: this.#threads.length, blocksInFlight, snapshots: this.#snapshots, failures: this.#failures };
+  }
+
+  async heapBytes(): Promise<number> {
+    // A thread that is just ending has no heap to tell of.
+    const heaps = this.#threads.map(({ worker }) => worker.getHeapStatistics().catch(() => null));
+    return (await Promise.all(heaps)).reduce((sum, heap) => sum + (heap?.total_heap_size ?? 0), 0);
   }
 
   stop(): Promise<void> {
@@ -232,7 +248,7 @@ class PipelinePool implements Pipelines {
     const length = Math.max(0, ...block.channels.map(({ samples }) => samples.length));
     feed.newestMicros = Math.max(feed.newestMicros, sampleMicros(block.startMicros, length, block.rateHz));
     feed.through = position;
-    feed.inFlight.push({ position, bytes });
+    feed.inFlight.push({ position, bytes, postedMs: sharedMs() });
     if (receivedMicros !== null) feed.replaysInFlight += 1;
     feed.thread.blocks += 1;
     feed.thread.bytes += bytes;
@@ -249,17 +265,19 @@ class PipelinePool implements Pipelines {
   #hear(thread: Thread, message: FromWorker): void {
     const feed = message.kind === 'outputs' ? undefined : this.#feeds.get(message.bridge);
     if (message.kind === 'outputs') {
-      for (const { bridge, blocks, quiet, output } of message.outputs) {
-        const own = this.#feeds.get(bridge);
-        if (own !== undefined) this.#came(own, blocks, quiet, output);
+      for (const one of message.outputs) {
+        const own = this.#feeds.get(one.bridge);
+        if (own !== undefined) this.#came(own, one);
       }
       if (thread.blocks <= this.#limits.blocks / 2 && thread.bytes <= this.#limits.bytes / 2) release(thread);
     } else if (feed !== undefined && message.kind === 'fault') this.#fault(feed, message.detail);
     else if (feed !== undefined && message.kind === 'snapshot') this.#snapshotCame(feed, message);
   }
 
-  #came(feed: Feed, blocks: number, quiet: boolean, output: PipelineOutput): void {
+  #came(feed: Feed, came: BridgeOutput): void {
+    const { blocks, quiet, output } = came;
     const replayed = feed.replaysInFlight > 0;
+    if (!replayed) this.#time(feed, came);
     for (const { position, bytes } of feed.inFlight.splice(0, blocks)) {
       feed.thread.blocks -= 1;
       feed.thread.bytes -= bytes;
@@ -272,6 +290,16 @@ class PipelinePool implements Pipelines {
     feed.durable = Promise.all([feed.durable, lasting]).then(() => undefined);
     // Told by whoever wrote; here it only keeps the snapshot from being taken.
     feed.durable.catch(() => undefined);
+  }
+
+  #time(feed: Feed, { begunMs, doneMs }: BridgeOutput): void {
+    const { stages } = this.#options;
+    const first = feed.inFlight[0];
+    if (stages === undefined || first === undefined) return;
+    const nowMs = sharedMs();
+    stages.note('queue', begunMs - first.postedMs);
+    stages.note('step', doneMs - begunMs);
+    stages.note('return', nowMs - doneMs);
   }
 
   // failures and recovery
@@ -451,10 +479,3 @@ class PipelinePool implements Pipelines {
 }
 
 const newWorker = (): Worker => new Worker(new URL('./worker.ts', import.meta.url), { execArgv: [] });
-
-/** FNV-1a, so that a bridge keeps its thread as long as the number of threads is the same. */
-function threadNumber(text: string): number {
-  let value = 0x811c9dc5;
-  for (let i = 0; i < text.length; i++) value = Math.imul(value ^ text.charCodeAt(i), 0x01000193) >>> 0;
-  return value;
-}

@@ -18,6 +18,7 @@ import { createPublisher, type Publisher } from './notify/mqtt.ts';
 import { startPipelines, type Pipelines } from './pipelines.ts';
 import { createComplaintLog, type ComplaintLog } from './report.ts';
 import { ingestSettings, type ServerSettings } from './settings.ts';
+import { createStages, sharedMs, type Stages } from './stages.ts';
 import { createWatch, type BridgeWatch, type WatchEffects } from './watch.ts';
 import type { Live } from './web/live.ts';
 import { startWeb } from './web/web.ts';
@@ -76,6 +77,7 @@ async function start(
   const log = createLog(settings.logLevel);
   const complaints = createComplaintLog((complaint) => log.complain(complaint));
   const { report } = complaints;
+  const stages = createStages();
   const broker = await ingestSettings(settings.broker);
   if (!broker.ok) throw new SpanbeatError(broker.complaint);
   const { sound, bad } = await readDefinitions(settings.bridges);
@@ -102,6 +104,7 @@ async function start(
   mapping.forEach(report);
 
   let ingest: Ingest | null = null;
+  let pipelines: Pipelines | null = null;
   const backend = joinBackend({
     watches,
     bad,
@@ -112,6 +115,8 @@ async function start(
     broker: () => ingest?.status().broker ?? { kind: settings.broker.kind, connected: false, address: '' },
     journal: () => journal.status(),
     viewers: () => outlets.live?.viewers() ?? 0,
+    durations: () => stages.figures(),
+    workersHeapBytes: async () => (await pipelines?.heapBytes()) ?? 0,
     retired: (bridge) => retiredWatch(bridge, history, outlets, clock, complaints),
   });
   const web = await startWeb({
@@ -129,7 +134,7 @@ async function start(
   outlets.live = web.live;
   begun.push(() => web.stop());
 
-  const pipelines = startPipelines({
+  const started = startPipelines({
     bridges: definitions,
     folder: folder('snapshots'),
     journal,
@@ -137,22 +142,25 @@ async function start(
     decode: ({ topic, payload, receivedMicros }) =>
       decodeMessage(directory, topic, payload, { nowMicros: receivedMicros }).blocks,
     given: (block, receivedMicros) => watches.get(block.bridge)?.given(block, receivedMicros),
-    take: (bridge, output, replayed) => takeOutput(watches.get(bridge)!, output, replayed, history, web.live, clock),
+    take: (bridge, output, replayed) =>
+      takeOutput(watches.get(bridge)!, output, replayed, { history, live: web.live, clock, stages }),
     remember: (bridge) => watches.get(bridge)!.remember(),
     recall: (bridge, memory) => watches.get(bridge)?.recall(memory),
     report,
+    stages,
     ...(settings.workers === undefined ? {} : { workers: settings.workers }),
   });
-  begun.push(() => pipelines.stop());
+  pipelines = started;
+  begun.push(() => started.stop());
 
   ingest = await startIngest({
     settings: broker.value,
     directory: () => directory,
-    journal: withRoom(journal, pipelines),
+    journal: withRoom(journal, started, stages),
     clock,
     report,
     onMessage: (blocks, position) => {
-      for (const block of blocks) pipelines.feed(block, position);
+      for (const block of blocks) started.feed(block, position);
     },
     // A logger's own word about itself; its silence is noticed by its data.
     onLoggerStatus: ({ bridge, logger, text }) => log.logger.info(`${bridge}/${logger} says "${text.slice(0, 100)}"`),
@@ -171,14 +179,14 @@ async function start(
     url: web.url,
     brokerUrl: running.status().broker.address,
     history,
-    pipelines,
+    pipelines: started,
     log,
     stop: () =>
       (stopping ??= (async () => {
         endTimers();
         await outlets.publisher?.close();
         await running.stop();
-        await pipelines.stop();
+        await started.stop();
         await web.stop();
         await history.close();
         await journal.close();
@@ -263,12 +271,12 @@ function takeOutput(
   watch: BridgeWatch,
   output: PipelineOutput,
   replayed: boolean,
-  history: History,
-  live: Live,
-  clock: () => Micros,
+  { history, live, clock, stages }: { history: History; live: Live; clock: () => Micros; stages: Stages },
 ): Promise<void> | null {
+  const cameMs = sharedMs();
   // First what people wait for.
   const kept = watch.take(output, replayed);
+  if (output.levels.length > 0 && !replayed) stages.note('tell', sharedMs() - cameMs);
   for (const progress of output.progress) live.progress(progress);
   if (output.axles.length > 0) live.axles(output.axles);
   for (const line of output.spectra) {
@@ -281,11 +289,13 @@ function takeOutput(
 }
 
 /** Acknowledging waits until the message is durable and the pipelines have room, so that a slow machine slows its loggers. */
-function withRoom(journal: Journal, pipelines: Pipelines): Journal {
+function withRoom(journal: Journal, pipelines: Pipelines, stages: Stages): Journal {
   return {
     append(record) {
+      const cameMs = sharedMs();
       const { position, durable } = journal.append(record);
-      return { position, durable: durable.then(() => pipelines.room()) };
+      const noted = durable.then(() => stages.note('journal', sharedMs() - cameMs));
+      return { position, durable: noted.then(() => pipelines.room()) };
     },
     readFrom: (after) => journal.readFrom(after),
     newest: () => journal.newest(),

@@ -4,6 +4,7 @@ import type { SampleBlock } from '#core/contract/block.ts';
 import type { BridgeDefinition } from '#core/contract/bridge.ts';
 import type { PipelineOutput } from '#core/contract/pipeline.ts';
 import { createPipeline, step, type PipelineState } from '#core/passage/pipeline.ts';
+import { sharedMs } from './stages.ts';
 
 /** To a worker. Messages are done in their order. */
 export type ToWorker =
@@ -25,6 +26,9 @@ export interface BridgeOutput {
   /** No passage is open after them. */
   quiet: boolean;
   output: PipelineOutput;
+  /** When the block had its turn, and when it was done; see `sharedMs`. */
+  begunMs: number;
+  doneMs: number;
 }
 
 /** Runs the pipelines of its bridges in a thread of its own: pure computing, no files, no sockets. */
@@ -68,8 +72,10 @@ function run(port: NonNullable<typeof parentPort>): void {
     const state = pipelines.get(block.bridge);
     if (state === undefined) return;
     try {
+      const begunMs = sharedMs();
       const output = step(state, block);
-      hold({ bridge: block.bridge, blocks: 1, quiet: state.detector.open === null, output });
+      const quiet = state.detector.open === null;
+      hold({ bridge: block.bridge, blocks: 1, quiet, output, begunMs, doneMs: sharedMs() });
     } catch (failure) {
       fault(block.bridge, failure);
     }

@@ -45,8 +45,20 @@ export interface Backend {
   acknowledge(id: string, answer: Acknowledgement, principal: Principal): Promise<Result<Alarm>>;
 
   errors(): ErrorRow[];
+  /** How long blocks took on each stretch of their way since the start; not a number where none came. */
+  durations(): StageDuration[];
+  /** What the worker threads have taken for their heaps. */
+  workersHeapBytes(): Promise<number>;
   /** Wall clock. */
   nowMicros(): Micros;
+}
+
+export interface StageDuration {
+  stage: string;
+  count: number;
+  p50Ms: number;
+  p99Ms: number;
+  longestMs: number;
 }
 
 export interface StoredWaveform {

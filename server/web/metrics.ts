@@ -57,6 +57,37 @@ export function createMetrics(backend: Backend, live: () => LiveFigures & { view
       this.set(live().viewers);
     },
   });
+  new Gauge({
+    name: 'spanbeat_array_buffers_bytes',
+    help: 'Memory of samples, messages and columns that the main thread holds',
+    registers,
+    collect() {
+      this.set(process.memoryUsage().arrayBuffers);
+    },
+  });
+  new Gauge({
+    name: 'spanbeat_workers_heap_bytes',
+    help: 'Heaps that the worker threads of the pipelines have taken',
+    registers,
+    async collect() {
+      this.set(await backend.workersHeapBytes());
+    },
+  });
+  new Gauge({
+    name: 'spanbeat_stage_seconds',
+    help: 'How long blocks took on each stretch of their way since the start; quantile 1 is the longest',
+    labelNames: ['stage', 'quantile'],
+    registers,
+    collect() {
+      this.reset();
+      for (const { stage, count, p50Ms, p99Ms, longestMs } of backend.durations()) {
+        if (count === 0) continue;
+        this.set({ stage, quantile: '0.5' }, p50Ms / 1000);
+        this.set({ stage, quantile: '0.99' }, p99Ms / 1000);
+        this.set({ stage, quantile: '1' }, longestMs / 1000);
+      }
+    },
+  });
   const counters = [
     ['spanbeat_frames_sent_total', 'Live frames sent', 'framesSent'],
     ['spanbeat_frames_skipped_total', 'Live frames that slow viewers missed', 'framesSkipped'],

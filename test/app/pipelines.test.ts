@@ -1,5 +1,5 @@
 import { mkdtemp, readdir, readFile, rm, writeFile } from 'node:fs/promises';
-import { tmpdir } from 'node:os';
+import { availableParallelism, tmpdir } from 'node:os';
 import { join } from 'node:path';
 import { setTimeout as sleep } from 'node:timers/promises';
 import { afterEach, beforeAll, beforeEach, describe, expect, test } from 'vitest';
@@ -13,6 +13,7 @@ import type { Position } from '../../server/ingest/journal.ts';
 import type { JournalRecord } from '../../server/ingest/journal-record.ts';
 import { startPipelines, type Pipelines, type PipelinesOptions } from '../../server/pipelines.ts';
 import { readSnapshot, writeSnapshot } from '../../server/snapshot.ts';
+import type { Stage } from '../../server/stages.ts';
 import { bridgeParameters } from '../../simulator/parameters.ts';
 import { simulate } from '../../simulator/scene.ts';
 import { createTrain } from '../../simulator/train.ts';
@@ -85,7 +86,12 @@ afterEach(async () => {
 });
 
 function start(over: Partial<PipelinesOptions> = {}): Pipelines {
-  pipelines = startPipelines({
+  pipelines = startPipelines({ ...pipelinesOptions(), workers: 1, ...over });
+  return pipelines;
+}
+
+function pipelinesOptions(): PipelinesOptions {
+  return {
     bridges: [{ definition, version: 1 }],
     folder,
     journal: ledger,
@@ -98,11 +104,8 @@ function start(over: Partial<PipelinesOptions> = {}): Pipelines {
     remember: () => ({ loggers: { L1: DAWN }, sensors: [] }),
     recall: () => undefined,
     report: (complaint) => complaints.push(complaint),
-    workers: 1,
     limits: { snapshotEventS: 10, snapshotWallMs: 0 },
-    ...over,
-  });
-  return pipelines;
+  };
 }
 
 /** Blocks from the ledger's end up to one number, as ingest would bring them. */
@@ -302,6 +305,39 @@ describe('pipelines in worker threads', () => {
     while (kept().passages.length < undisturbed.passages.length) await sleep(5);
     expect(new Set(complaints.map(({ code, where }) => `${code} ${where}`))).toEqual(new Set(['WORKER_FAILED broken']));
   });
+});
+
+test('few bridges get a thread each, many share eight or as many as there are cores, and all of them measure', async () => {
+  const bridges = Array.from({ length: 3 }, (_, i) => ({ definition: { ...definition, id: `b${i}` }, version: 1 }));
+  const came = new Set<string>();
+  const noted = new Map<Stage, number[]>();
+  const options = { ...pipelinesOptions(), bridges };
+  pipelines = startPipelines({
+    ...options,
+    take: (bridge) => {
+      came.add(bridge);
+      return null;
+    },
+    stages: { note: (stage, ms) => noted.set(stage, [...(noted.get(stage) ?? []), ms]) },
+  });
+  await pipelines.ready();
+  expect(pipelines.figures().workers).toBe(3);
+  for (const [index, { definition: one }] of bridges.entries()) {
+    pipelines.feed({ ...copy(blocks[0]!), bridge: one.id }, at(index));
+  }
+  while (came.size < 3) await sleep(2);
+  expect(await pipelines.heapBytes()).toBeGreaterThan(0);
+  // Each block was timed on each stretch of its way through a thread; clocks of threads differ by microseconds.
+  for (const stage of ['queue', 'step', 'return'] as const) {
+    expect(noted.get(stage)).toHaveLength(3);
+    expect(Math.min(...noted.get(stage)!)).toBeGreaterThan(-1);
+  }
+  await pipelines.stop();
+  pipelines = startPipelines({
+    ...options,
+    bridges: Array.from({ length: 70 }, (_, i) => ({ definition: { ...definition, id: `c${i}` }, version: 1 })),
+  });
+  expect(pipelines.figures().workers).toBe(Math.min(70, Math.max(8, availableParallelism())));
 });
 
 test('a snapshot comes back as it was written, and one that is no snapshot is a complaint', async () => {

@@ -1,4 +1,5 @@
 /** `npm run bench [-- section …]`: figures of this machine, as they are now. Quote ratios from one run: machines are noisy. */
+import { benchClient } from './client.ts';
 import { benchDecay } from './decay.ts';
 import type { Figure } from './figure.ts';
 import { benchLatency } from './latency.ts';
@@ -10,6 +11,7 @@ const SECTIONS: Readonly<Record<string, () => Figure[] | Promise<Figure[]>>> = {
   decay: benchDecay,
   stream: benchStream,
   latency: benchLatency,
+  client: benchClient,
 };
 
 const wanted = process.argv.slice(2);

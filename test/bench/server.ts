@@ -6,23 +6,19 @@ import { join } from 'node:path';
 import { setTimeout as sleep } from 'node:timers/promises';
 import { stringify } from 'yaml';
 import type { SystemStatus } from '#core/contract/status.ts';
-import { samplesPayload } from '../../simulator/payload.ts';
-import { deckSensor, plainBridge } from '../support/bridges.ts';
-import { createRandom } from '../support/random.ts';
+import { benchBridge } from './traffic.ts';
 
-export const RATE_HZ = 500;
-const CHANNELS = 16;
+/** Figures of the server, by name and labels as the Prometheus format writes them. */
+export type Metrics = ReadonlyMap<string, number>;
 
 /** A real server in its own process with `bridges` bridges of 16 channels, on free ports and a folder of its own. */
 export interface BenchServer {
   url: string;
   broker: string;
   topic(bridge: number): string;
-  /** A block of quiet noise; `shake` adds a sine of that many m/s² to all channels. */
-  quiet(bridge: number, startMicros: number, count: number, sequence: number, shake?: number): Buffer;
   /** Resolves when the bridge's newest sample is at least so new. */
   seen(bridge: number, micros: number): Promise<void>;
-  residentMegabytes(): Promise<number>;
+  metrics(): Promise<Metrics>;
   stop(): Promise<void>;
 }
 
@@ -31,11 +27,7 @@ export async function startBench(bridges: number): Promise<BenchServer> {
   const [port, brokerPort] = [20_000 + (process.pid % 20_000), 40_001 + (process.pid % 20_000)];
   mkdirSync(join(folder, 'bridges'));
   for (let b = 0; b < bridges; b++) {
-    const sensors = Array.from({ length: CHANNELS }, (_, i) => deckSensor(`A${i + 1}`, 2 + i, { rateHz: RATE_HZ }));
-    writeFileSync(
-      join(folder, 'bridges', `b${b}.yaml`),
-      stringify({ ...plainBridge({ sensors }), id: `b${b}`, name: `B ${b}` }),
-    );
+    writeFileSync(join(folder, 'bridges', `b${b}.yaml`), stringify({ ...benchBridge(), id: `b${b}`, name: `B ${b}` }));
   }
   const words = ['server/main.ts', 'serve', '--bridges', join(folder, 'bridges'), '--data', join(folder, 'data')];
   words.push('--port', String(port), '--broker-port', String(brokerPort), '--log', 'warn');
@@ -47,22 +39,10 @@ export async function startBench(bridges: number): Promise<BenchServer> {
     if ((await status().catch(() => null))?.broker.connected === true) break;
     await sleep(100);
   }
-  const random = createRandom(1);
-  const noise = Float32Array.from({ length: 20_000 }, () => 0.005 * random.normal());
   return {
     url,
     broker: `mqtt://127.0.0.1:${brokerPort}`,
     topic: (bridge) => `spanbeat/b${bridge}/L1/samples`,
-    quiet: (_, startMicros, count, sequence, shake = 0) => {
-      const channels = new Map<string, Float32Array>();
-      for (let c = 0; c < CHANNELS; c++) {
-        const at = (sequence * 997 + c * 613) % (noise.length - count);
-        const sine = (i: number): number => shake * Math.sin((2 * Math.PI * 5 * i) / RATE_HZ);
-        const samples = noise.slice(at, at + count).map((value, i) => value + sine(i));
-        channels.set(`A${c + 1}`, samples);
-      }
-      return samplesPayload({ startMicros, rateHz: RATE_HZ, sequence, channels });
-    },
     seen: async (bridge, micros) => {
       for (;;) {
         const newest = (await status()).bridges.find(({ id }) => id === `b${bridge}`)?.newestMicros ?? 0;
@@ -70,9 +50,12 @@ export async function startBench(bridges: number): Promise<BenchServer> {
         await sleep(50);
       }
     },
-    residentMegabytes: async () => {
-      const metrics = await (await fetch(`${url}/metrics`)).text();
-      return Number(/^process_resident_memory_bytes (\S+)/m.exec(metrics)?.[1] ?? NaN) / 1e6;
+    metrics: async () => {
+      const text = await (await fetch(`${url}/metrics`)).text();
+      const lines = text.split('\n').filter((line) => line !== '' && !line.startsWith('#'));
+      return new Map(
+        lines.map((line) => [line.slice(0, line.lastIndexOf(' ')), Number(line.slice(line.lastIndexOf(' ')))]),
+      );
     },
     stop: async () => {
       child.kill('SIGINT');

@@ -105,6 +105,11 @@ export function fakeBackend(): Backend & { alarmsById: Map<string, Alarm> } {
       return Promise.resolve(accept(answered));
     },
     errors: () => [{ code: 'TIME_IN_FUTURE', what: 'w', remedy: 'r', count: 2, last: null }],
+    durations: () => [
+      { stage: 'queue', count: 7, p50Ms: 0.5, p99Ms: 20, longestMs: 40 },
+      { stage: 'tell', count: 0, p50Ms: NaN, p99Ms: NaN, longestMs: NaN },
+    ],
+    workersHeapBytes: () => Promise.resolve(9_000_000),
     nowMicros: () => DAWN,
   };
 }

@@ -258,6 +258,9 @@ describe('the HTTP interface', () => {
     expect(text).toContain('spanbeat_bridge_measuring{bridge="ottermere"} 1');
     expect(text).toContain('spanbeat_complaints_total{code="TIME_IN_FUTURE"} 2');
     expect(text).toContain('spanbeat_viewers 0');
+    expect(text).toContain('spanbeat_stage_seconds{stage="queue",quantile="0.99"} 0.02');
+    expect(text).toContain('spanbeat_workers_heap_bytes 9000000');
+    expect(text).not.toContain('stage="tell"'); // nothing came through it yet
   });
 });
 
