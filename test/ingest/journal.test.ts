@@ -1,3 +1,9 @@
+import { spawn } from 'node:child_process';
+import { once } from 'node:events';
+import { mkdtempSync, rmSync } from 'node:fs';
+import { tmpdir } from 'node:os';
+import { join } from 'node:path';
+import { fileURLToPath } from 'node:url';
 import { describe, expect, it } from 'vitest';
 import type { Complaint } from '#core/contract/errors.ts';
 import { SpanbeatError } from '#core/contract/errors.ts';
@@ -229,6 +235,53 @@ describe('the journal', () => {
     expect(await outcome(journal.append(recordOf(2)).durable)).toBe('JOURNAL_WRITE');
   });
 });
+
+describe('the journal of a process that is killed', () => {
+  it('holds every record that was acknowledged, once and in order', async () => {
+    const folder = mkdtempSync(join(tmpdir(), 'spanbeat-journal-'));
+    try {
+      const random = createRandom(7);
+      const acknowledged: number[] = [];
+      for (let life = 0; life < 15; life++) {
+        acknowledged.push(...(await killedWriter(folder, 100_000 * life, random.integer(1, 400))));
+      }
+      const journal = await openJournal(folder, {
+        maxBytes: 1e9,
+        maxHours: 1000,
+        clock: () => Date.now() * 1000,
+        report: () => undefined,
+      });
+      const read = new Set<number>();
+      let last = -1;
+      for await (const { record } of journal.readFrom(null)) {
+        const number = numberOf(record);
+        expect(number).toBeGreaterThan(last);
+        last = number;
+        read.add(number);
+        expect(record.payload.length).toBe(8 + ((number * 7919) % 3000));
+      }
+      await journal.close();
+      expect(acknowledged.length).toBeGreaterThan(500);
+      expect(acknowledged.filter((number) => !read.has(number))).toEqual([]);
+    } finally {
+      rmSync(folder, { recursive: true, force: true });
+    }
+  });
+});
+
+/** Numbers that a writer acknowledged until it was killed, some way after so many. */
+async function killedWriter(folder: string, first: number, after: number): Promise<number[]> {
+  const script = fileURLToPath(new URL('./writer.ts', import.meta.url));
+  const child = spawn(process.execPath, [script, folder, String(first)], { stdio: ['ignore', 'pipe', 'inherit'] });
+  let text = '';
+  child.stdout.on('data', (chunk: Buffer) => {
+    text += chunk.toString();
+    if (text.split('\n').length > after) child.kill('SIGKILL');
+  });
+  await once(child, 'close');
+  // The last line may be cut.
+  return text.split('\n').slice(0, -1).map(Number);
+}
 
 /** Thirty records over several segments, one step of the disk failing; then a healthy restart. */
 async function tried(fault: Disk['fault']) {

@@ -32,6 +32,8 @@ export async function startMosquitto(lines: readonly string[] = []): Promise<Mos
       'allow_anonymous true',
       'persistence true',
       `persistence_location ${folder}/`,
+      // Started as root it would become a user who may not write into the folder.
+      ...(process.getuid?.() === 0 ? ['user root'] : []),
       'log_dest stderr',
       ...lines,
       '',
