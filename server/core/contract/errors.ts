@@ -66,7 +66,10 @@ export const ERRORS = {
     what: 'no column of the recording is a sensor of the bridge',
     remedy: 'name the columns after the sensors, or map them under loggers.channels',
   },
-  RECORDING_TIME: { what: 'the time column cannot be understood', remedy: 'use seconds, Unix epoch, or ISO 8601' },
+  RECORDING_TIME: {
+    what: 'the time column cannot be understood',
+    remedy: 'use Unix epoch or ISO 8601, or seconds from zero with, for instance, --start 2026-06-01T08:00:00Z',
+  },
   // machine and neighbours
   FILE_UNWRITABLE: { what: 'the file cannot be written', remedy: 'check path, permissions and space' },
   BROKER_UNREACHABLE: {
