@@ -1,9 +1,9 @@
-import type { Worker } from 'node:worker_threads';
 import type { BridgeDefinition } from '#core/contract/bridge.ts';
 import type { Micros } from '#core/contract/time.ts';
 import { PIPELINE_VERSION } from '#core/passage/pipeline.ts';
 import { comparePositions, type Position } from './ingest/journal.ts';
 import type { Snapshot } from './snapshot.ts';
+import type { Thread } from './thread.ts';
 
 /** How far one bridge has been fed, and from where it can be fed again. */
 export interface Feed {
@@ -32,16 +32,6 @@ export interface Feed {
   snapshotAtMs: number;
   failedAt: Position | null;
   poison: Position[];
-}
-
-/** A worker thread with the bridges it runs. */
-export interface Thread {
-  worker: Worker;
-  feeds: Set<Feed>;
-  blocks: number;
-  bytes: number;
-  waiting: (() => void)[];
-  failures: number;
 }
 
 export function newFeed(definition: BridgeDefinition, version: number, thread: Thread): Feed {
@@ -75,10 +65,6 @@ export function mismatchOf({ pipelineVersion, definitionVersion }: Snapshot, fee
   return null;
 }
 
-export function release(thread: Thread): void {
-  for (const resume of thread.waiting.splice(0)) resume();
-}
-
 /** Null where any is: then the journal is read from its beginning. */
 export function oldest(positions: readonly (Position | null)[]): Position | null {
   return positions.reduce((a, b) => (a === null || b === null ? null : comparePositions(a, b) <= 0 ? a : b));
@@ -93,12 +79,3 @@ export function newer(a: Position | null, b: Position | null): Position | null {
   if (a === null || b === null) return a ?? b;
   return comparePositions(a, b) >= 0 ? a : b;
 }
-
-export const newThread = (worker: Worker): Thread => ({
-  worker,
-  feeds: new Set(),
-  blocks: 0,
-  bytes: 0,
-  waiting: [],
-  failures: 0,
-});

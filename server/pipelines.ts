@@ -1,6 +1,4 @@
-import { availableParallelism } from 'node:os';
 import { setImmediate as turn, setTimeout as sleep } from 'node:timers/promises';
-import { Worker } from 'node:worker_threads';
 import type { SampleBlock } from '#core/contract/block.ts';
 import type { BridgeDefinition } from '#core/contract/bridge.ts';
 import type { Complaint } from '#core/contract/errors.ts';
@@ -8,11 +6,12 @@ import type { SensorHealth } from '#core/contract/health.ts';
 import type { PipelineOutput } from '#core/contract/pipeline.ts';
 import { MICROS_PER_SECOND, sampleMicros, type Micros } from '#core/contract/time.ts';
 import { PIPELINE_VERSION } from '#core/passage/pipeline.ts';
-import { isAfter, mismatchOf, newFeed, newer, newThread, oldest, release, type Feed, type Thread } from './feed.ts';
+import { isAfter, mismatchOf, newFeed, newer, oldest, type Feed } from './feed.ts';
 import { comparePositions, type Journal, type Position } from './ingest/journal.ts';
 import type { JournalRecord } from './ingest/journal-record.ts';
 import { sharedMs, type Stages } from './stages.ts';
 import { readSnapshot, removeSnapshot, writeSnapshot, type Snapshot } from './snapshot.ts';
+import { heapBytesOf, newThread, newWorker, release, threadsFor, type Thread } from './thread.ts';
 import type { BridgeOutput, FromWorker, ToWorker } from './worker.ts';
 
 /** What the main thread knows of a bridge and keeps in its snapshots. */
@@ -42,7 +41,7 @@ export interface PipelinesOptions {
   report: (complaint: Complaint) => void;
   /** Hears how long blocks take; those out of the journal are left out. */
   stages?: Pick<Stages, 'note'>;
-  /** Threads; see `LEAST_THREADS` where absent. */
+  /** Threads; see `threadsFor`. */
   workers?: number;
   limits?: Partial<PipelineLimits>;
 }
@@ -63,11 +62,6 @@ export const PIPELINE_LIMITS: PipelineLimits = {
   snapshotWallMs: 5_000,
 };
 
-/**
- * More threads than a small machine has cores: measuring a passage takes a tenth of a second and more, in which the
- * other bridges of its thread wait, but not those of other threads, since the system gives each its turn.
- */
-const LEAST_THREADS = 8;
 /** A bridge whose data do not move gets a snapshot this often, so that its place in the journal moves on. */
 const IDLE_SNAPSHOT_MS = 600_000;
 /** How long stopping waits for what is in hand. */
@@ -121,8 +115,8 @@ class PipelinePool implements Pipelines {
   constructor(options: PipelinesOptions) {
     this.#options = options;
     this.#limits = { ...PIPELINE_LIMITS, ...options.limits };
-    const wanted = options.workers ?? Math.max(LEAST_THREADS, availableParallelism());
-    for (let i = 0; i < Math.min(wanted, Math.max(1, options.bridges.length)); i++) this.#threads.push(this.#thread());
+    const threads = threadsFor(options.bridges.length, options.workers);
+    for (let i = 0; i < threads; i++) this.#threads.push(this.#thread());
     for (const [index, { definition, version }] of options.bridges.entries()) {
       const thread = this.#threads[index % this.#threads.length]!;
       const feed = newFeed(definition, version, thread);
@@ -162,10 +156,8 @@ class PipelinePool implements Pipelines {
     return { workers: this.#threads.length, blocksInFlight, snapshots: this.#snapshots, failures: this.#failures };
   }
 
-  async heapBytes(): Promise<number> {
-    // A thread that is just ending has no heap to tell of.
-    const heaps = this.#threads.map(({ worker }) => worker.getHeapStatistics().catch(() => null));
-    return (await Promise.all(heaps)).reduce((sum, heap) => sum + (heap?.total_heap_size ?? 0), 0);
+  heapBytes(): Promise<number> {
+    return heapBytesOf(this.#threads);
   }
 
   stop(): Promise<void> {
@@ -448,8 +440,11 @@ class PipelinePool implements Pipelines {
       state,
     };
     const { durable } = feed;
+    const earlier = this.#writing.get(feed.bridge);
     const writing = (async () => {
       await durable;
+      // The last one may be asked for while another is still being written; it has the same file.
+      await earlier;
       await writeSnapshot(this.#options.folder, snapshot);
       this.#snapshots += 1;
     })()
@@ -477,5 +472,3 @@ class PipelinePool implements Pipelines {
     return token === undefined ? Promise.resolve() : new Promise((resolve) => this.#awaited.set(token, resolve));
   }
 }
-
-const newWorker = (): Worker => new Worker(new URL('./worker.ts', import.meta.url), { execArgv: [] });

@@ -113,7 +113,7 @@ function addServe(program: Command, set: SetExit): void {
     .option('--journal-hours <hours>', 'samples are kept for replay so long (72)', positive)
     .option('--journal-gigabytes <size>', 'and at most so much of them (20)', positive)
     .option('--keep-days <days>', 'wave forms of passages below all limits are kept so long (30)', wholeFromZero)
-    .option('--workers <number>', 'threads that run pipelines (one a bridge, at most 8 or one a core)', whole)
+    .option('--workers <number>', 'threads that run pipelines (one a bridge, at most 4 or one a core)', whole)
     .addOption(new Option('--log <level>', 'how much is told (info)').choices(LOG_LEVELS))
     .action(async (options: ServeOptions) => {
       const settings = await settingsOf(options);

@@ -307,7 +307,7 @@ describe('pipelines in worker threads', () => {
   });
 });
 
-test('few bridges get a thread each, many share eight or as many as there are cores, and all of them measure', async () => {
+test('few bridges get a thread each, many share four or as many as there are cores, and all of them measure', async () => {
   const bridges = Array.from({ length: 3 }, (_, i) => ({ definition: { ...definition, id: `b${i}` }, version: 1 }));
   const came = new Set<string>();
   const noted = new Map<Stage, number[]>();
@@ -337,7 +337,7 @@ test('few bridges get a thread each, many share eight or as many as there are co
     ...options,
     bridges: Array.from({ length: 70 }, (_, i) => ({ definition: { ...definition, id: `c${i}` }, version: 1 })),
   });
-  expect(pipelines.figures().workers).toBe(Math.min(70, Math.max(8, availableParallelism())));
+  expect(pipelines.figures().workers).toBe(Math.min(70, Math.max(4, availableParallelism())));
 });
 
 test('a snapshot comes back as it was written, and one that is no snapshot is a complaint', async () => {

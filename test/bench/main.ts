@@ -4,6 +4,7 @@ import { benchDecay } from './decay.ts';
 import type { Figure } from './figure.ts';
 import { benchLatency } from './latency.ts';
 import { benchPipeline } from './pipeline.ts';
+import { benchStart } from './start.ts';
 import { benchStream } from './stream.ts';
 
 const SECTIONS: Readonly<Record<string, () => Figure[] | Promise<Figure[]>>> = {
@@ -12,6 +13,7 @@ const SECTIONS: Readonly<Record<string, () => Figure[] | Promise<Figure[]>>> = {
   stream: benchStream,
   latency: benchLatency,
   client: benchClient,
+  start: benchStart,
 };
 
 const wanted = process.argv.slice(2);

@@ -1,0 +1,46 @@
+import { availableParallelism } from 'node:os';
+import { Worker } from 'node:worker_threads';
+import type { Feed } from './feed.ts';
+
+/** A worker thread with the bridges it runs. */
+export interface Thread {
+  worker: Worker;
+  feeds: Set<Feed>;
+  blocks: number;
+  bytes: number;
+  waiting: (() => void)[];
+  failures: number;
+}
+
+export function release(thread: Thread): void {
+  for (const resume of thread.waiting.splice(0)) resume();
+}
+
+/** What the threads have taken for their heaps. */
+export async function heapBytesOf(threads: readonly Thread[]): Promise<number> {
+  // A thread that is just ending, or beginning, has no heap to tell of.
+  const heaps = await Promise.all(threads.map(({ worker }) => worker.getHeapStatistics().catch(() => null)));
+  return heaps.reduce((sum, heap) => sum + (heap?.total_heap_size ?? 0), 0);
+}
+
+/**
+ * More threads than a small machine has cores: measuring a passage takes a tenth of a second and more, in which the
+ * other bridges of its thread wait, but not those of other threads, since the system gives each its turn.
+ */
+const LEAST_THREADS = 4;
+
+/** One a bridge, but no more than wanted; where nobody said how many, as many as there are cores, and four at least. */
+export function threadsFor(bridges: number, wanted = Math.max(LEAST_THREADS, availableParallelism())): number {
+  return Math.max(1, Math.min(wanted, bridges));
+}
+
+export const newWorker = (): Worker => new Worker(new URL('./worker.ts', import.meta.url), { execArgv: [] });
+
+export const newThread = (worker: Worker): Thread => ({
+  worker,
+  feeds: new Set(),
+  blocks: 0,
+  bytes: 0,
+  waiting: [],
+  failures: 0,
+});
