@@ -31,36 +31,46 @@ const FREE_SECONDS_LEAST = 0.8;
 const RATIO = 16;
 const HOLD = 4;
 const ROUNDS_MOST = 8;
+/** How plainly the deck is driven beyond an edge is the mean of that ratio over so many samples. */
+const BEYOND = 30;
 /**
  * Share of the motion by which a deck may depart from one linear law and still be free: ballast is softer at larger
  * amplitude, some tenths of a percent of frequency per m/s².
  */
 const SOFTENING = 0.003;
 
+export interface Edge {
+  micros: Micros;
+  /** Mean square of what the deck does against its law beyond the edge, over that of noise. */
+  strength: number;
+}
+
 /** Last time, searching from the free stretch back to `untilMicros`, at which the deck was driven; null if it cannot be told. */
-export function lastDriven(spans: readonly RecordChannel[][], free: FreeStretch, untilMicros: Micros): Micros | null {
+export function lastDriven(spans: readonly RecordChannel[][], free: FreeStretch, untilMicros: Micros): Edge | null {
   const fitted = Math.floor(((free.toMicros - free.fromMicros) * RATE_HZ) / MICROS_PER_SECOND);
-  const edges = spans.map((deck) => {
+  const edges = spans.flatMap((deck) => {
     const traces = tracesOf(deck, untilMicros, free.toMicros);
-    if (traces === null) return null;
+    if (traces === null) return [];
     const reversed = traces.map((trace) => trace.toReversed());
     const found = firstDisobedient(reversed, fitted, SOFTENING);
-    return found === null ? null : untilMicros + sampleTime(reversed[0]!.length - 1 - found);
+    if (found === null) return [];
+    return [{ micros: untilMicros + sampleTime(reversed[0]!.length - 1 - found.at), strength: found.strength }];
   });
-  const times = edges.filter((micros) => micros !== null);
-  return times.length === 0 ? null : Math.max(...times);
+  return edges.reduce<Edge | null>((last, edge) => (last === null || edge.micros > last.micros ? edge : last), null);
 }
 
 /** First time, searching from the free stretch on to `untilMicros`, at which the deck is driven. */
-export function firstDriven(spans: readonly RecordChannel[][], free: FreeStretch, untilMicros: Micros): Micros | null {
+export function firstDriven(spans: readonly RecordChannel[][], free: FreeStretch, untilMicros: Micros): Edge | null {
   const fitted = Math.floor(((free.toMicros - free.fromMicros) * RATE_HZ) / MICROS_PER_SECOND);
-  const edges = spans.map((deck) => {
+  const edges = spans.flatMap((deck) => {
     const traces = tracesOf(deck, free.fromMicros, untilMicros);
     const found = traces === null ? null : firstDisobedient(traces, fitted, 0);
-    return found === null ? null : free.fromMicros + sampleTime(found);
+    return found === null ? [] : [{ micros: free.fromMicros + sampleTime(found.at), strength: found.strength }];
   });
-  const times = edges.filter((micros) => micros !== null);
-  return times.length === 0 ? null : Math.min(...times);
+  return edges.reduce<Edge | null>(
+    (first, edge) => (first === null || edge.micros < first.micros ? edge : first),
+    null,
+  );
 }
 
 function sampleTime(index: number): Micros {
@@ -91,34 +101,47 @@ function tracesOf(deck: readonly RecordChannel[], fromMicros: Micros, toMicros: 
  * had died away in the stretch first fitted is learnt by fitting again up to there, until nothing moves. `slack` is the
  * share of the motion that may depart from the law.
  */
-function firstDisobedient(x: readonly Float64Array[], free: number, slack: number): number | null {
+function firstDisobedient(x: readonly Float64Array[], free: number, slack: number): Disobedience | null {
   if (free < FREE_SECONDS_LEAST * RATE_HZ) return null;
-  let found: number | null = null;
+  let found: Disobedience | null = null;
   let fitted = free;
   for (let round = 0; round < ROUNDS_MOST; round++) {
     const next = search(x, fitted, slack);
-    if (next === null || (found !== null && next <= found + 1)) return next ?? found;
+    if (next === null || (found !== null && next.at <= found.at + 1)) return next ?? found;
     found = next;
-    fitted = next - 2;
+    fitted = next.at - 2;
   }
   return found;
 }
 
-function search(x: readonly Float64Array[], fitted: number, slack: number): number | null {
+interface Disobedience {
+  at: number;
+  strength: number;
+}
+
+function search(x: readonly Float64Array[], fitted: number, slack: number): Disobedience | null {
   const weights = recurrence(x, fitted);
   if (weights === null) return null;
   const residuals = x.map((trace) => residualOf(trace, weights));
   const floors = residuals.map((r) => robustMeanSquare(r.subarray(ORDER, fitted)));
   const length = x[0]!.length;
-  let held = 0;
-  for (let i = fitted; i < length; i++) {
+  const ratioAt = (i: number): number => {
     let ratio = 0;
     residuals.forEach((r, c) => {
       const motion = meanSquare(x[c]!, i - ORDER, i);
       ratio += r[i]! ** 2 / (floors[c]! + slack * slack * motion + 1e-12);
     });
-    held = ratio / x.length > RATIO ? held + 1 : 0;
-    if (held === HOLD) return i - HOLD + 1;
+    return ratio / x.length;
+  };
+  let held = 0;
+  for (let i = fitted; i < length; i++) {
+    held = ratioAt(i) > RATIO ? held + 1 : 0;
+    if (held < HOLD) continue;
+    const at = i - HOLD + 1;
+    const to = Math.min(length, at + BEYOND);
+    let sum = 0;
+    for (let k = at; k < to; k++) sum += ratioAt(k);
+    return { at, strength: sum / (to - at) };
   }
   return null;
 }

@@ -147,20 +147,34 @@ describe('what accelerometers alone cannot say', () => {
 describe('the edge of forced motion', () => {
   const bridge = plainBridge({ sensors: [deckSensor('A1', 5), deckSensor('A2', 12)] });
   // Free decay of two modes after 4 s, driven by a ramp before; a little noise.
-  const motion = (seed: number, gain: number): Float32Array => {
+  const motion = (seed: number, gain: number, drive = 3): Float32Array => {
     const random = createRandom(seed);
     return Float32Array.from({ length: 5000 }, (_, i) => {
       const t = i / 500 - 4;
       const free = Math.exp(-0.5 * t) * Math.cos(31 * t) + 0.4 * Math.exp(-1.2 * t) * Math.cos(62 * t + 1);
-      const ramp = t < 0 ? -3 * t * Math.sin(9 * t) : 0;
+      const ramp = t < 0 ? -drive * t * Math.sin(9 * t) : 0;
       return gain * (Math.min(3, free) + ramp) + 0.004 * random.normal();
     });
   };
   const record = arrangeRecord(bridge, windowsOf({ A1: motion(1, 0.5), A2: motion(2, 0.9) }), FROM, at(10));
 
   it('is found within the 0.1 s that are promised of phases, from well after it', () => {
-    const edge = lastDriven([record], { fromMicros: at(4.7), toMicros: at(8) }, at(3))!;
+    const edge = lastDriven([record], { fromMicros: at(4.7), toMicros: at(8) }, at(3))!.micros;
     expect(Math.abs(edge - at(4)) / 1e6).toBeLessThan(0.1);
+  });
+
+  it('says how plainly the deck was driven: more so by a heavier train', () => {
+    const [light, heavy] = [1, 6].map((drive) => {
+      const own = arrangeRecord(
+        bridge,
+        windowsOf({ A1: motion(1, 0.5, drive), A2: motion(2, 0.9, drive) }),
+        FROM,
+        at(10),
+      );
+      return lastDriven([own], { fromMicros: at(4.7), toMicros: at(8) }, at(3))!.strength;
+    });
+    expect(light).toBeGreaterThan(16);
+    expect(heavy).toBeGreaterThan(10 * light!);
   });
 
   it('is not made up where the deck is free all the time, or the free stretch is too short to learn from', () => {
