@@ -39,6 +39,8 @@ export interface PipelinesOptions {
   remember: (bridge: string) => BridgeMemory;
   recall: (bridge: string, memory: BridgeMemory) => void;
   report: (complaint: Complaint) => void;
+  /** Where what came out is made durable has no room: resolves when it has. Whoever feeds waits for it too. */
+  room?: () => Promise<void> | null;
   /** Hears how long blocks take; those out of the journal are left out. */
   stages?: Pick<Stages, 'note'>;
   /** Threads; see `threadsFor`. */
@@ -111,6 +113,7 @@ class PipelinePool implements Pipelines {
   #writing = new Map<string, Promise<void>>();
   #awaited = new Map<number, () => void>();
   #stopping: Promise<void> | null = null;
+  readonly #stopped = Promise.withResolvers<undefined>();
 
   constructor(options: PipelinesOptions) {
     this.#options = options;
@@ -141,6 +144,7 @@ class PipelinePool implements Pipelines {
 
   async room(): Promise<void> {
     for (const thread of this.#threads) await this.#room(thread);
+    await this.#lastingRoom();
   }
 
   async ready(): Promise<void> {
@@ -171,6 +175,7 @@ class PipelinePool implements Pipelines {
 
   async #stop(): Promise<void> {
     clearInterval(this.#idle);
+    this.#stopped.resolve(undefined);
     // A bridge that was still catching up keeps the snapshot it had, or took on the way.
     await Promise.all(this.#recoveries);
     const last = [...this.#feeds.values()].filter(({ live }) => live);
@@ -252,6 +257,12 @@ class PipelinePool implements Pipelines {
   #room(thread: Thread): Promise<void> | null {
     if (thread.blocks <= this.#limits.blocks && thread.bytes <= this.#limits.bytes) return null;
     return new Promise((resolve) => thread.waiting.push(resolve));
+  }
+
+  /** A stop does not wait for a disk that refuses. */
+  #lastingRoom(): Promise<void> | null {
+    const room = this.#options.room?.() ?? null;
+    return room === null || this.#isStopping() ? null : Promise.race([room, this.#stopped.promise]);
   }
 
   #hear(thread: Thread, message: FromWorker): void {
@@ -371,6 +382,7 @@ class PipelinePool implements Pipelines {
         if (feed === undefined || !isMine(feed) || !isAfter(position, feed.openedAt)) continue;
         this.#dispatch(feed, block, position, record.receivedMicros);
         await this.#room(feed.thread);
+        await this.#lastingRoom();
       }
       at = position;
       if (this.#isStopping()) break;

@@ -147,6 +147,7 @@ async function start(
     remember: (bridge) => watches.get(bridge)!.remember(),
     recall: (bridge, memory) => watches.get(bridge)?.recall(memory),
     report,
+    room: () => history.room(),
     stages,
     ...(settings.workers === undefined ? {} : { workers: settings.workers }),
   });

@@ -26,6 +26,7 @@ import {
   upsertAlarms,
 } from './alarms.ts';
 import { openArchive, placeOf, type Archive, type StoredDefinition } from './archive.ts';
+import { createCommits } from './commits.ts';
 import { openDuckDb, type Ask, type Database } from './database.ts';
 import { daysOf } from './days.ts';
 import { loadDefinitions, type Definitions } from './definitions.ts';
@@ -33,6 +34,7 @@ import { createLedger, type Entry, type Ledger } from './ledger.ts';
 import { openSound } from './opening.ts';
 import { alikeOf, hasPassage, insertPassage, lastOf, neighboursOf, pageOf, passageOf } from './passages.ts';
 import { dueWaveforms, thin, type RetentionRules, type Thinned } from './retention.ts';
+import { createRoom } from './room.ts';
 import { markFilled } from './schema.ts';
 import { createSpectra } from './spectra.ts';
 import { createWrites } from './writes.ts';
@@ -80,6 +82,11 @@ export interface History {
   saveNoData(noData: NoData): Promise<void>;
   /** Writes handed in and not yet done. */
   pendingWrites(): number;
+  /**
+   * Null where there is room, else resolves when there is: whoever brings data waits for it before acknowledging more, so
+   * that a disk that is slow, or refuses, slows the loggers and does not fill the memory. Alarms are raised all the same.
+   */
+  room(): Promise<void> | null;
 
   passage(id: string): Promise<{ passage: Passage; hasWaveform: boolean } | null>;
   passages(query: PassageQuery): Promise<PassagePage>;
@@ -112,6 +119,8 @@ export interface History {
 }
 
 const MAX_PENDING = 64;
+/** Writes that may wait before whoever brings data waits too; each passage among them holds its wave form, about 1 MB. */
+const ROOM = 256;
 const ALIKE = 12;
 
 /** @throws SpanbeatError STORE_LOCKED, STORE_NEWER, STORE_WRITE or DISK_FULL, see `openSound` */
@@ -147,12 +156,10 @@ interface Parts {
 
 function assemble({ clock, database, archive, ledger, definitions, write, writes, files }: Parts): History {
   const { ask } = database;
-  /** Written down in the ledger, then done in the database; both in their turn and until they succeed. */
+  const commits = createCommits(writes, ledger, database);
+  const room = createRoom(ROOM);
   const noted = <T>(entries: Entry[], work: (ask: Ask) => Promise<T>): Promise<T> =>
-    writes.run(async () => {
-      await ledger.append(entries);
-      return database.transaction(work);
-    });
+    room.hold(commits.commit(entries, work));
   const spectra = createSpectra();
   let closing: Promise<void> | null = null;
 
@@ -161,32 +168,35 @@ function assemble({ clock, database, archive, ledger, definitions, write, writes
     return stored?.hasWaveform === true ? stored.passage : null;
   };
 
+  const keepWaveform = async (passage: Passage, channels: readonly WindowChannel[]): Promise<void> => {
+    const version = passage.provenance.definitionVersion;
+    const definition = definitions.at(passage.bridge, version);
+    if (definition === null) throw new Error(`definition ${version} of ${passage.bridge} was never saved`);
+    if (!(await hasPassage(ask, passage.id))) {
+      await files.run(() => archive.write({ passage, definition }, channels));
+    }
+  };
+  const commitPassage = async ({ passage, channels, alarms }: Commit): Promise<{ already: boolean }> => {
+    await keepWaveform(passage, channels);
+    const hasWaveform = channels.some(({ runs }) => runs.length > 0);
+    return commits.commit(entriesOf(alarms), async (ask) => {
+      const inserted = await insertPassage(ask, passage, hasWaveform);
+      await upsertAlarms(ask, alarms);
+      return { already: !inserted };
+    });
+  };
+
   return {
     saveDefinition: (definition, text, micros) => definitions.save(definition, text, micros),
     definitions: () => definitions.all(),
     definitionAt: (bridge, version) => definitions.at(bridge, version),
     versions: (bridge) => definitions.versions(bridge),
 
-    async commitPassage({ passage, channels, alarms }) {
-      const version = passage.provenance.definitionVersion;
-      const definition = definitions.at(passage.bridge, version);
-      if (definition === null) throw new Error(`definition ${version} of ${passage.bridge} was never saved`);
-      if (!(await hasPassage(ask, passage.id))) {
-        await files.run(() => archive.write({ passage, definition }, channels));
-      }
-      return noted(entriesOf(alarms), async (ask) => {
-        const inserted = await insertPassage(
-          ask,
-          passage,
-          channels.some(({ runs }) => runs.length > 0),
-        );
-        await upsertAlarms(ask, alarms);
-        return { already: !inserted };
-      });
-    },
+    commitPassage: (passage) => room.hold(commitPassage(passage)),
     saveAlarms: (alarms) => noted(entriesOf(alarms), (ask) => upsertAlarms(ask, alarms)),
     saveNoData: (noData) => noted([{ noData }], (ask) => saveNoDataOf(ask, noData)),
-    pendingWrites: () => writes.pending() + files.pending(),
+    pendingWrites: () => room.held(),
+    room: () => room.free(),
 
     passage: (id) => passageOf(ask, id),
     passages: (query) => pageOf(ask, query),

@@ -77,7 +77,7 @@ export function createWrites({ limit, report, recover, pause = wait }: WritesOpt
 }
 
 /** DuckDB's and PostgreSQL's words for what no waiting mends: constraints, types, names, syntax. */
-function isOurMistake(failure: unknown): boolean {
+export function isOurMistake(failure: unknown): boolean {
   if (failure instanceof SpanbeatError || failure instanceof TypeError || failure instanceof RangeError) return true;
   return /^(Constraint|Conversion|Binder|Parser|Catalog|Invalid Input|Not implemented|Invalid) Error/i.test(
     textOf(failure),

@@ -307,6 +307,24 @@ describe('pipelines in worker threads', () => {
   });
 });
 
+test('whoever feeds waits while the history has no room, but a stop does not', async () => {
+  let room: PromiseWithResolvers<undefined> | null = Promise.withResolvers();
+  start({ room: () => room?.promise ?? null });
+  await pipelines.ready();
+  let fed = false;
+  const waiting = pipelines.room().then(() => (fed = true));
+  await sleep(10);
+  expect(fed).toBe(false);
+  room.resolve(undefined);
+  await waiting;
+  room = null;
+  await pipelines.room();
+  room = Promise.withResolvers();
+  const refused = pipelines.room();
+  await pipelines.stop();
+  await refused;
+});
+
 test('few bridges get a thread each, many share four or as many as there are cores, and all of them measure', async () => {
   const bridges = Array.from({ length: 3 }, (_, i) => ({ definition: { ...definition, id: `b${i}` }, version: 1 }));
   const came = new Set<string>();
