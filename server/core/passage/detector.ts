@@ -30,6 +30,8 @@ export interface Candidate {
   id: string;
   onsetTick: number;
   lastActiveTick: number;
+  /** Longest quiet since the last pulse, ticks. */
+  restTicks: number;
   /** Active ticks in a row, now and at most. */
   row: number;
   longestRow: number;
@@ -104,6 +106,7 @@ function createCandidate(bridge: string, onsetTick: number): Candidate {
     id: `${bridge}-${timeName(onsetTick * TICK_MICROS)}`,
     onsetTick,
     lastActiveTick: onsetTick,
+    restTicks: 0,
     row: 0,
     longestRow: 0,
     entered: false,
@@ -141,7 +144,9 @@ function follow(
     candidate.counts[sensor] = countAxle(candidate.counts[sensor], micros);
     candidate.pulseCount += 1;
   }
+  if (tick.pulses.length > 0) candidate.restTicks = 0;
   if (votes || tick.pulses.length > 0) candidate.lastActiveTick = tick.number;
+  candidate.restTicks = Math.max(candidate.restTicks, tick.number - candidate.lastActiveTick);
   const events: DetectorEvent[] = [];
   if (!candidate.entered && looksLikeTrain(candidate, setting)) {
     candidate.entered = true;
@@ -154,7 +159,10 @@ function follow(
     events.push({ kind: 'entered', candidate, micros: candidate.onsetTick * TICK_MICROS });
   }
   const quietSeconds = ((tick.number - candidate.lastActiveTick) * TICK_MICROS) / MICROS_PER_SECOND;
-  if (quietSeconds > waitSeconds(detector, setting, candidate, tick.speedMs))
+  // Axles may tell that their train has left while the approach of the next is heard; but noise that never paused is
+  // another train on the bridge, whose axles no sensor saw.
+  const rested = candidate.restTicks >= RULE.restTicks;
+  if (rested && quietSeconds > waitSeconds(detector, setting, candidate, tick.speedMs))
     events.push(...leave(detector, setting, candidate));
   return events;
 }

@@ -125,10 +125,10 @@ function findPhases(
 const EDGE_MARGIN_SECONDS = 0.6;
 /** How far from there motion is looked at, s. */
 const EDGE_REACH_SECONDS = 0.9;
-/** The deck is driven plainly from here on; below, one in six last axles was off by more than 0.1 s in simulated passages. */
-const EDGE_STRENGTH = 60;
-/** How far a faint edge and noise may be apart and still speak of one axle, s. */
+/** How far edge and noise may be apart and still speak of one axle, s. */
 const EDGE_APART_SECONDS = 0.3;
+/** The deck is driven plainly from here on; below, one last axle in three was off by more than 0.1 s in simulated passages. */
+const PLAIN_STRENGTH = 30;
 
 /** Noise finds the train, the deck's own motion finds when its first axle came and its last one left. */
 function sharpened(
@@ -151,7 +151,7 @@ function sharpened(
   const off = lastDriven(spans, after, span.offMicros - reach);
   return {
     onMicros: Math.min(onEdge(span.onMicros, on), axles.firstPulse ?? Infinity),
-    offMicros: Math.max(offEdge(span.offMicros, off), axles.lastPulse ?? -Infinity),
+    offMicros: Math.max(offEdge(span.offMicros, off, span.clear), axles.lastPulse ?? -Infinity),
   };
 }
 
@@ -162,12 +162,19 @@ function sharpened(
 function onEdge(byNoise: Micros, byMotion: Edge | null): Micros {
   if (byMotion === null) return byNoise;
   const near = Math.abs(byMotion.micros - byNoise) <= EDGE_APART_SECONDS * MICROS_PER_SECOND;
-  return near || byMotion.strength >= EDGE_STRENGTH ? byMotion.micros : Math.min(byNoise, byMotion.micros);
+  return near ? byMotion.micros : Math.min(byNoise, byMotion.micros);
 }
 
-/** The last axle: a light train may leave the deck all but unmoved, and then noise tells better. */
-function offEdge(byNoise: Micros, byMotion: Edge | null): Micros {
-  return byMotion !== null && byMotion.strength >= EDGE_STRENGTH ? byMotion.micros : byNoise;
+/**
+ * The last axle: what rings in the band of the noise makes it end late, and a light train may leave the deck all but
+ * unmoved. Where the two are far apart and neither is to blame, one of them has not seen the last axle.
+ */
+function offEdge(byNoise: Micros, byMotion: Edge | null, clear: boolean): Micros {
+  if (byMotion === null) return byNoise;
+  const plain = byMotion.strength >= PLAIN_STRENGTH;
+  const near = Math.abs(byMotion.micros - byNoise) <= EDGE_APART_SECONDS * MICROS_PER_SECOND;
+  if (near) return plain || !clear ? byMotion.micros : byNoise;
+  return plain && !clear ? byMotion.micros : Math.max(byNoise, byMotion.micros);
 }
 
 /** Axle sensors settle the phases; noise that goes on far longer than they say is worth a word. */

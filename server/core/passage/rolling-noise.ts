@@ -15,6 +15,8 @@ export interface RollingNoise {
   startMicros: Micros;
   /** Sum over channels of (power / floor), per frame. */
   total: Float64Array;
+  /** Whether the band begins above the modes that ring on; a slow channel has no such band. */
+  clear: boolean;
   /** Power of each channel per frame, (m/s²)². */
   channels: { alongM: number; power: Float64Array; floor: number }[];
 }
@@ -51,8 +53,16 @@ export function rollingNoise(
   const total = new Float64Array(frames);
   for (const { power, floor } of channels) for (let i = 0; i < frames; i++) total[i]! += power[i]! / floor;
   for (let i = 0; i < frames; i++) total[i]! /= channels.length;
-  return { startMicros, total, channels };
+  const clear = used.every((channel) => wantedEdge(bridge, channel) <= highestEdge(channel));
+  return { startMicros, total, clear, channels };
 }
+
+/** Above the third bending mode, which rings on after the last axle, Hz. */
+function wantedEdge(bridge: BridgeDefinition, { sensor }: RecordChannel): number {
+  return RULE.phaseNoiseOverF1 * (spanAt(bridge, sensor.alongM).frequenciesHz?.f1 ?? 0);
+}
+
+const highestEdge = ({ rateHz }: RecordChannel): number => 0.3 * rateHz;
 
 function framePower(
   bridge: BridgeDefinition,
@@ -60,8 +70,7 @@ function framePower(
   startMicros: Micros,
   frames: number,
 ): Float64Array {
-  const f1 = spanAt(bridge, channel.sensor.alongM).frequenciesHz?.f1 ?? 0;
-  const edge = Math.min(Math.max(RULE.phaseNoiseFromHz, RULE.phaseNoiseOverF1 * f1), 0.3 * channel.rateHz);
+  const edge = Math.min(Math.max(RULE.phaseNoiseFromHz, wantedEdge(bridge, channel)), highestEdge(channel));
   const y = zeroPhase(highpass(RULE.noiseOrder / 2, edge, channel.rateHz), channel.x);
   const power = new Float64Array(frames);
   const perFrame = (channel.rateHz * FRAME_MICROS) / MICROS_PER_SECOND;
@@ -77,6 +86,8 @@ function framePower(
 }
 
 export interface NoiseSpan {
+  /** As in `RollingNoise`. */
+  clear: boolean;
   onMicros: Micros;
   offMicros: Micros;
   /** Longest time without a break in which noise was near its level, s. */
@@ -106,6 +117,7 @@ export function noiseSpan(noise: RollingNoise): NoiseSpan | null {
   const on = stepNear(noise.total, first);
   const off = noise.total.length - stepNear(noise.total.toReversed(), noise.total.length - 1 - last);
   return {
+    clear: noise.clear,
     onMicros: noise.startMicros + on * FRAME_MICROS,
     offMicros: noise.startMicros + Math.max(off, on + 1) * FRAME_MICROS,
     ...sustained(smoothed(noise.total, 3).subarray(first, last + 1)),

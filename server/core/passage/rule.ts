@@ -30,6 +30,8 @@ export const RULE = {
   approachTicks: 5,
   /** A passage is over after this much quiet, once no axle is known to be on the bridge. */
   quietSeconds: 1.5,
+  /** No passage is over without this much quiet, in ticks, since its last axle. */
+  restTicks: 5,
   /** Quiet that parts two trains when every axle that came has left, and the longest way between axles of one train. */
   emptySeconds: 0.8,
   bogieDistanceM: 22,

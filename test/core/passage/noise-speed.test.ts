@@ -38,7 +38,7 @@ function noiseOf(speedMs: number, placesM: readonly number[], bogiesM: readonly 
     });
     return { alongM, power, floor: 1e-3 };
   });
-  return { startMicros: START, total: new Float64Array(frames), channels };
+  return { startMicros: START, total: new Float64Array(frames), clear: true, channels };
 }
 
 function speedOf(speedMs: number, placesM: readonly number[], bogiesM = MIXED, seed = 1) {
