@@ -37,17 +37,32 @@ export function lozengeFill(x: number, y: number, r: number, severity: Severity)
 
 /** A lozenge on a canvas; its ground is `paper`. */
 export function drawLozenge(
-  context: CanvasRenderingContext2D,
+  context: CanvasRenderingContext2D | OffscreenCanvasRenderingContext2D,
   at: { x: number; y: number; r: number; severity: Severity },
   colours: { line: string; paper: string },
 ): void {
   const { x, y, r, severity } = at;
+  const lower: [number, number][] = [
+    [x - r, y],
+    [x, y + r],
+    [x + r, y],
+  ];
   context.setLineDash([]);
   context.fillStyle = colours.paper;
-  context.fill(new Path2D(lozengePath(x, y, r)));
+  outline(context, [...lower, [x, y - r]]);
+  context.fill();
   context.fillStyle = colours.line;
   context.strokeStyle = colours.line;
-  const filled = lozengeFill(x, y, r, severity);
-  if (filled) context.fill(new Path2D(filled));
-  context.stroke(new Path2D(lozengePath(x, y, r)));
+  if (severity === 'IAL') context.fill();
+  context.stroke();
+  if (severity !== 'IL') return;
+  outline(context, lower);
+  context.fill();
+}
+
+/** Drawn point by point: live strips draw a hundred of them a frame, and text of an SVG path is slow to read. */
+function outline(context: CanvasPath & CanvasDrawPath, corners: readonly (readonly [number, number])[]): void {
+  context.beginPath();
+  for (const [x, y] of corners) context.lineTo(x, y);
+  context.closePath();
 }

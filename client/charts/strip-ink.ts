@@ -32,10 +32,17 @@ export interface StripFrame {
   newestMicros: Micros;
   axles: number;
   zone: string;
+  still: StillLayer;
+}
+
+/** What stays while lanes and ranges stay, drawn once: dashed limits, scales and names take longer than the traces. */
+export interface StillLayer {
+  key: string;
+  canvas: OffscreenCanvas | null;
 }
 
 interface Sheet {
-  context: CanvasRenderingContext2D;
+  context: CanvasRenderingContext2D | OffscreenCanvasRenderingContext2D;
   left: number;
   right: number;
   bottom: number;
@@ -44,12 +51,12 @@ interface Sheet {
   y: (lane: number, value: number) => number;
 }
 
-function sheetOf(u: uPlot, frame: StripFrame): Sheet {
+function sheetOf(u: uPlot, frame: StripFrame, context: Sheet['context'] = u.ctx): Sheet {
   const { ratio, edge, windowMicros } = frame;
   const left = u.bbox.left / ratio;
   const width = u.bbox.width / ratio;
   return {
-    context: u.ctx,
+    context,
     left,
     right: left + width,
     bottom: (u.bbox.top + u.bbox.height) / ratio,
@@ -63,7 +70,7 @@ function sheetOf(u: uPlot, frame: StripFrame): Sheet {
   };
 }
 
-/** Grid, limits and places without samples, under the traces. */
+/** Grid, places without samples, and all that stays, under the traces. */
 export function drawBehind(u: uPlot, frame: StripFrame): void {
   const sheet = sheetOf(u, frame);
   const { context, left, right, bottom } = sheet;
@@ -73,8 +80,39 @@ export function drawBehind(u: uPlot, frame: StripFrame): void {
   context.lineWidth = 0.7;
   context.strokeStyle = ink.grid;
   for (const at of seconds(frame, right - left)) stroke(context, sheet.x(at), 4, sheet.x(at), bottom);
+  frame.lanes.forEach((_, i) => drawGaps(sheet, frame, i));
+  context.restore();
+  const still = stillOf(u, frame);
+  if (still !== null) context.drawImage(still, 0, 0);
+}
+
+/** The layer as it is, or drawn anew where something of it has changed; null where there is no place to draw it. */
+function stillOf(u: uPlot, frame: StripFrame): OffscreenCanvas | null {
+  const { still, ink, ratio, lanes, ranges } = frame;
+  const { width, height } = u.ctx.canvas;
+  const named = lanes.map(({ sensor, top }) => [sensor.id, top]);
+  const fonts = document.fonts.check(`12px ${ink.narrow}`);
+  const key = JSON.stringify([width, height, ratio, named, ranges, ink, fonts]);
+  if (key === still.key) return still.canvas;
+  const canvas = new OffscreenCanvas(width, height);
+  const context = canvas.getContext('2d');
+  if (context === null) return null;
+  context.scale(ratio, ratio);
+  context.lineJoin = 'round';
+  drawStill(sheetOf(u, frame, context), frame);
+  still.key = key;
+  still.canvas = canvas;
+  return canvas;
+}
+
+/** Ticks and limits across the lanes; scales, names and marks of limits in the margins. */
+function drawStill(sheet: Sheet, frame: StripFrame): void {
+  const { context, left, right } = sheet;
+  const { ink } = frame;
+  const narrow = sheet.width < 560;
+  const write = writer(context, ink);
+  const labelled = frame.lanes.findIndex(({ limits }) => limits.length > 0);
   frame.lanes.forEach((lane, i) => {
-    drawGaps(sheet, frame, i);
     context.lineWidth = 0.7;
     for (const tick of yTicks(frame, i)) {
       context.strokeStyle = tick === 0 ? ink.rule : ink.grid;
@@ -86,11 +124,13 @@ export function drawBehind(u: uPlot, frame: StripFrame): void {
       for (const sign of [1, -1]) stroke(context, left, sheet.y(i, sign * value), right, sheet.y(i, sign * value));
     }
     context.setLineDash([]);
+    drawAxis(sheet, frame, i, write);
+    drawName(sheet, lane, ink, write, narrow);
+    if (lane.kind === 'acceleration') drawLimitMarks(sheet, frame, i, i === labelled && !narrow, write);
   });
-  context.restore();
 }
 
-/** Labels, what is above the alert limit, peaks and margins, over the traces. */
+/** What is above the alert limit, peaks and times, over the traces. */
 export function drawOver(u: uPlot, frame: StripFrame): void {
   const sheet = sheetOf(u, frame);
   const { context, left, right, bottom } = sheet;
@@ -103,12 +143,8 @@ export function drawOver(u: uPlot, frame: StripFrame): void {
   const labelled = frame.lanes.findIndex(({ limits }) => limits.length > 0);
   frame.lanes.forEach((lane, i) => {
     drawAbove(sheet, frame, i);
-    drawAxis(sheet, frame, i, write);
-    drawName(sheet, lane, ink, write, narrow);
-    if (lane.kind === 'acceleration') {
-      drawLimitMarks(sheet, frame, i, i === labelled && !narrow, write);
-      drawPeak(sheet, frame, i, i === labelled && !narrow, write);
-    } else drawCount(sheet, frame, i, write);
+    if (lane.kind === 'acceleration') drawPeak(sheet, frame, i, i === labelled && !narrow, write);
+    else drawCount(sheet, frame, i, write);
   });
   context.strokeStyle = ink.edge;
   context.lineWidth = 0.95;
@@ -130,7 +166,7 @@ type Write = (
   size?: number,
 ) => void;
 
-function writer(context: CanvasRenderingContext2D, ink: Ink): Write {
+function writer(context: Sheet['context'], ink: Ink): Write {
   context.textBaseline = 'alphabetic';
   return (text, x, y, colour, align = 'left', weight = 400, size = 12) => {
     context.font = `${weight} ${size}px ${ink.narrow}`;
@@ -190,13 +226,17 @@ function drawAbove(sheet: Sheet, frame: StripFrame, index: number): void {
   const { context } = sheet;
   context.strokeStyle = frame.ink.signal;
   context.lineWidth = 1.9;
+  // One path: under a train there are thousands of them, and a stroke each would take the frame.
+  context.beginPath();
   for (let i = 0; i < 2 * frame.count; i++) {
     const value = trace[i];
     if (value == null || Math.abs(value) <= mildest) continue;
     const x = sheet.x((frame.firstColumn + Math.floor(i / 2) + (i % 2 === 0 ? 0.25 : 0.75)) * frame.columnMicros);
     if (x < sheet.left || x > sheet.right) continue;
-    stroke(context, x, sheet.y(index, Math.sign(value) * mildest), x, sheet.y(index, value));
+    context.moveTo(x, sheet.y(index, Math.sign(value) * mildest));
+    context.lineTo(x, sheet.y(index, value));
   }
+  context.stroke();
 }
 
 function drawLimitMarks(sheet: Sheet, frame: StripFrame, index: number, named: boolean, write: Write): void {
@@ -329,7 +369,7 @@ function drawTimes(sheet: Sheet, frame: StripFrame, write: Write): void {
   write('UTC', right + 18, bottom + 17, ink.ink3);
 }
 
-function stroke(context: CanvasRenderingContext2D, x1: number, y1: number, x2: number, y2: number): void {
+function stroke(context: Sheet['context'], x1: number, y1: number, x2: number, y2: number): void {
   context.beginPath();
   context.moveTo(x1, y1);
   context.lineTo(x2, y2);

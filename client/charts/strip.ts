@@ -160,7 +160,8 @@ export function mountStrips(host: HTMLElement, firstHeight: number, source: Stri
     if (handle !== 0) return;
     handle = requestAnimationFrame(() => {
       odd = !odd;
-      if (odd && !dirty) {
+      // While time runs, new samples wait for the next frame with all the rest.
+      if (odd && (source.running() || !dirty)) {
         handle = 0;
         next();
       } else redraw();
@@ -276,6 +277,7 @@ function emptyFrame(source: StripSource, ink: Ink): StripFrame {
     newestMicros: 0,
     axles: 0,
     zone: source.zone(),
+    still: { key: '', canvas: null },
   };
 }
 

@@ -50,7 +50,7 @@ async function publish(bench: BenchServer, signal: AbortSignal): Promise<void> {
 }
 
 interface Frame {
-  /** Of all tasks of the main thread from this frame to the next, and of its scripts alone, ms. */
+  /** Of all tasks of the main thread from this frame to the next, and of its scripts alone: time of the processor, ms. */
   workMs: number;
   scriptMs: number;
 }
@@ -60,12 +60,14 @@ interface TraceEvent {
   ph: string;
   ts: number;
   dur?: number;
+  /** What of it the thread really ran: what other programs of the machine took is not in it. */
+  tdur?: number;
   pid: number;
   tid: number;
   args?: { name?: string };
 }
 
-const CATEGORIES = ['toplevel', 'devtools.timeline', 'disabled-by-default-devtools.timeline', '__metadata'];
+const CATEGORIES = ['devtools.timeline', 'disabled-by-default-devtools.timeline', '__metadata'];
 
 async function tracedFrames(session: CDPSession, forMs: number): Promise<Frame[]> {
   const events: TraceEvent[] = [];
@@ -81,7 +83,7 @@ async function tracedFrames(session: CDPSession, forMs: number): Promise<Frame[]
   return framesOf(events);
 }
 
-/** What the main thread of the page did between one beginning of a frame and the next. */
+/** What the main thread of the page did from one firing of animation frames to the next: all tasks, samples taken in too. */
 function framesOf(events: readonly TraceEvent[]): Frame[] {
   const threads = new Map<string, TraceEvent[]>();
   const own = new Set(
@@ -98,29 +100,32 @@ function framesOf(events: readonly TraceEvent[]): Frame[] {
   }
   // Chromium keeps a spare renderer; the page's is the one that makes frames.
   const busiest = [...threads.values()].sort((a, b) => begins(b).length - begins(a).length)[0] ?? [];
-  const starts = begins(busiest);
-  const work = busiest.filter(({ name, ph }) => ph === 'X' && name === 'RunTask');
-  const script = busiest.filter(({ name, ph }) => ph === 'X' && (name === 'FunctionCall' || name === 'EvaluateScript'));
+  // The task in which a frame fires begins a little before it.
+  const tasks = busiest.filter(({ name, ph }) => ph === 'X' && name === 'RunTask').sort((a, b) => a.ts - b.ts);
+  const starts = [...new Set(begins(busiest).map((at) => tasks.findLast(({ ts }) => ts <= at)?.ts ?? at))];
+  const script = busiest
+    .filter(({ name, ph }) => ph === 'X' && (name === 'FunctionCall' || name === 'EvaluateScript'))
+    .sort((a, b) => a.ts - b.ts);
   return starts.slice(0, -1).map((start, i) => ({
-    workMs: within(work, start, starts[i + 1]!),
+    workMs: within(tasks, start, starts[i + 1]!),
     scriptMs: within(script, start, starts[i + 1]!),
   }));
 }
 
 const begins = (events: readonly TraceEvent[]): number[] =>
   events
-    .filter(({ name }) => name === 'BeginMainThreadFrame')
+    .filter(({ name }) => name === 'FireAnimationFrame')
     .map(({ ts }) => ts)
     .sort((a, b) => a - b);
 
-/** Events of one kind do not overlap but may be nested: only the outermost count. */
+/** Events of one kind may be nested: only the outermost count, for the frame in which they begin. */
 function within(events: readonly TraceEvent[], from: number, to: number): number {
   let sum = 0;
   let end = -Infinity;
-  for (const { ts, dur = 0 } of events.filter((event) => event.ts + (event.dur ?? 0) > from && event.ts < to)) {
-    if (ts < end) continue;
+  for (const { ts, dur = 0, tdur = dur } of events) {
+    if (ts < from || ts >= to || ts < end) continue;
     end = ts + dur;
-    sum += Math.min(end, to) - Math.max(ts, from);
+    sum += tdur;
   }
   return sum / 1000;
 }
