@@ -49,6 +49,8 @@ async function client(options: Parameters<typeof connectAsync>[1] = {}): Promise
 
 const codes = (): string[] => complaints.map(({ code }) => code);
 
+const closing = (sender: MqttClient): Promise<void> => new Promise((resolve) => sender.once('close', resolve));
+
 async function until(holds: () => boolean): Promise<void> {
   while (!holds()) await new Promise((resolve) => setTimeout(resolve, 5));
 }
@@ -71,7 +73,7 @@ describe('the embedded broker', () => {
 
   it('drops a client whose message could not be kept, so that it comes again', async () => {
     let tries = 0;
-    take = () => (++tries < 3 ? Promise.reject(new SpanbeatError({ code: 'DISK_FULL' })) : Promise.resolve());
+    take = () => (++tries < 3 ? Promise.reject(new SpanbeatError({ code: 'DISK_FULL', detail: 'told to fail' })) : Promise.resolve());
     const sender = await client();
     await sender.publishAsync('t', 'again', { qos: 1 });
     expect(taken.map(({ payload }) => Buffer.from(payload).toString())).toEqual(['again', 'again', 'again']);
@@ -119,7 +121,7 @@ describe('the embedded broker', () => {
 
   it('lets nobody else publish alarms', async () => {
     const sender = await client({ reconnectPeriod: 0 });
-    const closed = once(sender, 'close');
+    const closed = closing(sender);
     sender.publish('spanbeat/b/alarms', '{}', { qos: 1 }, () => undefined);
     await closed;
     expect(taken).toEqual([]);
@@ -149,7 +151,7 @@ describe('the embedded broker', () => {
 
   it('stops with clients connected, twice if asked, and frees its port', async () => {
     const sender = await client({ reconnectPeriod: 0 });
-    const closed = once(sender, 'close');
+    const closed = closing(sender);
     await Promise.all([broker.stop(), broker.stop(), closed]);
     expect(broker.status().connected).toBe(false);
     const socket = connectTcp(Number(new URL(url).port), '127.0.0.1');

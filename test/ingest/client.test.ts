@@ -143,7 +143,7 @@ describe.skipIf(!available('mosquitto'))('the client of an outside broker', () =
     let refusals = 3;
     const { taken } = clientOf({ url: broker.url }, ({ payload }) =>
       Buffer.from(payload).toString() === 'x' && refusals-- > 0
-        ? Promise.reject(new SpanbeatError({ code: 'DISK_FULL' }))
+        ? Promise.reject(new SpanbeatError({ code: 'DISK_FULL', detail: 'told to fail' }))
         : Promise.resolve(),
     );
     const sender = await senderTo(broker);
