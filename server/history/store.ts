@@ -84,7 +84,8 @@ export interface History {
   pendingWrites(): number;
   /**
    * Null where there is room, else resolves when there is: whoever brings data waits for it before acknowledging more, so
-   * that a disk that is slow, or refuses, slows the loggers and does not fill the memory. Alarms are raised all the same.
+   * that a disk that is slow slows the loggers and does not fill the memory. Where it refuses for long, the loggers' blocks
+   * stay with them or their broker, and no new alarm is raised until it writes again; the page says so (STORE_WRITE).
    */
   room(): Promise<void> | null;
 

@@ -73,7 +73,10 @@ describe('the embedded broker', () => {
 
   it('drops a client whose message could not be kept, so that it comes again', async () => {
     let tries = 0;
-    take = () => (++tries < 3 ? Promise.reject(new SpanbeatError({ code: 'DISK_FULL', detail: 'told to fail' })) : Promise.resolve());
+    take = () =>
+      ++tries < 3
+        ? Promise.reject(new SpanbeatError({ code: 'DISK_FULL', detail: 'told to fail' }))
+        : Promise.resolve();
     const sender = await client();
     await sender.publishAsync('t', 'again', { qos: 1 });
     expect(taken.map(({ payload }) => Buffer.from(payload).toString())).toEqual(['again', 'again', 'again']);
