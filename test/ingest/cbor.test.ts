@@ -144,7 +144,9 @@ describe('decodeCbor', () => {
   });
 
   it('agrees with an independent encoder on values of all kinds', () => {
-    const leaf = fc.oneof(fc.integer(), fc.double(), fc.string({ unit: 'grapheme' }), fc.boolean(), fc.constant(null));
+    // That encoder writes −0 as the integer 0.
+    const number = fc.double().map((value) => (value === 0 ? 0 : value));
+    const leaf = fc.oneof(fc.integer(), number, fc.string({ unit: 'grapheme' }), fc.boolean(), fc.constant(null));
     const maps = fc.dictionary(fc.string(), fc.oneof(leaf, fc.array(fc.string(), { maxLength: 5 })), { maxKeys: 10 });
     fc.assert(
       fc.property(maps, (value) => {
