@@ -14,6 +14,7 @@ const FINE_STEPS = 10;
 /** What rises more slowly than this is no bogie passing but the train as a whole: frames at least, and share of the passage. */
 const SLOW_FRAMES = 100;
 const SLOW_SHARE = 1 / 8;
+const SHORTEST_MICROS = 400_000;
 /** Two sensors give one delay, which nothing confirms. */
 const SENSORS_LEAST = 3;
 /** The aligned traces must hold at least this share of the power of the single ones, beyond what chance gives. */
@@ -41,9 +42,9 @@ export function noiseSpeed(noise: RollingNoise, onMicros: Micros, offMicros: Mic
   if (new Set(places).size < 2 || spreadM < 3)
     return none('no axle sensors, and the deck sensors are too close together');
   if (places.length < SENSORS_LEAST) return none('no axle sensors, and fewer than three deck sensors to compare');
+  if (offMicros - onMicros < SHORTEST_MICROS) return none('the passage is too short for a speed from noise');
   const traces = tracesOf(noise, onMicros, offMicros);
   const seconds = (traces[0]!.y.length * FRAME_MICROS) / MICROS_PER_SECOND;
-  if (seconds < 0.6) return none('the passage is too short for a speed from noise');
   const best = bestSlowness(traces, seconds, spreadM);
   if (best === null) return none('the deck sensors do not hear the train one after the other');
   if (best === 'ambiguous') return none('two speeds fit the noise at the deck sensors about equally well');

@@ -104,7 +104,7 @@ function sharpened(
  * The first axle: the approach of a train is heard before it comes, so the deck's motion is believed also where it is
  * faint, unless the two are so far apart that one of them has not seen the first axle.
  */
-function onEdge(byNoise: Micros, byMotion: Edge | null): Micros {
+export function onEdge(byNoise: Micros, byMotion: Edge | null): Micros {
   if (byMotion === null) return byNoise;
   const near = Math.abs(byMotion.micros - byNoise) <= EDGE_APART_SECONDS * MICROS_PER_SECOND;
   return near ? byMotion.micros : Math.min(byNoise, byMotion.micros);
@@ -114,7 +114,7 @@ function onEdge(byNoise: Micros, byMotion: Edge | null): Micros {
  * The last axle: what rings in the band of the noise makes it end late, and a light train may leave the deck all but
  * unmoved. Where the two are far apart and neither is to blame, one of them has not seen the last axle.
  */
-function offEdge(byNoise: Micros, byMotion: Edge | null, clear: boolean): Micros {
+export function offEdge(byNoise: Micros, byMotion: Edge | null, clear: boolean): Micros {
   if (byMotion === null) return byNoise;
   const plain = byMotion.strength >= PLAIN_STRENGTH;
   const near = Math.abs(byMotion.micros - byNoise) <= EDGE_APART_SECONDS * MICROS_PER_SECOND;

@@ -71,6 +71,38 @@ describe('trains on two tracks at once', () => {
     expect(passage!.axles).toHaveLength(16);
   });
 
+  it('are counted also where each track has one gauge, and then neither speed nor direction is known', () => {
+    const sensors = twoTracks.sensors.filter(({ id }) => id !== 'S2' && id !== 'S4');
+    const [passage] = passagesOn(
+      { ...twoTracks, sensors },
+      60,
+      crossing(20, 'regional multiple unit', 30, { track: 0 }),
+      crossing(20.6, 'light engine', 25, { track: 1, direction: 'falling' }),
+    );
+    expect(passage!.axleCount).toMatchObject({ value: 16, quality: 'usable' });
+    expect(passage!.notes.join()).toMatch(/2 trains at once: 12 axles at unknown speed; 4 axles at unknown speed/);
+    expect(passage!.phases.foundBy).toBe('wheel-rail noise');
+  });
+
+  it('are not made of one train and a gauge that speaks alone where its neighbour listens', () => {
+    const { channels } = simulate({
+      definition: twoTracks,
+      parameters: bridgeParameters(twoTracks),
+      seed: 42,
+      fromMicros: FROM,
+      toMicros: at(40),
+      events: [crossing(20, 'light engine', 30, { track: 0 })],
+    });
+    const stray = channels.find(({ sensor }) => sensor === 'S3')!;
+    for (const second of [20.3, 21.1]) {
+      const centre = Math.round(second * stray.rateHz);
+      for (let k = -8; k <= 8; k++) stray.samples[centre + k]! += 80 * Math.exp(-((k / 4) ** 2));
+    }
+    const [window] = runPipeline(twoTracks, blocksOf(twoTracks.id, channels)).passages;
+    expect(window!.passage.axleCount).toMatchObject({ value: 4, quality: 'good' });
+    expect(window!.passage.notes).toContain('only axle sensor S3 saw the train: not believed');
+  });
+
   it('leave the other track alone when only one is used', () => {
     const [passage] = passagesOn(twoTracks, 60, crossing(20, 'light engine', 30, { track: 1 }));
     expect(passage!.axleCount).toMatchObject({ value: 4, quality: 'good' });
@@ -163,6 +195,23 @@ describe('the edge of forced motion', () => {
     expect(Math.abs(edge - at(4)) / 1e6).toBeLessThan(0.1);
   });
 
+  it('is that of the span that was driven last, or first, of several', () => {
+    const late = arrangeRecord(bridge, windowsOf({ A1: motion(3, 0.5), A2: motion(4, 0.9) }), FROM, at(10)).map(
+      (channel) => ({ ...channel, startMicros: channel.startMicros + 400_000 }),
+    );
+    const free = { fromMicros: at(5.2), toMicros: at(8) };
+    const [one, other] = [record, late].map((span) => lastDriven([span], free, at(3))!.micros);
+    expect(lastDriven([record, late], free, at(3))!.micros).toBe(Math.max(one!, other!));
+    expect(lastDriven([late, record, []], free, at(3))!.micros).toBe(Math.max(one!, other!));
+    const backwards = [record, late].map((span) =>
+      span.map((channel) => ({ ...channel, x: channel.x.toReversed() as Float64Array })),
+    );
+    const before = { fromMicros: at(1), toMicros: at(4.4) };
+    const [first, second] = backwards.map((span) => firstDriven([span], before, at(7))!.micros);
+    expect(firstDriven(backwards, before, at(7))!.micros).toBe(Math.min(first!, second!));
+    expect(firstDriven(backwards.toReversed(), before, at(7))!.micros).toBe(Math.min(first!, second!));
+  });
+
   it('says how plainly the deck was driven: more so by a heavier train', () => {
     const [light, heavy] = [1, 6].map((drive) => {
       const own = arrangeRecord(
@@ -181,6 +230,23 @@ describe('the edge of forced motion', () => {
     expect(lastDriven([record], { fromMicros: at(6), toMicros: at(9) }, at(4.5))).toBeNull();
     expect(lastDriven([record], { fromMicros: at(4.7), toMicros: at(5) }, at(3))).toBeNull();
     expect(firstDriven([[]], { fromMicros: at(0), toMicros: at(3) }, at(5))).toBeNull();
+  });
+});
+
+describe('a bridge without a deck accelerometer', () => {
+  it('has passages by its axle sensors; what it cannot measure says why', () => {
+    const definition = plainBridge({ sensors: [gauge('S1', 0), gauge('S2', 20)] });
+    const [passage] = passagesOn(definition, 40, crossing(20, 'light engine', 30));
+    expect(passage!.axleCount.value).toBe(4);
+    expect(passage!.peak).toMatchObject({
+      measured: { value: null, reason: 'no deck channel with samples' },
+      sensor: null,
+      micros: null,
+      severity: null,
+    });
+    expect(passage!.rawPeak.value).toBeNull();
+    expect(passage!.f1Hz.value).toBeNull();
+    expect(passage!.quality).toBe('poor');
   });
 });
 

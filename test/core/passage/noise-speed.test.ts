@@ -92,6 +92,11 @@ describe('speed from wheel-rail noise at accelerometers', () => {
     const silent = noiseOf(20, [5, 20, 35], [], 1);
     expect(noiseSpeed(silent, START + 1e6, START + 3e6).speedMs.value).toBeNull();
     const short = noiseOf(20, [5, 20, 35], [0], 1);
-    expect(noiseSpeed(short, START, START + 1000).speedMs.value).toBeNull();
+    expect(noiseSpeed(short, START, START + 300_000).speedMs).toMatchObject({
+      value: null,
+      reason: 'the passage is too short for a speed from noise',
+    });
+    const silence = { ...silent, channels: silent.channels.map((one) => ({ ...one, power: one.power.map(() => 0) })) };
+    expect(noiseSpeed(silence, START + 1e6, START + 3e6).speedMs.value).toBeNull();
   });
 });
