@@ -204,7 +204,7 @@ describe('the edge of forced motion', () => {
     expect(lastDriven([record, late], free, at(3))!.micros).toBe(Math.max(one!, other!));
     expect(lastDriven([late, record, []], free, at(3))!.micros).toBe(Math.max(one!, other!));
     const backwards = [record, late].map((span) =>
-      span.map((channel) => ({ ...channel, x: channel.x.toReversed() as Float64Array })),
+      span.map((channel) => ({ ...channel, x: channel.x.toReversed() })),
     );
     const before = { fromMicros: at(1), toMicros: at(4.4) };
     const [first, second] = backwards.map((span) => firstDriven([span], before, at(7))!.micros);
