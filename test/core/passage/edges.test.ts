@@ -203,9 +203,7 @@ describe('the edge of forced motion', () => {
     const [one, other] = [record, late].map((span) => lastDriven([span], free, at(3))!.micros);
     expect(lastDriven([record, late], free, at(3))!.micros).toBe(Math.max(one!, other!));
     expect(lastDriven([late, record, []], free, at(3))!.micros).toBe(Math.max(one!, other!));
-    const backwards = [record, late].map((span) =>
-      span.map((channel) => ({ ...channel, x: channel.x.toReversed() })),
-    );
+    const backwards = [record, late].map((span) => span.map((channel) => ({ ...channel, x: channel.x.toReversed() })));
     const before = { fromMicros: at(1), toMicros: at(4.4) };
     const [first, second] = backwards.map((span) => firstDriven([span], before, at(7))!.micros);
     expect(firstDriven(backwards, before, at(7))!.micros).toBe(Math.min(first!, second!));
