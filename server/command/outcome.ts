@@ -28,6 +28,7 @@ const ENVIRONMENT: ReadonlySet<ErrorCode> = new Set<ErrorCode>([
   'PORT_IN_USE',
   'PORT_REFUSED',
   'DISK_FULL',
+  'JOURNAL_WRITE',
   'STORE_CORRUPT',
   'STORE_LOCKED',
   'STORE_NEWER',

@@ -73,12 +73,18 @@ const NAME = /^(\d{10})\.journal$/;
  *
  * Each opening, and each failed write, begins a new segment, so that a position that was handed out is never used for
  * another record. A failed write rejects everything that waits; the next append tries again.
+ *
+ * @throws SpanbeatError JOURNAL_WRITE or DISK_FULL where the folder cannot be used
  */
 export async function openJournal(folder: string, options: JournalOptions): Promise<Journal> {
   const files = options.files ?? nodeFiles;
-  await files.makeFolder(folder);
-  const segments = await findSegments(folder, files, options);
-  return new SegmentJournal(folder, segments, files, options);
+  try {
+    await files.makeFolder(folder);
+    const segments = await findSegments(folder, files, options);
+    return new SegmentJournal(folder, segments, files, options);
+  } catch (error) {
+    throw writeFailure(error, folder);
+  }
 }
 
 interface Segment {
@@ -281,7 +287,7 @@ class SegmentJournal implements Journal {
         await this.#files.remove(this.#path(current.number)).catch(() => undefined);
       }
     }
-    const failure = writeFailure(error);
+    const failure = writeFailure(error, this.#folder);
     if (!this.#full) this.#options.report({ code: failure.code, where: this.#folder, detail: told(error) });
     this.#full = true;
     for (const { reject } of refused) reject(failure);
@@ -305,13 +311,16 @@ class SegmentJournal implements Journal {
     }
   }
 
-  /** Null where it was trimmed meanwhile. */
-  async #readSegment(segment: Segment): Promise<Buffer | null> {
+  /** Null where it was trimmed meanwhile, or where the disk no longer gives it: that must not cost the others. */
+  async #readSegment({ number, bytes }: Segment): Promise<Buffer | null> {
     try {
-      return await this.#files.read(this.#path(segment.number), segment.bytes);
+      return await this.#files.read(this.#path(number), bytes);
     } catch (error) {
       if (errno(error) === 'ENOENT') return null;
-      throw error;
+      if (errno(error) !== 'EIO') throw error;
+      const detail = `the disk does not give it: ${told(error)}`;
+      this.#options.report({ code: 'JOURNAL_CORRUPT', where: name(number), detail });
+      return null;
     }
   }
 
@@ -339,13 +348,29 @@ async function findSegments(folder: string, files: JournalFiles, { report }: Jou
   const segments: Segment[] = [];
   for (const number of numbers) {
     const path = join(folder, name(number));
-    const header = readSegmentHeader(await files.read(path, SEGMENT_HEADER_BYTES));
-    // A damaged header costs only the time: the records are found by their marks.
-    const begunMicros = header ?? segments.at(-1)?.begunMicros ?? 0;
-    const bytes = number === numbers.at(-1) ? await cutTail(path, files, report) : await files.size(path);
+    const { header, bytes } = await surveyed(path, number === numbers.at(-1), files, report);
+    // A damaged header costs only the time, which the number tells to the second; the records are found by their marks.
+    const begunMicros = header ?? Math.max(segments.at(-1)?.begunMicros ?? 0, number * MICROS_PER_SECOND);
     segments.push({ number, begunMicros, bytes });
   }
   return segments;
+}
+
+/** A segment that the disk no longer gives must not keep the others from being used; reading leaves it out. */
+async function surveyed(
+  path: string,
+  newest: boolean,
+  files: JournalFiles,
+  report: Report,
+): Promise<{ header: Micros | null; bytes: number }> {
+  try {
+    const header = readSegmentHeader(await files.read(path, SEGMENT_HEADER_BYTES));
+    return { header, bytes: newest ? await cutTail(path, files, report) : await files.size(path) };
+  } catch (error) {
+    if (errno(error) !== 'EIO') throw error;
+    report({ code: 'JOURNAL_CORRUPT', where: path, detail: `the disk does not give it: ${told(error)}` });
+    return { header: null, bytes: await files.size(path) };
+  }
 }
 
 /** Cuts off bytes at the end that are no record; returns how many are left. */
@@ -391,9 +416,9 @@ async function writeAll(file: OpenFile, bytes: Uint8Array, position: number): Pr
   }
 }
 
-function writeFailure(error: unknown): SpanbeatError {
+function writeFailure(error: unknown, where: string): SpanbeatError {
   const code: ErrorCode = ['ENOSPC', 'EDQUOT'].includes(errno(error) ?? '') ? 'DISK_FULL' : 'JOURNAL_WRITE';
-  return new SpanbeatError({ code, detail: told(error) });
+  return new SpanbeatError({ code, where, detail: told(error) });
 }
 
 const errno = (error: unknown): string | undefined =>

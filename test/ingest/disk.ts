@@ -23,6 +23,16 @@ export class Disk implements JournalFiles {
   fault: { step: number; code: string; forever?: boolean } | null = null;
   /** Held before each sync ends; for tests that look in between. */
   beforeSync: () => Promise<void> = () => Promise.resolve();
+  /** Files that can no longer be read, as on a bad sector. */
+  readonly unreadable = new Set<string>();
+
+  /** Lets no file be removed. */
+  keepsFiles = false;
+
+  /** Puts a file there as an earlier life left it. */
+  put(path: string, bytes: Buffer): void {
+    this.nodes.set(path, { bytes, synced: Buffer.from(bytes), named: true });
+  }
 
   /** Cuts the power: of what was not synced, each file keeps a random part of its newest bytes, or its name is lost. */
   cut(random: Random): void {
@@ -84,6 +94,7 @@ export class Disk implements JournalFiles {
   read(path: string, most?: number): Promise<Buffer> {
     const node = this.nodes.get(path);
     if (node === undefined) return Promise.reject(failure('ENOENT'));
+    if (this.unreadable.has(path)) return Promise.reject(failure('EIO'));
     return Promise.resolve(Buffer.from(node.bytes.subarray(0, most)));
   }
 
@@ -106,6 +117,7 @@ export class Disk implements JournalFiles {
 
   async remove(path: string): Promise<void> {
     await this.#step();
+    if (this.keepsFiles) throw failure('EPERM');
     this.nodes.delete(path);
   }
 
