@@ -1,7 +1,7 @@
 import { createServer, type AddressInfo, type Server, type Socket } from 'node:net';
 import { Aedes, type AedesPublishPacket, type Client, type PublishPacket } from 'aedes';
 import { BLOCK_LIMITS } from '#core/contract/block.ts';
-import { SpanbeatError } from '#core/contract/errors.ts';
+import { SpanbeatError, type Complaint } from '#core/contract/errors.ts';
 import type { Report } from '../report.ts';
 import type { Link, Take } from './link.ts';
 import { PacketFollower } from './packet-follower.ts';
@@ -56,8 +56,10 @@ export async function startBroker(options: EmbeddedOptions): Promise<Link> {
     authorizeSubscribe: limitSubscriptions(),
     authorizeForward: forwardTo(report),
   });
-  broker.on('connectionError', (_client, error) => {
-    report({ code: 'CLIENT_REFUSED', where: 'embedded broker', detail: error.message.slice(0, 200) });
+  broker.on('connectionError', (_client, { message }) => refuse(report, message));
+  broker.on('clientError', (client, error) => {
+    // What our own steps refused has been told, and a connection that breaks off is no refusal.
+    if (!(error instanceof SpanbeatError) && !('syscall' in error)) refuse(report, `${client.id}: ${error.message}`);
   });
 
   const sockets = new Set<Socket>();
@@ -68,6 +70,9 @@ export async function startBroker(options: EmbeddedOptions): Promise<Link> {
     broker.handle(socket);
   });
   server.maxConnections = LIMIT_CLIENTS;
+  server.on('drop', () => {
+    refuse(report, `one more than ${LIMIT_CLIENTS} clients at a time`);
+  });
   try {
     await listen(server, host, settings.port);
   } catch (error) {
@@ -96,9 +101,8 @@ function admit(
   next: (error?: Error | null) => void,
 ): void {
   if (packet.topic.startsWith('$') || isReserved(packet.topic)) {
-    const detail = `${client?.id ?? 'a client'} published on ${packet.topic.slice(0, 200)}, which is the server's own`;
-    report({ code: 'CLIENT_REFUSED', where: 'embedded broker', detail });
-    next(new Error('reserved topic'));
+    const detail = `${client?.id ?? 'a client'} published on ${packet.topic}, which is the server's own`;
+    next(new SpanbeatError(refuse(report, detail)));
     return;
   }
   const payload = typeof packet.payload === 'string' ? Buffer.from(packet.payload) : packet.payload;
@@ -108,6 +112,12 @@ function admit(
     () => next(null),
     (error: unknown) => next(error instanceof Error ? error : new Error(String(error))),
   );
+}
+
+function refuse(report: Report, detail: string): Complaint {
+  const complaint: Complaint = { code: 'CLIENT_REFUSED', where: 'embedded broker', detail: detail.slice(0, 300) };
+  report(complaint);
+  return complaint;
 }
 
 function limitSubscriptions(): NonNullable<ConstructorParameters<typeof Aedes>[0]>['authorizeSubscribe'] & object {
@@ -159,6 +169,9 @@ function limitPackets(socket: Socket, report: Report): void {
   };
 }
 
+/** What the system answers where an address or port is not for us. */
+const REFUSED_ADDRESS: ReadonlySet<string> = new Set(['EACCES', 'EADDRNOTAVAIL', 'ENOTFOUND', 'EAI_AGAIN']);
+
 async function listen(server: Server, host: string, demanded: number | undefined): Promise<void> {
   const first = demanded ?? DEFAULT_PORT;
   const last = demanded === undefined ? first + PORTS_TRIED - 1 : first;
@@ -173,7 +186,15 @@ async function listen(server: Server, host: string, demanded: number | undefined
       });
       return;
     } catch (error) {
-      if ((error as NodeJS.ErrnoException).code !== 'EADDRINUSE') throw error;
+      const code = (error as NodeJS.ErrnoException).code ?? '';
+      if (REFUSED_ADDRESS.has(code)) {
+        throw new SpanbeatError({
+          code: 'PORT_REFUSED',
+          where: `${host}:${port}`,
+          detail: `the system answers ${code}`,
+        });
+      }
+      if (code !== 'EADDRINUSE') throw error;
     }
   }
   const where = first === last ? `${host}:${first}` : `${host}:${first} to ${last}`;
