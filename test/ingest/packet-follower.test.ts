@@ -1,4 +1,0 @@
-import fc from 'fast-check';
-import { generate } from 'mqtt-packet';
-import { describe, expect, it } from 'vitest';
-import { PacketFollower } from '../../server/ingest/packet-follower.ts';
