@@ -44,6 +44,7 @@ const WINDOW_BYTES = 512 * 1024;
 export async function startBroker(options: EmbeddedOptions): Promise<Link> {
   const { settings, report } = options;
   const host = settings.host ?? '127.0.0.1';
+  const windows = new WeakMap<object, ReadingWindow>();
   const broker = await Aedes.createBroker({
     connectTimeout: 10_000,
     drainTimeout: 5000,
@@ -52,7 +53,8 @@ export async function startBroker(options: EmbeddedOptions): Promise<Link> {
       packet.clean = true;
       next(null, true);
     },
-    authorizePublish: (client, packet, next) => admit(options, client, packet, next),
+    authorizePublish: (client, packet, next) =>
+      admit(options, client && windows.get(client.conn), client, packet, next),
     authorizeSubscribe: limitSubscriptions(),
     authorizeForward: forwardTo(report),
   });
@@ -66,7 +68,9 @@ export async function startBroker(options: EmbeddedOptions): Promise<Link> {
   const server = createServer({ highWaterMark: WINDOW_BYTES, noDelay: true }, (socket) => {
     sockets.add(socket);
     socket.on('close', () => sockets.delete(socket));
-    limitPackets(socket, report);
+    const window = new ReadingWindow();
+    windows.set(socket, window);
+    limitReading(socket, window, report);
     broker.handle(socket);
   });
   server.maxConnections = LIMIT_CLIENTS;
@@ -96,6 +100,7 @@ export async function startBroker(options: EmbeddedOptions): Promise<Link> {
  */
 function admit(
   { take, isReserved, isRetained, report }: EmbeddedOptions,
+  window: ReadingWindow | null | undefined,
   client: Client | null,
   packet: PublishPacket,
   next: (error?: Error | null) => void,
@@ -108,7 +113,9 @@ function admit(
   const payload = typeof packet.payload === 'string' ? Buffer.from(packet.payload) : packet.payload;
   const retain = packet.retain;
   packet.retain = retain && isRetained(packet.topic);
-  take({ topic: packet.topic, payload, retain }).then(
+  const durable = take({ topic: packet.topic, payload, retain });
+  window?.hold(payload.length, durable);
+  durable.then(
     () => next(null),
     (error: unknown) => next(error instanceof Error ? error : new Error(String(error))),
   );
@@ -144,8 +151,29 @@ function forwardTo(report: Report): (client: Client, packet: AedesPublishPacket)
   };
 }
 
-/** The library's parser would collect a packet of up to 256 MB before it looks at it. */
-function limitPackets(socket: Socket, report: Report): void {
+/**
+ * What was read from a client and is not durable. The library itself counts packets against chunks of the socket, which
+ * bounds nothing where a packet is as large as a chunk.
+ */
+class ReadingWindow {
+  #bytes = 0;
+
+  hold(bytes: number, durable: Promise<void>): void {
+    this.#bytes += bytes;
+    const settled = (): void => void (this.#bytes -= bytes);
+    durable.then(settled, settled);
+  }
+
+  isFull(): boolean {
+    return this.#bytes > WINDOW_BYTES;
+  }
+}
+
+/**
+ * The library's parser would collect a packet of up to 256 MB before it looks at it. It asks for more after each packet
+ * that it is done with, so that a client whose window was full is read again when its messages are durable.
+ */
+function limitReading(socket: Socket, window: ReadingWindow, report: Report): void {
   const follower = new PacketFollower();
   const read = socket.read.bind(socket);
   const drop = (code: 'MESSAGE_TOO_LARGE' | 'MESSAGE_ENCODING', detail: string): void => {
@@ -153,6 +181,7 @@ function limitPackets(socket: Socket, report: Report): void {
     socket.destroy();
   };
   socket.read = (size?: number): unknown => {
+    if (window.isFull()) return null;
     const chunk = read(size) as Buffer | null;
     if (chunk === null) return null;
     let largest = 0;
