@@ -1,5 +1,6 @@
+import { X509Certificate } from 'node:crypto';
 import { connect as connectTcp, type Socket } from 'node:net';
-import { connect as connectTls } from 'node:tls';
+import { connect as connectTls, createSecureContext, type SecureContext } from 'node:tls';
 import { MqttClient, type IClientOptions, type IPublishPacket } from 'mqtt';
 import { BLOCK_LIMITS } from '#core/contract/block.ts';
 import { SpanbeatError, type ErrorCode } from '#core/contract/errors.ts';
@@ -9,7 +10,7 @@ import type { Link, Take } from './link.ts';
 
 export interface OutsideSettings {
   kind: 'outside';
-  /** `mqtt://host:1883` or `mqtts://host:8883`. */
+  /** `mqtt://host:1883` or `mqtts://host:8883`; user and password may stand in it, but those below go before. */
   url: string;
   /** Keep it the same over restarts: the broker keeps the session, with what was not acknowledged, under it. */
   clientId: string;
@@ -53,6 +54,7 @@ export function startClient(options: OutsideOptions): Link {
 class OutsideLink implements Link {
   readonly #options: OutsideOptions;
   readonly #url: URL;
+  readonly #secure: SecureContext | null;
   readonly #client: MqttClient;
   #socket: Socket | null = null;
   #gate: AcknowledgementGate | null = null;
@@ -66,7 +68,8 @@ class OutsideLink implements Link {
   constructor(options: OutsideOptions) {
     this.#options = options;
     this.#url = parseUrl(options.settings.url);
-    const client = new MqttClient(() => this.#openSocket(), clientOptions(options.settings));
+    this.#secure = this.#url.protocol === 'mqtts:' ? secureContext(options.settings) : null;
+    const client = new MqttClient(() => this.#openSocket(), clientOptions(options.settings, this.#url));
     this.#client = client;
     client.handleMessage = (packet, done) => this.#receive(packet, done);
     client.on('connect', () => this.#connected());
@@ -119,20 +122,13 @@ class OutsideLink implements Link {
   }
 
   #openSocket(): Socket {
-    const { ca, cert, key } = this.#options.settings;
     const host = this.#url.hostname.replace(/^\[(.*)\]$/, '$1');
-    const secure = this.#url.protocol === 'mqtts:';
-    const port = Number(this.#url.port || (secure ? 8883 : 1883));
-    const socket = secure
-      ? connectTls({
-          host,
-          port,
-          ...(/^[\d.]+$|:/.test(host) ? {} : { servername: host }),
-          ...(ca === undefined ? {} : { ca }),
-          ...(cert === undefined ? {} : { cert }),
-          ...(key === undefined ? {} : { key }),
-        })
-      : connectTcp({ host, port });
+    const secureContext = this.#secure;
+    const port = Number(this.#url.port || (secureContext === null ? 1883 : 8883));
+    const socket =
+      secureContext === null
+        ? connectTcp({ host, port })
+        : connectTls({ host, port, secureContext, ...(/^[\d.]+$|:/.test(host) ? {} : { servername: host }) });
     socket.setNoDelay(true);
     this.#socket = socket;
     this.#gate = gateAcknowledgements(socket);
@@ -195,13 +191,10 @@ class OutsideLink implements Link {
   }
 }
 
-function clientOptions({
-  protocol = 5,
-  clientId,
-  username,
-  password,
-  sessionExpiryS,
-}: OutsideSettings): IClientOptions {
+function clientOptions(settings: OutsideSettings, url: URL): IClientOptions {
+  const { protocol = 5, clientId, sessionExpiryS } = settings;
+  const username = settings.username ?? unescaped(url.username);
+  const password = settings.password ?? unescaped(url.password);
   return {
     protocolVersion: protocol,
     clientId,
@@ -226,19 +219,51 @@ function clientOptions({
   };
 }
 
+/** Of a part of an address; undefined where it is absent. */
+const unescaped = (text: string): string | undefined => (text === '' ? undefined : decodeURIComponent(text));
+
+function secureContext({ ca, cert, key }: OutsideSettings): SecureContext {
+  try {
+    // What is no certificate would be left out without a word, and then every broker be refused.
+    if (ca !== undefined) new X509Certificate(ca);
+    return createSecureContext({
+      ...(ca === undefined ? {} : { ca }),
+      ...(cert === undefined ? {} : { cert }),
+      ...(key === undefined ? {} : { key }),
+    });
+  } catch (error) {
+    const detail = error instanceof Error ? error.message : String(error);
+    throw new SpanbeatError({ code: 'SETTINGS_INVALID', where: 'ca, cert or key of the broker', detail });
+  }
+}
+
 function parseUrl(url: string): URL {
   const parsed = URL.canParse(url) ? new URL(url) : null;
-  if (parsed === null || !['mqtt:', 'mqtts:'].includes(parsed.protocol) || parsed.hostname === '') {
+  if (
+    parsed === null ||
+    !['mqtt:', 'mqtts:'].includes(parsed.protocol) ||
+    parsed.hostname === '' ||
+    !isReadable(parsed)
+  ) {
     throw new SpanbeatError({ code: 'USAGE', detail: 'a broker is given as mqtt://host:port or mqtts://host:port' });
   }
   return parsed;
+}
+
+function isReadable({ username, password }: URL): boolean {
+  try {
+    decodeURIComponent(username + password);
+    return true;
+  } catch {
+    return false; // a % that escapes nothing
+  }
 }
 
 /** Return codes of CONNACK are numbers (MQTT 3.1.1 section 3.2.2.3, MQTT 5 section 3.2.2.2); others come from Node. */
 function errorCode(error: Error): ErrorCode {
   const { code } = error as Error & { code?: string | number };
   if (typeof code === 'number') return [3, 136, 137, 151, 159].includes(code) ? 'BROKER_UNREACHABLE' : 'BROKER_REFUSED';
-  return /CERT|SSL|TLS/.test(code ?? '') ? 'BROKER_REFUSED' : 'BROKER_UNREACHABLE';
+  return /CERT|SSL|TLS|_SIGNATURE|INVALID_CA/.test(code ?? '') ? 'BROKER_REFUSED' : 'BROKER_UNREACHABLE';
 }
 
 async function within(milliseconds: number, work: Promise<unknown>): Promise<void> {
