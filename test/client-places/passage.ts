@@ -78,8 +78,7 @@ export function passageOf({
     bandPeak: measured(bandPeak, 0.01),
     bandPeakMicros: on + 1_000_000,
     rms: measured(bandPeak / 3, 0.01),
-    timeAboveS: {},
-    cyclesAbove: {},
+    limits: [],
     dominantHz: measured(f1, 0.05),
     flags: [],
   });
@@ -89,6 +88,7 @@ export function passageOf({
     startMicros: START,
     endMicros: START + 14_000_000,
     triggerMicros: START + 2_000_000,
+    cut: null,
     phases: {
       onMicros: on,
       offMicros: on + 4_000_000,

@@ -82,6 +82,7 @@ export function aPassage(wish: PassageWish = {}): Passage {
     startMicros,
     endMicros: onMicros + 15 * MICROS_PER_SECOND,
     triggerMicros: onMicros,
+    cut: null,
     phases: {
       onMicros,
       offMicros: onMicros + 6 * MICROS_PER_SECOND,
@@ -150,8 +151,17 @@ function aChannel(sensor: string, peak: number, flags: readonly string[], onMicr
     bandPeak: measured(peak, 0.01),
     bandPeakMicros: onMicros + 7 * MICROS_PER_SECOND,
     rms: measured(peak / 3, 0.01),
-    timeAboveS: {},
-    cyclesAbove: {},
+    limits: [
+      {
+        limit: 'ballast',
+        upToHz: 45,
+        peak: measured(peak, 0.01),
+        micros: onMicros + 7 * MICROS_PER_SECOND,
+        severity: null,
+        timeAboveS: {},
+        halfWavesAbove: {},
+      },
+    ],
     dominantHz: measured(5.2, 0.1),
     flags: [...flags],
   };

@@ -21,6 +21,14 @@ export const Measured = Type.Union([
 ]);
 export type Measured = Static<typeof Measured>;
 
+/** How the reason of a peak begins that may have been larger where nothing was recorded. */
+export const LOWER_BOUND = 'lower bound';
+
+/** Whether a value is but a lower bound of what it measures. */
+export function isLowerBound(measure: Measured): boolean {
+  return measure.reason?.startsWith(LOWER_BOUND) === true && measure.value !== null;
+}
+
 /** A value with its standard error; a reason makes it usable or poor. */
 export function measured(
   value: number,

@@ -9,6 +9,21 @@ export const Direction = Type.Union([Type.Literal('rising'), Type.Literal('falli
 /** Towards rising or falling chainage. */
 export type Direction = Static<typeof Direction>;
 
+/** What one channel says against one limit, in the limit's own band. */
+export const LimitMeasures = Type.Object({
+  limit: Type.String(),
+  /** Upper edge of the band. */
+  upToHz: Type.Number(),
+  /** Largest magnitude in that band, zero-phase, between samples too; and when. */
+  peak: Measured,
+  micros: Nullable(MicrosType),
+  severity: Nullable(Severity),
+  /** By level: seconds above it, and half-waves above it; a swing from above +level to below −level makes two. */
+  timeAboveS: Type.Record(Type.String(), Type.Number()),
+  halfWavesAbove: Type.Record(Type.String(), Type.Integer()),
+});
+export type LimitMeasures = Static<typeof LimitMeasures>;
+
 /** What one channel measured during a passage. Accelerations in m/s², strain in µm/m, displacement in mm. */
 export const ChannelMeasures = Type.Object({
   sensor: Type.String(),
@@ -19,14 +34,13 @@ export const ChannelMeasures = Type.Object({
   noise: Measured,
   /** Largest magnitude of the calibrated signal, between samples too. */
   rawPeak: Measured,
-  /** Largest magnitude in the band of the rule, zero-phase, between samples too. */
+  /** Largest magnitude in the band of the first limit (the code's band without one), zero-phase, between samples too. */
   bandPeak: Measured,
   bandPeakMicros: Nullable(MicrosType),
   /** Largest 1 s root mean square in the band. */
   rms: Measured,
-  /** Seconds above each limit that holds for this channel, and how many excursions. */
-  timeAboveS: Type.Record(Type.String(), Type.Number()),
-  cyclesAbove: Type.Record(Type.String(), Type.Integer()),
+  /** One entry for each limit that holds for this channel. */
+  limits: Type.Array(LimitMeasures),
   /** Strongest frequency around the peak. */
   dominantHz: Measured,
   /** Codes of sensor conditions that held at any time in the window. */
@@ -47,6 +61,10 @@ export const Provenance = Type.Object({
     phase: Type.String(),
   }),
 });
+
+/** The end of a passage's window that is an end of the samples too. */
+export const Cut = Type.Union([Type.Literal('begin'), Type.Literal('end')]);
+export type Cut = Static<typeof Cut>;
 
 export const Phases = Type.Object({
   /** First axle reaches the bridge; last axle leaves it; end of the usable free decay. */
@@ -77,6 +95,8 @@ export const Passage = Type.Object({
   startMicros: MicrosType,
   endMicros: MicrosType,
   triggerMicros: MicrosType,
+  /** Where the samples themselves begin or end, not the train: it may have been there before or after them. */
+  cut: Nullable(Cut),
   phases: Phases,
   speedMs: Measured,
   direction: Nullable(Direction),

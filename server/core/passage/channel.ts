@@ -11,7 +11,7 @@ import { createLevelWatch, watchLevel, type LevelWatch } from './level.ts';
 import { createMemory, remember, type Memory } from './memory.ts';
 import { createPulseFinder, findPulses, type PulseFinder } from './pulse.ts';
 import { createRollingSpectrum, rollSpectrum, type RollingSpectrum } from './rolling-spectrum.ts';
-import { RULE, TICK_MICROS } from './rule.ts';
+import { DYNAMIC_HZ, RULE, TICK_MICROS } from './rule.ts';
 import { createVitals, watchVitals, type Vitals } from './vitals.ts';
 
 /** Everything the pipeline keeps of one sensor. Plain data: it can be cloned, stored and carried on elsewhere. */
@@ -67,9 +67,6 @@ export interface ChannelSink {
   pulse: (channel: Channel, micros: Micros, height: number) => void;
 }
 
-/** Below this rate a channel is slow: it takes no part in detection. */
-const SLOW_HZ = 10;
-
 export function createChannel(bridge: BridgeDefinition, sensor: Sensor): Channel {
   const conversion = unitConversion(sensor.unit, sensor.quantity) ?? { factor: 1, shift: 0 };
   const deck = isDeckAcceleration(sensor);
@@ -83,7 +80,7 @@ export function createChannel(bridge: BridgeDefinition, sensor: Sensor): Channel
     sensor,
     deck,
     axles: countsAxles(sensor),
-    slow: sensor.rateHz < SLOW_HZ,
+    slow: sensor.rateHz < DYNAMIC_HZ,
     gain: (sensor.scale ?? 1) * conversion.factor,
     shift: (sensor.offset ?? 0) * conversion.factor + conversion.shift,
     intake: createIntake(sensor.rateHz),
@@ -101,7 +98,7 @@ export function createChannel(bridge: BridgeDefinition, sensor: Sensor): Channel
     ticks: [],
     tick: null,
     through: -1,
-    waitedFor: sensor.rateHz >= SLOW_HZ,
+    waitedFor: sensor.rateHz >= DYNAMIC_HZ,
   };
 }
 

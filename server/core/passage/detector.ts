@@ -1,3 +1,4 @@
+import type { Cut } from '../contract/passage.ts';
 import { timeName, type Micros } from '../contract/time.ts';
 import { MICROS_PER_SECOND } from '../contract/time.ts';
 import { RULE, TICK_MICROS } from './rule.ts';
@@ -14,6 +15,8 @@ export interface Detector {
   /** A passage that has left and rings on. */
   ringing: Candidate | null;
   lastTick: number;
+  /** First tick of the samples that have come without a pause. */
+  sinceTick: number;
   /** End of the last passage: the next window does not reach back beyond it. */
   clearFrom: Micros;
   /** Pulses each axle sensor gave in earlier passages: a sensor that has spoken before is believed when it is silent. */
@@ -41,6 +44,8 @@ export interface Candidate {
   counts: Record<string, AxleCount>;
   pulseCount: number;
   freeUntilTick: number;
+  /** Where samples begin shortly before, or end before the train was seen to leave. */
+  cut: Cut | null;
   /** Window, once closed. */
   windowFrom: Micros;
 }
@@ -59,7 +64,7 @@ export type DetectorEvent =
   | { kind: 'window'; candidate: Candidate; fromMicros: Micros; toMicros: Micros };
 
 export function createDetector(): Detector {
-  return { floors: {}, open: null, ringing: null, lastTick: -1, clearFrom: 0, proven: {} };
+  return { floors: {}, open: null, ringing: null, lastTick: -1, sinceTick: -1, clearFrom: 0, proven: {} };
 }
 
 export interface DetectorSetting {
@@ -74,6 +79,7 @@ export function detect(detector: Detector, setting: DetectorSetting, tick: TickF
   const events: DetectorEvent[] = [];
   const skipped = detector.lastTick >= 0 && tick.number - detector.lastTick > RULE.quietSeconds * 10;
   if (skipped) events.push(...interrupt(detector, setting));
+  if (skipped || detector.lastTick < 0) detector.sinceTick = tick.number;
   detector.lastTick = tick.number;
   const votes = countVotes(detector, tick);
   const active = votes || tick.pulses.length > 0;
@@ -82,7 +88,11 @@ export function detect(detector: Detector, setting: DetectorSetting, tick: TickF
       (first, pulse) => Math.min(first, Math.floor(pulse.micros / TICK_MICROS)),
       tick.number,
     );
-    detector.open = createCandidate(setting.bridge, onset);
+    detector.open = createCandidate(
+      setting.bridge,
+      onset,
+      onset - detector.sinceTick < RULE.quietSeconds * 10 ? 'begin' : null,
+    );
   }
   if (detector.open !== null) events.push(...follow(detector, setting, detector.open, tick, votes));
   if (detector.ringing !== null && tick.number >= detector.ringing.freeUntilTick) {
@@ -95,13 +105,16 @@ export function detect(detector: Detector, setting: DetectorSetting, tick: TickF
 export function interrupt(detector: Detector, setting: DetectorSetting): DetectorEvent[] {
   const events: DetectorEvent[] = [];
   const end = (detector.lastTick + 1) * TICK_MICROS;
-  if (detector.open !== null) events.push(...leave(detector, setting, detector.open));
+  if (detector.open !== null) {
+    detector.open.cut = 'end';
+    events.push(...leave(detector, setting, detector.open));
+  }
   if (detector.ringing !== null)
     events.push(...release(detector, Math.min(end, detector.ringing.freeUntilTick * TICK_MICROS)));
   return events;
 }
 
-function createCandidate(bridge: string, onsetTick: number): Candidate {
+function createCandidate(bridge: string, onsetTick: number, cut: Cut | null): Candidate {
   return {
     id: `${bridge}-${timeName(onsetTick * TICK_MICROS)}`,
     onsetTick,
@@ -113,6 +126,7 @@ function createCandidate(bridge: string, onsetTick: number): Candidate {
     counts: {},
     pulseCount: 0,
     freeUntilTick: 0,
+    cut,
     windowFrom: 0,
   };
 }

@@ -72,6 +72,7 @@ export function measureFreeDecay(
 }
 
 interface Group {
+  /** The one that rings most first. */
   channels: RecordChannel[];
   expectedHz: number | undefined;
 }
@@ -102,14 +103,18 @@ function ringingSpan(
   const span = spanAt(bridge, strongest.sensor.alongM);
   const { rateHz } = strongest;
   return {
-    channels: channels.filter(
-      (channel) => channel.rateHz === rateHz && spanAt(bridge, channel.sensor.alongM).id === span.id,
-    ),
+    channels: [
+      strongest,
+      ...channels.filter(
+        (channel) =>
+          channel !== strongest && channel.rateHz === rateHz && spanAt(bridge, channel.sensor.alongM).id === span.id,
+      ),
+    ],
     expectedHz: span.frequenciesHz?.f1,
   };
 }
 
-/** The free part ends where the low-passed motion of the best channel comes down to its quiet level. */
+/** The free part ends where the low-passed motion of the strongest channel comes down to its quiet level. */
 function noiseReached(
   channels: readonly RecordChannel[],
   expectedHz: number | undefined,

@@ -1,16 +1,24 @@
 import type { BridgeDefinition } from '../contract/bridge.ts';
-import { measured, notMeasurable, type Measured, type Quality } from '../contract/measure.ts';
-import type { Passage } from '../contract/passage.ts';
+import {
+  isLowerBound,
+  LOWER_BOUND,
+  measured,
+  notMeasurable,
+  type Measured,
+  type Quality,
+} from '../contract/measure.ts';
+import type { ChannelMeasures, Cut, LimitMeasures, Passage } from '../contract/passage.ts';
 import type { WindowChannel } from '../contract/pipeline.ts';
+import { severityRank } from '../contract/severity.ts';
 import { MICROS_PER_SECOND } from '../contract/time.ts';
 import { mad, median } from '../signal/robust.ts';
 import { readAxles, type AxleReading } from './axles.ts';
 import { bandOfLimit } from './band.ts';
 import { measureFreeDecay } from './free-decay.ts';
 import { noiseSpeed } from './noise-speed.ts';
-import { measureChannel, worseReading, type ChannelReading } from './peaks.ts';
+import { measureChannel, type CutShort } from './peaks.ts';
 import { findPhases, type FoundPhases, type PassageFrame } from './phases.ts';
-import { arrangeRecord, trusted, type RecordChannel } from './record.ts';
+import { arrangeRecord, microsOf, trusted, type RecordChannel } from './record.ts';
 import { noiseSpan, rollingNoise, type RollingNoise } from './rolling-noise.ts';
 import { RULE, RULE_VERSION } from './rule.ts';
 
@@ -30,7 +38,7 @@ export function measurePassage(
   frame: PassageFrame,
   channels: readonly WindowChannel[],
 ): Passage | null {
-  const record = arrangeRecord(bridge, channels, frame.triggerMicros, frame.toMicros);
+  const record = arrangeRecord(bridge, channels, frame.triggerMicros, frame.toMicros, frame.whole);
   const dynamic = record.filter(({ sensor }) => sensor.quantity !== 'temperature');
   const axles = readAxles(bridge, dynamic);
   const noise = rollingNoise(bridge, dynamic, frame.triggerMicros);
@@ -38,11 +46,12 @@ export function measurePassage(
   const found = findPhases(bridge, frame, axles, span, record);
   if (found === null) return null;
   const { onMicros, offMicros } = found;
-  const readings = dynamic.map((channel) => measureChannel(bridge, channel, onMicros - 200_000, frame.toMicros));
+  const cut = frame.cut === null ? null : cutShort(frame.cut, dynamic, axles, found);
+  const measures = dynamic.map((channel) => measureChannel(bridge, channel, onMicros - 200_000, frame.toMicros, cut));
   const decay = measureFreeDecay(bridge, dynamic, frame.triggerMicros, offMicros, frame.toMicros);
   const speed = speedOf(axles, noise, found);
-  const peak = peakOf(dynamic, readings);
-  const notes = [...found.notes, ...axles.notes, ...recordNotes(frame, dynamic)];
+  const peak = peakOf(bridge, dynamic, measures);
+  const notes = [...found.notes, ...axles.notes, ...(cut === null ? [] : [cut]), ...recordNotes(frame, dynamic)];
   const quality = worstOf([
     found.quality,
     ...(peak.measured.value === null ? (['poor'] as const) : [peak.measured.quality]),
@@ -53,17 +62,18 @@ export function measurePassage(
     startMicros: frame.fromMicros,
     endMicros: frame.toMicros,
     triggerMicros: frame.triggerMicros,
+    cut: frame.cut,
     phases: { ...found, freeEndMicros: Math.max(decay.endMicros, offMicros) },
     speedMs: speed.speedMs,
     direction: speed.direction,
-    axleCount: axles.count,
+    axleCount: cut === null ? axles.count : boundOf(axles.count, cut),
     axles: axles.axles,
     peak,
-    rawPeak: largest(dynamic, readings, ({ measures }) => measures.rawPeak),
+    rawPeak: largestRaw(dynamic, measures),
     f1Hz: decay.f1Hz,
     zeta1: decay.zeta1,
     temperatureC: temperatureOf(record),
-    channels: readings.map(({ measures }) => measures),
+    channels: measures,
     quality,
     notes,
     provenance: { definitionVersion, ruleVersion: RULE_VERSION, filter: filterOf(bridge, dynamic) },
@@ -81,32 +91,62 @@ function speedOf(
   return noiseSpeed(noise, phases.onMicros, phases.offMicros);
 }
 
-function peakOf(record: readonly RecordChannel[], readings: readonly ChannelReading[]): Passage['peak'] {
-  const deck = readings.filter((_, i) => record[i]!.deck && !record[i]!.flags.includes('flat'));
-  const good = readings.filter((_, i) => record[i]!.deck && trusted(record[i]!));
+/** The bogies of a train are this far apart at most: after so much silence its last axle has passed. */
+const SILENCE_SECONDS_LEAST = 0.3;
+
+/** Why the record may not hold the whole train: samples begin or stop within a bogie's distance of an axle. */
+function cutShort(cut: Cut, record: readonly RecordChannel[], axles: AxleReading, phases: FoundPhases): CutShort {
+  const { value: speed } = axles.speedMs;
+  const silence =
+    speed === null ? RULE.quietSeconds : Math.min(RULE.quietSeconds, RULE.bogieDistanceM / Math.abs(speed));
+  const needed = Math.max(SILENCE_SECONDS_LEAST, silence);
+  if (cut === 'begin') {
+    const first = Math.min(...record.map((channel) => microsOf(channel, 0)));
+    const before = (phases.onMicros - first) / MICROS_PER_SECOND;
+    return before < needed ? `the recording begins ${before.toFixed(2)} s before the first axle that was seen` : null;
+  }
+  const last = Math.max(...record.map((channel) => microsOf(channel, lastSample(channel))));
+  const after = (last - phases.offMicros) / MICROS_PER_SECOND;
+  return after < needed ? `the recording stops ${after.toFixed(2)} s after the last axle that was seen` : null;
+}
+
+/** A gap that reaches the end of the window lies behind the last sample. */
+function lastSample({ x, gaps }: RecordChannel): number {
+  const tail = gaps.at(-1);
+  return (tail?.to === x.length ? tail.from : x.length) - 1;
+}
+
+function boundOf(count: Measured, cut: string): Measured {
+  return count.value === null ? count : measured(count.value, null, 'poor', `${LOWER_BOUND}: ${cut}`);
+}
+
+/** The gravest reading of the channels that may be trusted; of all that move where none may. */
+function peakOf(
+  bridge: BridgeDefinition,
+  record: readonly RecordChannel[],
+  measures: readonly ChannelMeasures[],
+): Passage['peak'] {
+  const deck = measures.filter((_, i) => record[i]!.deck && !record[i]!.flags.includes('flat'));
+  const good = measures.filter((_, i) => record[i]!.deck && trusted(record[i]!));
   const used = good.length > 0 ? good : deck;
   const worst = used
-    .flatMap((reading) => reading.readings.map((limit) => ({ ...limit, reading })))
-    .sort(worseReading)[0];
+    .flatMap(({ sensor, limits }) => limits.map((said) => ({ ...said, sensor, ofGravest: ofGravest(bridge, said) })))
+    .sort(graver)[0];
   if (worst !== undefined) {
-    const { bandPeak, sensor } = worst.reading.measures;
-    const error = bandPeak.value === null ? null : bandPeak.standardError;
-    const doubt = good.length > 0 ? undefined : 'no channel that may be trusted';
-    const quality = doubt === undefined && bandPeak.value !== null ? bandPeak.quality : 'poor';
+    const { sensor, micros, limit, severity } = worst;
     return {
-      measured: measured(worst.value, error, quality, doubt ?? (bandPeak.value === null ? undefined : bandPeak.reason)),
+      measured: believed(worst.peak, good.length > 0),
       sensor,
-      micros: worst.micros,
-      limit: worst.limit,
-      severity: worst.severity,
+      micros,
+      limit,
+      severity,
       ofGravest: worst.ofGravest,
     };
   }
-  const free = used
-    .map(({ measures }) => measures)
-    .sort((a, b) => (b.bandPeak.value ?? 0) - (a.bandPeak.value ?? 0))[0];
+  const free = used.toSorted((a, b) => (b.bandPeak.value ?? 0) - (a.bandPeak.value ?? 0))[0];
   return {
-    measured: free?.bandPeak ?? notMeasurable('no deck channel with samples'),
+    measured:
+      free === undefined ? notMeasurable('no deck channel with samples') : believed(free.bandPeak, good.length > 0),
     sensor: free?.sensor ?? null,
     micros: free?.bandPeakMicros ?? null,
     limit: null,
@@ -115,12 +155,31 @@ function peakOf(record: readonly RecordChannel[], readings: readonly ChannelRead
   };
 }
 
-function largest(
-  record: readonly RecordChannel[],
-  readings: readonly ChannelReading[],
-  pick: (reading: ChannelReading) => Measured,
-): Measured {
-  const deck = readings.filter((_, i) => record[i]!.deck && trusted(record[i]!)).map(pick);
+/** A peak that no trusted channel saw is poor. */
+function believed(peak: Measured, trustworthy: boolean): Measured {
+  if (trustworthy || peak.value === null) return peak;
+  const why = 'no channel that may be trusted';
+  return measured(
+    peak.value,
+    peak.standardError,
+    'poor',
+    isLowerBound(peak) ? `${peak.reason!}; ${why}` : `${why}${peak.reason === undefined ? '' : `; ${peak.reason}`}`,
+  );
+}
+
+/** Value over the gravest level that is set. */
+function ofGravest(bridge: BridgeDefinition, { limit: id, peak }: LimitMeasures): number {
+  const { levels } = bridge.limits.find((limit) => limit.id === id)!;
+  return peak.value! / Math.max(...Object.values(levels));
+}
+
+/** Gravest first; at equal severity the one nearest to its limit. */
+function graver(a: LimitMeasures & { ofGravest: number }, b: LimitMeasures & { ofGravest: number }): number {
+  return severityRank(b.severity) - severityRank(a.severity) || b.ofGravest - a.ofGravest;
+}
+
+function largestRaw(record: readonly RecordChannel[], measures: readonly ChannelMeasures[]): Measured {
+  const deck = measures.filter((_, i) => record[i]!.deck && trusted(record[i]!)).map(({ rawPeak }) => rawPeak);
   return deck.reduce<Measured>(
     (most, next) => ((next.value ?? -1) > (most.value ?? -1) ? next : most),
     notMeasurable('no deck channel that may be trusted'),
@@ -144,6 +203,9 @@ function recordNotes(frame: PassageFrame, record: readonly RecordChannel[]): str
     notes.push(`quiet part of only ${before.toFixed(1)} s before the train`);
   const flagged = record.filter(({ flags }) => flags.length > 0);
   for (const { sensor, flags } of flagged) notes.push(`${sensor.id}: ${flags.join(', ')}`);
+  for (const { sensor, filled } of record) {
+    if (filled > 0) notes.push(`${sensor.id}: ${filled} missing ${filled === 1 ? 'sample' : 'samples'} filled in`);
+  }
   return notes;
 }
 

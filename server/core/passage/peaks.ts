@@ -1,141 +1,168 @@
 import { spanAt, type BridgeDefinition, type Limit } from '../contract/bridge.ts';
-import { measured, notMeasurable, type Measured } from '../contract/measure.ts';
-import type { ChannelMeasures } from '../contract/passage.ts';
-import { SEVERITIES, severityOf, severityRank, type Severity } from '../contract/severity.ts';
+import { LOWER_BOUND, measured, notMeasurable, type Measured } from '../contract/measure.ts';
+import type { ChannelMeasures, LimitMeasures } from '../contract/passage.ts';
+import { SEVERITIES, severityOf } from '../contract/severity.ts';
 import type { Micros } from '../contract/time.ts';
 import { createRealTransform } from '../signal/fourier.ts';
+import { denser } from '../signal/interpolation.ts';
 import { excursions, slidingMeanSquareMax } from '../signal/sliding.ts';
-import { truePeak } from '../signal/true-peak.ts';
+import { truePeak, type TruePeak } from '../signal/true-peak.ts';
 import { hann } from '../signal/window.ts';
 import { zeroPhase, zeroPhaseLowpass } from '../signal/zero-phase.ts';
 import { bandOfLimit } from './band.ts';
-import { microsOf, rangeOf, type RecordChannel } from './record.ts';
+import { microsOf, rangeOf, solidParts, type RecordChannel } from './record.ts';
 import { RULE } from './rule.ts';
 
-/** What one deck channel says against one limit. */
-export interface LimitReading {
-  limit: string;
-  value: number;
-  micros: Micros;
-  severity: Severity | null;
-  /** Value over the gravest level that is set. */
-  ofGravest: number;
-}
+/** Why every peak of a passage is but a lower bound; null where the whole train was recorded. */
+export type CutShort = string | null;
 
-export interface ChannelReading {
-  measures: ChannelMeasures;
-  readings: LimitReading[];
-}
-
-/** Measures of one channel between the first axle and the end of the window. */
+/**
+ * Measures of one channel between the first axle and the end of the window. Gaps, and what a filter smears of them, are
+ * kept out of the search for peaks.
+ *
+ * @param channel a channel of the arranged record; strain and the like have a raw peak only
+ * @param fromMicros shortly before the first axle
+ * @param toMicros end of the window
+ * @param cut said of every peak, which is then poor
+ */
 export function measureChannel(
   bridge: BridgeDefinition,
   channel: RecordChannel,
   fromMicros: Micros,
   toMicros: Micros,
-): ChannelReading {
-  const span = spanAt(bridge, channel.sensor.alongM);
-  const limits = channel.deck ? bridge.limits.filter((limit) => limit.spans?.includes(span.id) ?? true) : [];
+  cut: CutShort = null,
+): ChannelMeasures {
   const [from, to] = rangeOf(channel, fromMicros, toMicros);
-  const quiet = noiseAndOffset(channel);
-  const shape = { sensor: channel.sensor.id, rateHz: channel.rateHz, ...quiet, flags: channel.flags };
-  if (to - from < 8) {
-    const none = notMeasurable('no samples between the first axle and the end of the window');
-    return {
-      measures: {
-        ...shape,
-        rawPeak: none,
-        bandPeak: none,
-        bandPeakMicros: null,
-        rms: none,
-        timeAboveS: {},
-        cyclesAbove: {},
-        dominantHz: none,
-      },
-      readings: [],
-    };
-  }
-  const raw = truePeak(channel.x, from, to);
-  if (!channel.deck) {
-    const none = notMeasurable('the band rule is for deck acceleration');
-    return {
-      measures: {
-        ...shape,
-        rawPeak: value(channel, Math.abs(raw.value)),
-        bandPeak: none,
-        bandPeakMicros: null,
-        rms: none,
-        timeAboveS: {},
-        cyclesAbove: {},
-        dominantHz: none,
-      },
-      readings: [],
-    };
-  }
-  const bands = bandSignals(bridge, channel, limits, from, to);
-  const first = bands[0]!;
+  const raw = largestOf(channel, channel.x, from, to, RAW_MARGIN);
+  const doubt = doubtOf(channel, cut);
+  const measures = {
+    sensor: channel.sensor.id,
+    rateHz: channel.rateHz,
+    ...noiseAndOffset(channel),
+    flags: channel.flags,
+    rawPeak: raw === null ? NO_SAMPLES : peakValue(raw.value, channel.noise, doubt),
+  };
+  if (raw === null || !channel.deck) return { ...measures, ...notInBand(channel.deck ? NO_SAMPLES : NOT_DECK) };
+  const bands = bandSignals(bridge, channel, from, to);
+  const first = bands[0];
+  if (first === undefined) return { ...measures, ...notInBand(NO_SAMPLES) };
   const inBand = first.signal.subarray(from, to);
   const rms = Math.sqrt(slidingMeanSquareMax(inBand, Math.max(1, Math.round(channel.rateHz))));
-  const above = timesAbove(inBand, limits[0], channel.rateHz);
+  // Noise of a band B wide, over T seconds, moves an r.m.s. by σ/√(2BT) (Bendat and Piersol, Random Data, 8.2).
+  const rmsNoise = first.noise === null ? null : first.noise / Math.sqrt(2 * first.upToHz);
   return {
-    measures: {
-      ...shape,
-      rawPeak: value(channel, Math.abs(raw.value)),
-      bandPeak: value(channel, first.peak, first.note),
-      bandPeakMicros: microsOf(channel, first.index),
-      rms: value(channel, rms),
-      ...above,
-      dominantHz: dominantFrequency(first.signal, Math.round(first.index), channel.rateHz),
-    },
-    readings: bands.flatMap(({ limits: rules, peak, index }) =>
-      rules.map((limit) => ({
-        limit: limit.id,
-        value: peak,
-        micros: microsOf(channel, index),
-        severity: severityOf(peak, limit.levels),
-        ofGravest: peak / Math.max(...Object.values(limit.levels)),
-      })),
-    ),
+    ...measures,
+    bandPeak: bandValue(first, doubt),
+    bandPeakMicros: microsOf(channel, first.index),
+    rms: peakValue(rms, rmsNoise, doubt, first.note),
+    limits: bands.flatMap((band) => band.limits.map((limit) => againstLimit(channel, band, limit, [from, to], doubt))),
+    dominantHz: dominantFrequency(first.signal, Math.round(first.index), channel.rateHz),
   };
 }
 
-/** Gravest first; at equal severity the one nearest to its limit. */
-export function worseReading(a: LimitReading, b: LimitReading): number {
-  return severityRank(b.severity) - severityRank(a.severity) || b.ofGravest - a.ofGravest;
-}
+/** A peak this close to a gap may be the straight line's own. */
+const RAW_MARGIN = 2;
+/** Fewer samples than this show no peak. */
+const SAMPLES_LEAST = 8;
+const NO_SAMPLES = notMeasurable('no samples between the first axle and the end of the window');
+const NOT_DECK = notMeasurable('the band rule is for deck acceleration');
+
+const notInBand = (
+  none: Measured,
+): Pick<ChannelMeasures, 'bandPeak' | 'bandPeakMicros' | 'rms' | 'limits' | 'dominantHz'> => ({
+  bandPeak: none,
+  bandPeakMicros: null,
+  rms: none,
+  limits: [],
+  dominantHz: none,
+});
 
 interface BandSignal {
+  upToHz: number;
   limits: Limit[];
   signal: Float64Array;
   peak: number;
   index: number;
+  /** r.m.s. of the quiet part in this band. */
+  noise: number | null;
   note: string | undefined;
 }
 
-/** The zero-phase band signal and its peak for each band edge that a limit asks for; the code's band where there is no limit. */
-function bandSignals(
-  bridge: BridgeDefinition,
-  channel: RecordChannel,
-  limits: readonly Limit[],
-  from: number,
-  to: number,
-): BandSignal[] {
+/**
+ * The zero-phase band signal and its peak for each band edge that a limit asks for; the code's band where there is no
+ * limit. None where all samples are too close to a gap.
+ */
+function bandSignals(bridge: BridgeDefinition, channel: RecordChannel, from: number, to: number): BandSignal[] {
   const byEdge = new Map<number, Limit[]>();
-  for (const limit of limits) {
+  const span = spanAt(bridge, channel.sensor.alongM);
+  for (const limit of bridge.limits.filter(({ spans }) => spans?.includes(span.id) ?? true)) {
     const { upToHz } = bandOfLimit(bridge, limit.band, channel.sensor);
     byEdge.set(upToHz, [...(byEdge.get(upToHz) ?? []), limit]);
   }
   if (byEdge.size === 0) byEdge.set(bandOfLimit(bridge, 'EN 1990 A2', channel.sensor).upToHz, []);
-  return [...byEdge].map(([upToHz, rules]) => {
+  return [...byEdge].flatMap(([upToHz, limits]) => {
     const wide = upToHz > BAND_OF_RATE * channel.rateHz;
     const signal = wide ? channel.x : zeroPhase(zeroPhaseLowpass(RULE.bandOrder, upToHz, channel.rateHz), channel.x);
-    const { value: peak, index } = truePeak(signal, from, to);
+    const found = largestOf(channel, signal, from, to, Math.ceil(channel.rateHz / upToHz));
+    if (found === null) return [];
     const note = wide
       ? `the rate of ${channel.rateHz} Hz is too low to filter at ${upToHz} Hz; nothing was filtered`
       : undefined;
-    return { limits: rules, signal, peak: Math.abs(peak), index, note };
+    const noise = channel.noise === null ? null : quietRms(signal, channel.quietTo);
+    return [{ upToHz, limits, signal, peak: Math.abs(found.value), index: found.index, noise, note }];
   });
 }
+
+/** The true peak of the parts that hold samples; null where there are none to speak of. */
+function largestOf(
+  channel: RecordChannel,
+  signal: Float64Array,
+  from: number,
+  to: number,
+  margin: number,
+): TruePeak | null {
+  let most: TruePeak | null = null;
+  for (const [first, last] of solidParts(channel, from, to, margin)) {
+    if (last - first < SAMPLES_LEAST) continue;
+    const peak = truePeak(signal, first, last);
+    if (most === null || Math.abs(peak.value) > Math.abs(most.value)) most = peak;
+  }
+  return most;
+}
+
+function againstLimit(
+  channel: RecordChannel,
+  band: BandSignal,
+  limit: Limit,
+  [from, to]: [number, number],
+  doubt: string | undefined,
+): LimitMeasures {
+  const severity = severityOf(band.peak, limit.levels);
+  const factor = 2 ** Math.min(4, Math.max(0, Math.ceil(Math.log2((POINTS_A_SWING * band.upToHz) / channel.rateHz))));
+  const dense = severity === null ? new Float64Array(0) : denser(band.signal, from, to, factor);
+  const timeAboveS: Record<string, number> = {};
+  const halfWavesAbove: Record<string, number> = {};
+  for (const level of SEVERITIES) {
+    const limitValue = limit.levels[level];
+    if (limitValue === undefined) continue;
+    const { secondsAbove, count } = excursions(dense, limitValue, channel.rateHz * factor);
+    timeAboveS[level] = secondsAbove;
+    // A crest may pass the level between two of the points.
+    halfWavesAbove[level] = Math.max(count, band.peak > limitValue ? 1 : 0);
+  }
+  return {
+    limit: limit.id,
+    upToHz: band.upToHz,
+    peak: bandValue(band, doubt),
+    micros: microsOf(channel, band.index),
+    severity,
+    timeAboveS,
+    halfWavesAbove,
+  };
+}
+
+/** Straight lines between so many points a swing of the highest frequency lose 1 % of its height. */
+const POINTS_A_SWING = 20;
 
 /** Above this share of the rate the band edge is out of reach of a digital filter worth the name. */
 const BAND_OF_RATE = 0.45;
@@ -149,32 +176,26 @@ function noiseAndOffset(channel: RecordChannel): { offset: Measured; noise: Meas
   return { offset: measured(offset, offsetError), noise: measured(noise, null) };
 }
 
-/** A peak is uncertain by the noise that rides on it. */
-function value(channel: RecordChannel, magnitude: number, note?: string): Measured {
-  const reason = channel.flags.length > 0 ? `sensor: ${channel.flags.join(', ')}` : note;
-  return measured(
-    magnitude,
-    channel.noise,
-    channel.flags.length > 0 ? 'poor' : note === undefined ? 'good' : 'usable',
-    reason,
-  );
+function doubtOf(channel: RecordChannel, cut: CutShort): string | undefined {
+  const flags = channel.flags.length > 0 ? `sensor: ${channel.flags.join(', ')}` : undefined;
+  const bound = cut ?? (channel.flags.includes('gap') ? 'samples are missing while the train was there' : undefined);
+  if (bound === undefined) return flags;
+  return `${LOWER_BOUND}: ${bound}${flags === undefined ? '' : `; ${flags}`}`;
 }
 
-function timesAbove(
-  x: Float64Array,
-  limit: Limit | undefined,
-  rateHz: number,
-): Pick<ChannelMeasures, 'timeAboveS' | 'cyclesAbove'> {
-  const timeAboveS: Record<string, number> = {};
-  const cyclesAbove: Record<string, number> = {};
-  for (const severity of SEVERITIES) {
-    const level = limit?.levels[severity];
-    if (level === undefined) continue;
-    const { secondsAbove, count } = excursions(x, level, rateHz);
-    timeAboveS[severity] = secondsAbove;
-    cyclesAbove[severity] = count;
-  }
-  return { timeAboveS, cyclesAbove };
+/** A peak is uncertain by the noise of its band that rides on it. */
+function peakValue(magnitude: number, noise: number | null, doubt: string | undefined, note?: string): Measured {
+  const quality = doubt !== undefined ? 'poor' : note === undefined ? 'good' : 'usable';
+  return measured(Math.abs(magnitude), noise, quality, doubt ?? note);
+}
+
+const bandValue = ({ peak, noise, note }: BandSignal, doubt: string | undefined): Measured =>
+  peakValue(peak, noise, doubt, note);
+
+function quietRms(signal: Float64Array, to: number): number {
+  let squares = 0;
+  for (let i = 0; i < to; i++) squares += signal[i]! * signal[i]!;
+  return Math.sqrt(squares / Math.max(1, to));
 }
 
 /** Strongest line of a Hann-windowed stretch of about 2 s around the peak, placed by a parabola through its logarithm. */
@@ -187,9 +208,8 @@ function dominantFrequency(x: Float64Array, at: number, rateHz: number): Measure
   const im = new Float64Array(size / 2 + 1);
   createRealTransform(size).forward(segment, re, im);
   const power = re.map((r, k) => r * r + im[k]! * im[k]!);
-  let top = 2;
-  for (let k = 2; k < size / 2; k++) if (power[k]! > power[top]!) top = k;
-  if (!(power[top]! > 0)) return notMeasurable('the signal is zero around its peak');
+  const top = highestCrest(power);
+  if (top === null) return notMeasurable('no frequency stands out around the peak');
   const [a, b, c] = [power[top - 1]!, power[top]!, power[top + 1]!].map((p) => Math.log(p + 1e-300)) as [
     number,
     number,
@@ -198,4 +218,14 @@ function dominantFrequency(x: Float64Array, at: number, rateHz: number): Measure
   const bend = a - 2 * b + c;
   const shift = bend < 0 ? (0.5 * (a - c)) / bend : 0;
   return measured(((top + shift) * rateHz) / size, rateHz / size / 4);
+}
+
+/** A crest, not merely the highest line: a slow drift raises the lowest lines without a frequency of its own. */
+function highestCrest(power: Float64Array): number | null {
+  let top: number | null = null;
+  for (let k = 2; k < power.length - 1; k++) {
+    const crest = power[k]! >= power[k - 1]! && power[k]! > power[k + 1]!;
+    if (crest && (top === null || power[k]! > power[top]!)) top = k;
+  }
+  return top;
 }

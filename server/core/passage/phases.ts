@@ -1,6 +1,6 @@
 import { spanAt, type BridgeDefinition } from '../contract/bridge.ts';
 import type { Quality } from '../contract/measure.ts';
-import type { Phases } from '../contract/passage.ts';
+import type { Cut, Phases } from '../contract/passage.ts';
 import { MICROS_PER_SECOND, type Micros } from '../contract/time.ts';
 import type { AxleReading } from './axles.ts';
 import { firstDriven, lastDriven, type Edge } from './forced-edge.ts';
@@ -13,6 +13,7 @@ export interface PassageFrame {
   triggerMicros: Micros;
   fromMicros: Micros;
   toMicros: Micros;
+  cut: Cut | null;
   /** True where a person says that the whole stretch is one event, train or not. */
   whole?: boolean;
 }

@@ -96,6 +96,7 @@ export function recompute(
     triggerMicros: stored.triggerMicros,
     fromMicros: stored.startMicros,
     toMicros: stored.endMicros,
+    cut: stored.cut,
     whole,
   };
   return measurePassage(definition, definitionVersion, frame, channels);
@@ -114,7 +115,7 @@ export function measureWhole(
     ...runs.map((run) => run.startMicros + Math.floor((run.samples.length * MICROS_PER_SECOND) / run.rateHz)),
   );
   const id = `${definition.id}-${timeName(fromMicros)}`;
-  const frame = { id, triggerMicros: fromMicros, fromMicros, toMicros, whole: true };
+  const frame = { id, triggerMicros: fromMicros, fromMicros, toMicros, cut: null, whole: true };
   const passage = measurePassage(definition, definitionVersion, frame, channels);
   return passage === null ? null : { passage, channels: [...channels] };
 }
@@ -190,7 +191,8 @@ function act(state: PipelineState, events: readonly DetectorEvent[], output: Pip
     }
     const { candidate, fromMicros, toMicros } = event;
     const channels = cutWindow(state, fromMicros, toMicros);
-    const frame = { id: candidate.id, triggerMicros: candidate.onsetTick * TICK_MICROS, fromMicros, toMicros };
+    const { id, cut } = candidate;
+    const frame = { id, triggerMicros: candidate.onsetTick * TICK_MICROS, fromMicros, toMicros, cut };
     const passage = measurePassage(state.definition, state.definitionVersion, frame, channels);
     if (passage === null) output.progress.push({ bridge, passage: candidate.id, kind: 'discarded', micros: toMicros });
     else output.passages.push({ passage, channels });

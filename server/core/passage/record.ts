@@ -1,14 +1,16 @@
 import { countsAxles, isDeckAcceleration, type BridgeDefinition, type Sensor } from '../contract/bridge.ts';
 import type { WindowChannel } from '../contract/pipeline.ts';
 import { MICROS_PER_SECOND, type Micros } from '../contract/time.ts';
-import { unitConversion } from '../contract/units.ts';
+import { fillHole, fillStraight, HOLE_MOST } from '../signal/hole.ts';
+import { flagsOf } from './record-flags.ts';
+import { DYNAMIC_HZ, TICK_MICROS } from './rule.ts';
 
 /** One channel of a passage's window on one even grid of time, its offset removed: what every measure starts from. */
 export interface RecordChannel {
   sensor: Sensor;
   rateHz: number;
   startMicros: Micros;
-  /** SI; zero where a sample is missing. */
+  /** SI. Holes of one or two samples are filled in; longer ones hold a straight line and are listed in `gaps`. */
   x: Float64Array;
   /** What was taken off `x`: the offset, or the mean where there is no quiet part. */
   base: number;
@@ -18,9 +20,19 @@ export interface RecordChannel {
   /** Standard error of the offset, as if samples were independent. */
   offsetError: number | null;
   noise: number | null;
-  /** Samples missing inside the window. */
-  missing: number;
+  /** The quiet part is [0, quietTo). */
+  quietTo: number;
+  /** Where `x` stands for nothing, first to one past the last; what is missing behind the last sample among them. */
+  gaps: Gap[];
+  /** Samples filled in. */
+  filled: number;
   flags: string[];
+}
+
+/** A range of indices without samples. */
+export interface Gap {
+  from: number;
+  to: number;
 }
 
 /** Quiet parts shorter than this say nothing about offset and noise. */
@@ -32,19 +44,21 @@ const QUIET_MARGIN_SECONDS = 0.5;
  * @param channels calibrated samples of the window
  * @param triggerMicros what lies before it (less a margin) is the quiet part
  * @param toMicros end of the window
+ * @param whole a person says that all of it is one event: its channels need not begin before a trigger
  */
 export function arrangeRecord(
   bridge: BridgeDefinition,
   channels: readonly WindowChannel[],
   triggerMicros: Micros,
   toMicros: Micros,
+  whole = false,
 ): RecordChannel[] {
   const arranged: RecordChannel[] = [];
   for (const channel of channels) {
     const sensor = bridge.sensors.find(({ id }) => id === channel.sensor);
     const first = channel.runs[0];
     if (sensor === undefined || first === undefined) continue;
-    arranged.push(arrange(sensor, channel, first.startMicros, triggerMicros, toMicros));
+    arranged.push(arrange(sensor, channel, first.startMicros, { triggerMicros, toMicros, whole }));
   }
   return arranged;
 }
@@ -66,6 +80,23 @@ export function rangeOf(channel: RecordChannel, fromMicros: Micros, toMicros: Mi
   return [from, Math.max(from, clamp(Math.floor(indexAt(channel, toMicros)) + 1))];
 }
 
+/** The parts of a range that hold samples, `margin` samples away from every gap. */
+export function solidParts(
+  channel: RecordChannel,
+  from: number,
+  to: number,
+  margin: number,
+): [from: number, to: number][] {
+  const parts: [number, number][] = [];
+  let begin = from;
+  for (const gap of channel.gaps) {
+    if (gap.from - margin > begin) parts.push([begin, Math.min(to, gap.from - margin)]);
+    begin = Math.max(begin, gap.to + margin);
+  }
+  if (begin < to) parts.push([begin, to]);
+  return parts.filter(([first, last]) => last > first && first < to);
+}
+
 /** Whether the channel's numbers may stand for the bridge. */
 export function trusted(channel: RecordChannel): boolean {
   return !channel.flags.some(
@@ -77,28 +108,19 @@ function arrange(
   sensor: Sensor,
   channel: WindowChannel,
   startMicros: Micros,
-  triggerMicros: Micros,
-  toMicros: Micros,
+  frame: { triggerMicros: Micros; toMicros: Micros; whole: boolean },
 ): RecordChannel {
   const { rateHz } = channel;
-  const length = Math.max(1, Math.floor(((toMicros - startMicros) * rateHz) / MICROS_PER_SECOND + 1e-6) + 1);
-  const x = new Float64Array(length);
-  const present = new Uint8Array(length);
-  for (const run of channel.runs) {
-    const at = Math.round(((run.startMicros - startMicros) * rateHz) / MICROS_PER_SECOND);
-    const count = Math.min(run.samples.length, length - at);
-    for (let i = 0; i < count; i++) {
-      x[at + i] = run.samples[i]!;
-      present[at + i] = 1;
-    }
-  }
-  const quietTo = ((triggerMicros - startMicros) * rateHz) / MICROS_PER_SECOND - QUIET_MARGIN_SECONDS * rateHz;
+  const indexOf = (micros: Micros): number => ((micros - startMicros) * rateHz) / MICROS_PER_SECOND;
+  const { x, present } = laidOut(channel, startMicros, Math.max(1, Math.floor(indexOf(frame.toMicros) + 1e-6) + 1));
+  const quietTo = indexOf(frame.triggerMicros) - QUIET_MARGIN_SECONDS * rateHz;
   const quiet = quietPart(x, present, Math.floor(quietTo));
-  const missing = missingSamples(present, rateHz);
-  const flags = flagsOf(sensor, x, present, missing, quiet.noise);
-  const base = quiet.count >= QUIET_SECONDS_LEAST * rateHz ? quiet.mean : meanOf(x, present);
-  for (let i = 0; i < length; i++) x[i] = present[i] === 1 ? x[i]! - base : 0;
   const known = quiet.count >= QUIET_SECONDS_LEAST * rateHz;
+  const base = known ? quiet.mean : meanOf(x, present);
+  const { gaps, filled } = closeHoles(x, present);
+  const flags = flagsOf(sensor, x, present, quiet.noise);
+  if (rateHz >= DYNAMIC_HZ && incomplete(channel, gaps, x.length, Math.max(0, quietTo), frame)) flags.unshift('gap');
+  for (let i = 0; i < x.length; i++) x[i]! -= base;
   return {
     sensor,
     rateHz,
@@ -110,21 +132,80 @@ function arrange(
     offset: known ? base : null,
     offsetError: known ? quiet.noise / Math.sqrt(quiet.count) : null,
     noise: known ? quiet.noise : null,
-    missing,
+    quietTo: Math.max(0, Math.min(x.length, Math.floor(quietTo))),
+    gaps,
+    filled,
     flags,
   };
 }
 
 /**
- * Samples missing between the first and the last; and those after the last, unless it is the fraction of a second by
- * which a recording ends before its window.
+ * A logger's clock drifts against the time it stamps, so that runs come to lie between the points of the grid. A run
+ * that begins less than this many samples off follows the one before: the logger sampled on; no sample was lost.
  */
-function missingSamples(present: Uint8Array, rateHz: number): number {
-  const last = present.lastIndexOf(1);
-  let missing = last + 1;
-  for (let i = 0; i <= last; i++) missing -= present[i]!;
-  const after = present.length - 1 - last;
-  return missing + (after > 0.5 * rateHz ? after : 0);
+const DRIFT_SAMPLES = 0.75;
+
+/** The runs on the grid, and where samples are. */
+function laidOut(
+  channel: WindowChannel,
+  startMicros: Micros,
+  length: number,
+): { x: Float64Array; present: Uint8Array } {
+  const x = new Float64Array(length);
+  const present = new Uint8Array(length);
+  let next = 0;
+  for (const run of channel.runs) {
+    const exact = ((run.startMicros - startMicros) * channel.rateHz) / MICROS_PER_SECOND;
+    const at = Math.abs(exact - next) < DRIFT_SAMPLES ? next : Math.round(exact);
+    const count = Math.min(run.samples.length, length - at);
+    for (let i = 0; i < count; i++) {
+      x[at + i] = run.samples[i]!;
+      present[at + i] = 1;
+    }
+    next = at + run.samples.length;
+  }
+  return { x, present };
+}
+
+/** Fills short holes with what must have been there; longer ones with a straight line that stands for nothing. */
+function closeHoles(x: Float64Array, present: Uint8Array): { gaps: Gap[]; filled: number } {
+  const gaps: Gap[] = [];
+  let filled = 0;
+  for (let from = 0; from < x.length; from++) {
+    if (present[from] === 1) continue;
+    let to = from;
+    while (to < x.length && present[to] !== 1) to += 1;
+    const short = to - from <= HOLE_MOST && from > 0 && to < x.length;
+    if (short) {
+      fillHole(x, present, from, to - from);
+      filled += to - from;
+    } else {
+      if (to < x.length) fillStraight(x, from, to - from);
+      else x.fill(x[from - 1] ?? 0, from);
+      gaps.push({ from, to });
+    }
+    from = to;
+  }
+  return { gaps, filled };
+}
+
+/** A recording's channels may begin and end so far apart. */
+const RAGGED_SECONDS = 0.5;
+
+/** Whether the channel misses a part of the train: a gap from shortly before the trigger on, a late start, an early end. */
+function incomplete(
+  channel: WindowChannel,
+  gaps: readonly Gap[],
+  length: number,
+  doubtFrom: number,
+  { triggerMicros, whole }: { triggerMicros: Micros; whole: boolean },
+): boolean {
+  const ragged = RAGGED_SECONDS * channel.rateHz;
+  const late = channel.runs[0]!.startMicros - triggerMicros;
+  return (
+    late > (whole ? RAGGED_SECONDS * MICROS_PER_SECOND : TICK_MICROS) ||
+    gaps.some(({ from, to }) => to > doubtFrom && (to < length || to - from > ragged))
+  );
 }
 
 function quietPart(x: Float64Array, present: Uint8Array, to: number): { mean: number; noise: number; count: number } {
@@ -150,71 +231,4 @@ function meanOf(x: Float64Array, present: Uint8Array): number {
     count += 1;
   }
   return count === 0 ? 0 : sum / count;
-}
-
-/** Share of missing samples from which a channel counts as gappy. */
-const GAP_SHARE = 0.002;
-
-function flagsOf(sensor: Sensor, x: Float64Array, present: Uint8Array, missing: number, noise: number): string[] {
-  const flags: string[] = [];
-  const dynamic = sensor.rateHz >= 10;
-  if (dynamic && missing > Math.max(1, GAP_SHARE * x.length)) flags.push('gap');
-  if (dynamic && isFlat(x, present)) flags.push('flat');
-  if (isClipped(sensor, x)) flags.push('clipped');
-  if (sensor.noiseLimit !== undefined && noise > sensor.noiseLimit) flags.push('noise high');
-  if (dynamic && isDeckAcceleration(sensor) && hasSpikes(x)) flags.push('spike');
-  return flags;
-}
-
-/** Flat when half of all steps are exactly zero: a stuck or unplugged converter, not a quiet one. */
-function isFlat(x: Float64Array, present: Uint8Array): boolean {
-  let still = 0;
-  let steps = 0;
-  for (let i = 1; i < x.length; i++) {
-    if (present[i] !== 1 || present[i - 1] !== 1) continue;
-    steps += 1;
-    if (x[i] === x[i - 1]) still += 1;
-  }
-  return steps > 0 && still === steps;
-}
-
-function isClipped(sensor: Sensor, x: Float64Array): boolean {
-  if (sensor.range === undefined) return false;
-  const { factor, shift } = unitConversion(sensor.unit, sensor.quantity) ?? { factor: 1, shift: 0 };
-  const low = Math.fround(sensor.range[0]! * factor + shift);
-  const high = Math.fround(sensor.range[1]! * factor + shift);
-  let row = 0;
-  for (const value of x) {
-    row = value <= low || value >= high ? row + 1 : 0;
-    if (row >= 3) return true;
-  }
-  return false;
-}
-
-/** One sample off by S bends the trace by S, and by −S/2 on either side; a step or a kink does not. */
-function alone(before: number, here: number, after: number): boolean {
-  const half = -here / 2;
-  return Math.abs(before - half) < Math.abs(half) / 2 && Math.abs(after - half) < Math.abs(half) / 2;
-}
-
-/** A spike bends the trace this many times more than the r.m.s. bend of the samples about it, and by at least so much, m/s². */
-const SPIKE_RATIO = 8;
-const SPIKE_LEAST = 0.05;
-/** The samples about it: from the third to this one on each side. */
-const SPIKE_REACH = 20;
-
-/**
- * A single sample that stands out from the line between its neighbours far more than any other near it: no deck does
- * that, a loose cable does. For normal noise the chance of a false one is below 1e-14 a sample.
- */
-function hasSpikes(x: Float64Array): boolean {
-  const bend = (i: number): number => x[i]! - (x[i - 1]! + x[i + 1]!) / 2;
-  for (let i = SPIKE_REACH + 1; i < x.length - SPIKE_REACH - 1; i++) {
-    const here = Math.abs(bend(i));
-    if (here < SPIKE_LEAST || !alone(bend(i - 1), bend(i), bend(i + 1))) continue;
-    let squares = 0;
-    for (let k = 3; k <= SPIKE_REACH; k++) squares += bend(i - k) ** 2 + bend(i + k) ** 2;
-    if (here > SPIKE_RATIO * Math.sqrt(squares / (2 * (SPIKE_REACH - 2)))) return true;
-  }
-  return false;
 }

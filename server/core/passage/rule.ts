@@ -2,10 +2,13 @@
  * The rules by which passages are found and measured, in one place and under one version. A stored passage names the
  * version it was made with; any change here that can change a number needs a new one.
  */
-export const RULE_VERSION = '2026-12-2';
+export const RULE_VERSION = '2026-12-3';
 
 /** Features of the stream are gathered on a fixed grid of event time, so that no split of the samples can matter. */
 export const TICK_MICROS = 100_000;
+
+/** Slower channels (temperature) take no part in detection and are not held to be flat or gappy. */
+export const DYNAMIC_HZ = 10;
 
 export const RULE = {
   /** Live offset: a running mean of this time constant; also the shortest settling before levels are watched. */

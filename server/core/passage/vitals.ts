@@ -3,6 +3,7 @@ import type { ConditionCode, SensorCondition } from '../contract/health.ts';
 import { MICROS_PER_SECOND, type Micros } from '../contract/time.ts';
 import { unitConversion } from '../contract/units.ts';
 import { quantile } from '../signal/robust.ts';
+import { DYNAMIC_HZ } from './rule.ts';
 
 /** Watches one channel for what a broken sensor does: stuck values, clipping, spikes, a noise floor or offset that moved. */
 export interface Vitals {
@@ -95,7 +96,7 @@ export function watchVitals(
 ): void {
   const note = (code: ConditionCode, state: SensorCondition['state'], micros: Micros, detail: string): void =>
     tell({ bridge, sensor: vitals.sensor, code, state, micros, detail });
-  const dynamic = vitals.rateHz >= 10;
+  const dynamic = vitals.rateHz >= DYNAMIC_HZ;
   if (dynamic) watchShape(vitals, x, from, to, microsAt, note);
   let at = from;
   while (at < to) {

@@ -1,4 +1,4 @@
-import { kaiser } from './kaiser.ts';
+import { between, PHASES } from './interpolation.ts';
 
 /** The largest magnitude of a signal, also between its samples. */
 export interface TruePeak {
@@ -8,11 +8,6 @@ export interface TruePeak {
   index: number;
 }
 
-/** Taps on either side, and steps between two samples, of the interpolating kernel. */
-const HALF = 12;
-const PHASES = 16;
-/** Kaiser's shape factor: stop band −100 dB for signals up to 0.36 of the sampling rate with 24 taps. */
-const BETA = 10;
 /** A swing's highest sample may be as low as cos(π/4) of its crest at a quarter of the sampling rate. */
 const CANDIDATE = 0.7;
 
@@ -83,20 +78,20 @@ function crest(x: Float64Array, i: number, from: number, to: number): TruePeak {
   const first = (i - 1) * PHASES;
   const last = (i + 1) * PHASES;
   let g = i * PHASES + startPhase(sign * x[i - 1]!, sign * sample.value, sign * x[i + 1]!);
-  let b = sign * onGrid(x, g);
-  let a = sign * onGrid(x, g - 1);
-  let c = sign * onGrid(x, g + 1);
+  let b = sign * between(x, g);
+  let a = sign * between(x, g - 1);
+  let c = sign * between(x, g + 1);
   while (a > b && g > first) {
     g--;
     c = b;
     b = a;
-    a = sign * onGrid(x, g - 1);
+    a = sign * between(x, g - 1);
   }
   while (c > b && g < last) {
     g++;
     a = b;
     b = c;
-    c = sign * onGrid(x, g + 1);
+    c = sign * between(x, g + 1);
   }
   const bend = a - 2 * b + c;
   if (!(bend < 0 && b >= a && b >= c)) return sample;
@@ -108,45 +103,3 @@ function startPhase(a: number, b: number, c: number): number {
   const bend = a - 2 * b + c;
   return bend < 0 ? Math.round(((0.5 * (a - c)) / bend) * PHASES) : 0;
 }
-
-/** The interpolated signal at g / PHASES samples. */
-function onGrid(x: Float64Array, g: number): number {
-  const whole = Math.floor(g / PHASES);
-  const phase = g - whole * PHASES;
-  if (phase === 0) return beyond(x, whole);
-  const row = phase * 2 * HALF;
-  const begin = whole - HALF + 1;
-  let sum = 0;
-  if (begin >= 0 && begin + 2 * HALF <= x.length) {
-    for (let k = 0; k < 2 * HALF; k++) sum += KERNEL[row + k]! * x[begin + k]!;
-  } else {
-    for (let k = 0; k < 2 * HALF; k++) sum += KERNEL[row + k]! * beyond(x, begin + k);
-  }
-  return sum;
-}
-
-/** Sample i, also a little before the first and behind the last, by point reflection; zero further away. */
-function beyond(x: Float64Array, i: number): number {
-  const last = x.length - 1;
-  if (i < 0) return -i > last ? x[0]! : 2 * x[0]! - x[-i]!;
-  if (i > last) return i - last > last ? x[last]! : 2 * x[last]! - x[2 * last - i]!;
-  return x[i]!;
-}
-
-/** Row p holds the 24 taps for a point p / PHASES behind the twelfth sample; each row sums to 1. */
-const KERNEL = ((): Float64Array => {
-  const taps = new Float64Array(PHASES * 2 * HALF);
-  for (let p = 0; p < PHASES; p++) {
-    const row = p * 2 * HALF;
-    let sum = 0;
-    for (let k = 0; k < 2 * HALF; k++) {
-      const t = k - HALF + 1 - p / PHASES;
-      const sinc = t === 0 ? 1 : Math.sin(Math.PI * t) / (Math.PI * t);
-      const tap = sinc * kaiser(t / HALF, BETA);
-      taps[row + k] = tap;
-      sum += tap;
-    }
-    for (let k = 0; k < 2 * HALF; k++) taps[row + k]! /= sum;
-  }
-  return taps;
-})();

@@ -185,7 +185,10 @@ describe('a sensor that is not to be trusted', () => {
     const events = ['A1', 'A2', 'A3', 'A4'].map((sensor) => ({ ...fault('spikes', 3), sensor }) as SceneEvent);
     const { output } = scene(WITH_GAUGES, 60, passage(20, 'light engine', 30), ...events);
     const record = onlyPassage(output.passages);
-    expect(record.peak.measured).toMatchObject({ quality: 'poor', reason: 'no channel that may be trusted' });
+    expect(record.peak.measured).toMatchObject({
+      quality: 'poor',
+      reason: 'no channel that may be trusted; sensor: spike',
+    });
     expect(record.f1Hz.value).toBeNull();
     expect(record.quality).toBe('poor');
   });
