@@ -185,6 +185,9 @@ export function countUnanswered(alarms: readonly Alarm[], bridge: string | null 
   return counts;
 }
 
+/** All of them, whatever their severity. */
+export const totalOf = (counts: AlarmCounts): number => counts.AL + counts.IL + counts.IAL;
+
 /** The gravest severity that is counted, or null. */
 export function gravest(counts: AlarmCounts): Severity | null {
   return SEVERITIES.toReversed().find((severity) => counts[severity] > 0) ?? null;
