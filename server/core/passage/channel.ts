@@ -5,9 +5,10 @@ import { MICROS_PER_SECOND, sampleMicros, type Micros } from '../contract/time.t
 import { unitConversion } from '../contract/units.ts';
 import { highpass, lowpass } from '../signal/butterworth.ts';
 import { createCascade, filterInto, settleAt, type Cascade } from '../signal/cascade.ts';
+import { HOLE_MOST } from '../signal/hole.ts';
 import { bandOfLimit } from './band.ts';
 import { closeIntake, createIntake, takeIn, type Intake, type IntakeSink } from './intake.ts';
-import { createLevelWatch, watchLevel, type LevelWatch } from './level.ts';
+import { createLevelWatch, resumeLevel, watchLevel, type LevelWatch } from './level.ts';
 import { createMemory, remember, type Memory } from './memory.ts';
 import { createPulseFinder, findPulses, type PulseFinder } from './pulse.ts';
 import { createRollingSpectrum, rollSpectrum, type RollingSpectrum } from './rolling-spectrum.ts';
@@ -34,7 +35,9 @@ export interface Channel {
   runStart: Micros;
   runCount: number;
   newest: Micros | null;
-  bands: { cascade: Cascade | null; watches: LevelWatch[] }[];
+  /** The last sample, less the offset. */
+  lastCentred: number;
+  bands: LiveBand[];
   noise: Cascade | null;
   pulses: PulseFinder | null;
   spectrum: RollingSpectrum | null;
@@ -46,6 +49,17 @@ export interface Channel {
   through: number;
   /** False while the channel lags so far that the others no longer wait. */
   waitedFor: boolean;
+}
+
+/** One live filter, and the limits that ask for its band. */
+interface LiveBand {
+  upToHz: number;
+  cascade: Cascade | null;
+  watches: LevelWatch[];
+  /** Samples until the filter has forgotten a gap; levels are not watched meanwhile. */
+  settling: number;
+  /** Samples watched since then. */
+  watched: number;
 }
 
 /** What one channel did in one tenth of a second. */
@@ -91,6 +105,7 @@ export function createChannel(bridge: BridgeDefinition, sensor: Sensor): Channel
     runStart: 0,
     runCount: 0,
     newest: null,
+    lastCentred: 0,
     bands: bandsOf(bridge, sensor, limits),
     noise: deck ? createCascade(highpass(RULE.noiseOrder, noiseHz, sensor.rateHz)) : null,
     pulses: countsAxles(sensor) ? createPulseFinder() : null,
@@ -103,7 +118,7 @@ export function createChannel(bridge: BridgeDefinition, sensor: Sensor): Channel
 }
 
 /** One live filter per band edge, shared by the limits that ask for it. Without a limit: the code's band, for the screen. */
-function bandsOf(bridge: BridgeDefinition, sensor: Sensor, limits: BridgeDefinition['limits']): Channel['bands'] {
+function bandsOf(bridge: BridgeDefinition, sensor: Sensor, limits: BridgeDefinition['limits']): LiveBand[] {
   if (!isDeckAcceleration(sensor)) return [];
   const byEdge = new Map<number, LevelWatch[]>();
   for (const limit of limits) {
@@ -112,6 +127,9 @@ function bandsOf(bridge: BridgeDefinition, sensor: Sensor, limits: BridgeDefinit
   }
   if (byEdge.size === 0) byEdge.set(bandOfLimit(bridge, 'EN 1990 A2', sensor).upToHz, []);
   return [...byEdge].map(([upToHz, watches]) => ({
+    upToHz,
+    settling: 0,
+    watched: 0,
     cascade: upToHz < 0.49 * sensor.rateHz ? createCascade(lowpass(RULE.bandOrder, upToHz, sensor.rateHz)) : null,
     watches,
   }));
@@ -174,16 +192,17 @@ function process(
   watchVitals(channel.vitals, bridge, samples, from, to, microsAt, sink.condition);
   if (channel.deck) {
     removeOffset(channel, samples, from, to);
-    if (afterGap) settleFilters(channel, centred[from]!);
-    const settled = channel.offsetSeen >= RULE.settleSeconds * channel.sensor.rateHz;
+    if (afterGap) passGap(channel, centred[from]!, microsAt(from));
+    channel.lastCentred = centred[to - 1]!;
+    const unsettled = Math.ceil(RULE.settleSeconds * channel.sensor.rateHz - (channel.offsetSeen - (to - from)));
     channel.bands.forEach((band, b) => {
       if (band.cascade === null) filtered.set(centred.subarray(from, to), from);
       else filterInto(band.cascade, centred, filtered, from, to);
-      const firstWatched = settled
-        ? Math.max(from, to - (channel.offsetSeen - RULE.settleSeconds * channel.sensor.rateHz))
-        : to;
+      const firstWatched = Math.min(to, from + Math.max(0, unsettled, band.settling));
+      band.settling = Math.max(0, band.settling - (to - from));
+      band.watched += to - firstWatched;
       for (const watch of band.watches) {
-        watchLevel(watch, filtered, Math.ceil(firstWatched), to, microsAt, (event) =>
+        watchLevel(watch, filtered, firstWatched, to, microsAt, (event) =>
           sink.level({ bridge, sensor: channel.sensor.id, ...event }),
         );
       }
@@ -224,9 +243,34 @@ function removeOffset(channel: Channel, samples: Float32Array, from: number, to:
   channel.offsetSeen = offsetSeen;
 }
 
-function settleFilters(channel: Channel, value: number): void {
-  for (const band of channel.bands) if (band.cascade !== null) settleAt(band.cascade, value);
-  settleAt(channel.noise!, value);
+/** A Butterworth low-pass of order 4 has forgotten all but 0.1 % of a step after this many periods of its edge. */
+const SETTLING_PERIODS = 3;
+
+/**
+ * The filters go over a hole of a sample or two on a straight line; after a longer gap they begin anew. Either way they
+ * hold for a while what the bridge did not do, and levels are not watched meanwhile: but where single samples are missing
+ * all the time, they are watched for at least half of it.
+ */
+function passGap(channel: Channel, next: number, nextMicros: Micros): void {
+  const { newest, lastCentred } = channel;
+  const { rateHz } = channel.sensor;
+  const missing = newest === null ? Infinity : Math.round(((nextMicros - newest) * rateHz) / MICROS_PER_SECOND) - 1;
+  const short = missing >= 0 && missing <= HOLE_MOST;
+  for (const filter of [...channel.bands.map(({ cascade }) => cascade), channel.noise]) {
+    if (filter === null) continue;
+    if (!short) settleAt(filter, next);
+    for (let i = 1; short && i <= missing; i++) {
+      const onLine = Float64Array.of(lastCentred + ((next - lastCentred) * i) / (missing + 1));
+      filterInto(filter, onLine, onLine, 0, 1);
+    }
+  }
+  for (const band of channel.bands) {
+    const settling = band.cascade === null ? 0 : Math.ceil((SETTLING_PERIODS * rateHz) / band.upToHz);
+    if (short && band.watched < settling) continue;
+    band.settling = settling;
+    band.watched = 0;
+    band.watches.forEach(resumeLevel);
+  }
 }
 
 /** Sums the features of each tick; `filtered` holds what is above the noise edge. */

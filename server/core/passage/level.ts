@@ -8,7 +8,8 @@ import { RULE } from './rule.ts';
 /**
  * Watches the live, band-limited signal of one channel against one limit, sample by sample. An excursion begins when
  * the lowest level is passed and ends after `RULE.returnSeconds` below it. Within it an event is given for each graver
- * level, at the sample that passed it, and for each half-wave that is at least 1 % higher than what was told.
+ * level, at the sample or the crest between two samples that passed it, and for each half-wave that is at least 1 %
+ * higher than what was told.
  */
 export interface LevelWatch {
   limit: string;
@@ -22,6 +23,10 @@ export interface LevelWatch {
   crestMicros: Micros;
   crestSign: number;
   lastAboveMicros: Micros;
+  /** The last two samples, NaN where there is none, and when the last was: between them and the next may be a crest. */
+  beforeLast: number;
+  last: number;
+  lastMicros: Micros;
 }
 
 export function createLevelWatch(limit: Limit): LevelWatch {
@@ -35,10 +40,28 @@ export function createLevelWatch(limit: Limit): LevelWatch {
     crestMicros: 0,
     crestSign: 1,
     lastAboveMicros: 0,
+    beforeLast: NaN,
+    last: NaN,
+    lastMicros: 0,
   };
 }
 
+/** After a gap: what was before it makes no crest with what follows. */
+export function resumeLevel(watch: LevelWatch): void {
+  watch.beforeLast = NaN;
+  watch.last = NaN;
+}
+
+/** Below this share of the lowest level no parabola through samples reaches the level: it rises by 0.175 of it at most. */
+const NEAR = 0.7;
+
+type Tell = (event: Pick<LevelEvent, 'limit' | 'kind' | 'severity' | 'micros' | 'value'>) => void;
+
 /**
+ * Crests are placed by a parabola through three samples, so that an alarm does not wait for a sample to fall on one: of
+ * a sine it reads 0.3 % low at most at 0.09 of the rate, 1.7 % at 0.15 and 8 % at 0.225, where the samples alone read
+ * 4, 11 and 24 % low.
+ *
  * @param x live signal in m/s²
  * @param from first sample to watch
  * @param to one past the last
@@ -50,43 +73,76 @@ export function watchLevel(
   from: number,
   to: number,
   microsAt: (index: number) => Micros,
-  tell: (event: Pick<LevelEvent, 'limit' | 'kind' | 'severity' | 'micros' | 'value'>) => void,
+  tell: Tell,
 ): void {
-  if (watch.severity === null && !anyAbove(x, from, to, watch.lowest)) return;
+  const near = NEAR * watch.lowest;
+  if (watch.severity === null && !(Math.abs(watch.last) > near) && !anyAbove(x, from, to, near)) {
+    keepLast(watch, x, from, to, microsAt);
+    return;
+  }
   for (let i = from; i < to; i++) {
     const value = x[i]!;
-    const magnitude = Math.abs(value);
-    const sign = value < 0 ? -1 : 1;
-    if (sign !== watch.crestSign) {
-      tellCrest(watch, tell);
-      watch.crestSign = sign;
-      watch.crest = 0;
-    }
-    if (magnitude > watch.lowest) {
-      const micros = microsAt(i);
-      watch.lastAboveMicros = micros;
-      if (magnitude > watch.crest) {
-        watch.crest = magnitude;
-        watch.crestMicros = micros;
-      }
-      const severity = severityOf(magnitude, watch.levels)!;
-      if (severityRank(severity) > severityRank(watch.severity)) {
-        watch.severity = severity;
-        watch.told = magnitude;
-        tell({ limit: watch.limit, kind: 'passed', severity, micros, value: magnitude });
-      }
-    } else if (watch.severity !== null) {
-      const micros = microsAt(i);
-      if (micros - watch.lastAboveMicros < RULE.returnSeconds * MICROS_PER_SECOND) continue;
-      tell({ limit: watch.limit, kind: 'returned', severity: watch.severity, micros, value: watch.told });
-      watch.severity = null;
-      watch.told = 0;
-      if (!anyAbove(x, i, to, watch.lowest)) return;
-    }
+    const crest = crestOf(watch.beforeLast, watch.last, value);
+    if (Math.abs(crest) > watch.lowest) takeHeight(watch, crest, watch.lastMicros, tell);
+    const micros = microsAt(i);
+    takeHeight(watch, value, micros, tell);
+    watch.beforeLast = watch.last;
+    watch.last = value;
+    watch.lastMicros = micros;
   }
 }
 
-function tellCrest(watch: LevelWatch, tell: Parameters<typeof watchLevel>[5]): void {
+function keepLast(
+  watch: LevelWatch,
+  x: Float64Array,
+  from: number,
+  to: number,
+  microsAt: (index: number) => Micros,
+): void {
+  if (to <= from) return;
+  watch.beforeLast = to - from > 1 ? x[to - 2]! : watch.last;
+  watch.last = x[to - 1]!;
+  watch.lastMicros = microsAt(to - 1);
+}
+
+/** Top of the parabola through three samples, signed, where the middle one is the highest; else 0. */
+function crestOf(before: number, here: number, after: number): number {
+  const sign = here < 0 ? -1 : 1;
+  const bend = sign * (2 * here - before - after);
+  if (sign * before > sign * here || sign * after > sign * here || !(bend > 0)) return 0;
+  return here + (sign * (before - after) ** 2) / (8 * bend);
+}
+
+/** One height of the signal, a sample or a crest, in order of time. */
+function takeHeight(watch: LevelWatch, value: number, micros: Micros, tell: Tell): void {
+  const magnitude = Math.abs(value);
+  const sign = value < 0 ? -1 : 1;
+  if (sign !== watch.crestSign) {
+    tellCrest(watch, tell);
+    watch.crestSign = sign;
+    watch.crest = 0;
+  }
+  if (magnitude > watch.lowest) {
+    watch.lastAboveMicros = micros;
+    if (magnitude > watch.crest) {
+      watch.crest = magnitude;
+      watch.crestMicros = micros;
+    }
+    const severity = severityOf(magnitude, watch.levels)!;
+    if (severityRank(severity) > severityRank(watch.severity)) {
+      watch.severity = severity;
+      watch.told = magnitude;
+      tell({ limit: watch.limit, kind: 'passed', severity, micros, value: magnitude });
+    }
+  } else if (watch.severity !== null && micros - watch.lastAboveMicros >= RULE.returnSeconds * MICROS_PER_SECOND) {
+    tell({ limit: watch.limit, kind: 'returned', severity: watch.severity, micros, value: watch.told });
+    watch.severity = null;
+    watch.told = 0;
+    watch.crest = 0;
+  }
+}
+
+function tellCrest(watch: LevelWatch, tell: Tell): void {
   if (watch.severity === null || watch.crest <= watch.told * 1.01) return;
   watch.told = watch.crest;
   tell({ limit: watch.limit, kind: 'passed', severity: watch.severity, micros: watch.crestMicros, value: watch.crest });
