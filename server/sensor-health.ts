@@ -1,7 +1,7 @@
 import type { BridgeDefinition, Sensor } from '#core/contract/bridge.ts';
 import type { SensorCondition, SensorHealth } from '#core/contract/health.ts';
 import type { SensorVitals } from '#core/contract/pipeline.ts';
-import { MICROS_PER_SECOND, timeName, type Micros } from '#core/contract/time.ts';
+import { MICROS_PER_SECOND, type Micros } from '#core/contract/time.ts';
 import { DEFAULT_SILENT_AFTER_S } from '#core/alarm/silence.ts';
 
 /** What is known of the health of a bridge's sensors, gathered from what the pipeline says and from when each was heard. */
@@ -81,7 +81,7 @@ export function healthView(record: HealthRecord, definition: BridgeDefinition, n
       return { ...health, active: [...health.active], counts: { ...health.counts } };
     }
     const since = health.newestMicros;
-    const silent = { code: 'silent' as const, sinceMicros: since, detail: `nothing since ${timeName(since)} UTC` };
+    const silent = { code: 'silent' as const, sinceMicros: since, detail: 'since then no sample has come' };
     return { ...health, active: [silent, ...health.active], counts: { ...health.counts } };
   });
 }

@@ -228,6 +228,12 @@ export function createLive({ backend, origins, report, pastMicros, limits: given
     tellAll(
       sharedText('status', { type: 'status', nowMicros, status: backend.systemStatus() } satisfies ServerMessage),
     );
+    // With the status, so that both name the same newest sample. A silent sensor is told by this alone: it says nothing itself.
+    const watched = new Set([...seats].flatMap(({ group }) => group?.envelopes.bridge ?? []));
+    for (const bridge of watched) {
+      const view = backend.bridge(bridge);
+      if (view !== null) tellWatchers(bridge, 'health', () => healthMessage(bridge, view.sensors));
+    }
   }, STATUS_MS);
   const pinging = setInterval(() => {
     for (const seat of seats) {

@@ -194,6 +194,15 @@ describe('the live socket', () => {
     expect([...ofType(idle, 'axles'), ...ofType(idle, 'spectrum'), ...ofType(idle, 'health')]).toEqual([]);
   });
 
+  test('tells those who watch a bridge once a second how its sensors are, though nothing comes from them', async () => {
+    const watcher = await watching({ sensors: [] });
+    const idle = await greeted();
+    const told = await watcher.until(() => ofType(watcher, 'health')[2]);
+    expect(told).toMatchObject({ bridge: 'ottermere', sensors: fakeBackend().bridge('ottermere')!.sensors });
+    expect(watcher.frames).toEqual([]);
+    expect(ofType(idle, 'health')).toEqual([]);
+  });
+
   test('answers what it does not understand with a complaint, counts it, and closes after twenty', async () => {
     web.live.close().catch(() => undefined);
     await web.stop();

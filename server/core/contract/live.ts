@@ -74,6 +74,7 @@ export const ServerMessage = Type.Union([
     stepHz: Type.Number(),
     psd: Type.Array(Type.Number()),
   }),
+  /** To those who watch the bridge: at once, once a second, and when something changes. */
   Type.Object({ type: Type.Literal('health'), bridge: Type.String(), sensors: Type.Array(SensorHealth) }),
   Type.Object({ type: Type.Literal('complaint'), code: Type.String(), message: Type.String() }),
 ]);
