@@ -62,6 +62,9 @@ function partsIn(micros: Micros, zone: string): { year: string; month: string; d
   return parts;
 }
 
+/** What stands beside a time of day in a zone: its name, or that it is the bridge's. */
+export const zoneWord = (zone: string): 'UTC' | 'local' => (zone === 'UTC' ? 'UTC' : 'local');
+
 /** `UTC+1`, `UTC−3:30`, `UTC`: how local time stands to UTC at that instant. */
 export function offsetIn(micros: Micros, zone: string): string {
   const name = formatter(zone, { hour: '2-digit', timeZoneName: 'shortOffset' })

@@ -1,7 +1,7 @@
 import type uPlot from 'uplot';
 import type { Micros } from '#core/contract/time.ts';
 import { acceleration, fixed } from '../format.ts';
-import { clockIn } from '../time.ts';
+import { clockIn, zoneWord } from '../time.ts';
 import type { Ink } from './ink.ts';
 import { DASHES, drawLozenge } from './limit-line.ts';
 import { ticks } from './scale.ts';
@@ -24,6 +24,8 @@ export interface StripFrame {
   /** Two points a column, as plotted. */
   traces: readonly (readonly (number | null)[])[];
   peaks: readonly LanePeak[];
+  /** From when the peaks are the largest; null for the window shown. */
+  peaksFromMicros: Micros | null;
   firstColumn: number;
   columnMicros: number;
   count: number;
@@ -295,7 +297,7 @@ function drawCount(sheet: Sheet, frame: StripFrame, index: number, write: Write)
   if (!peak || peak.peak === null) write('no data', right, y, frame.ink.signal, 'right', 600, 13);
   else if (lane.kind === 'axles') {
     if (frame.axles > 0) write(`${frame.axles} axles`, right, y, frame.ink.ink, 'right', 600, 13);
-    else write('no axles', right, y, frame.ink.ink2, 'right');
+    else write('none counted', right, y, frame.ink.ink2, 'right');
   } else write(`${fixed(peak.peak, 2)} ${lane.unit}`, right, y, frame.ink.ink, 'right', 600, 13);
 }
 
@@ -363,10 +365,17 @@ function drawTimes(sheet: Sheet, frame: StripFrame, write: Write): void {
   for (const at of seconds(frame, right - left)) {
     const x = sheet.x(at);
     stroke(context, x, bottom, x, bottom + 5);
-    if (x > left + 20 && x < right - 34) write(clockIn(at).slice(3), x, bottom + 17, ink.ink3, 'center');
+    if (x > left + 20 && x < right - 34) write(clockIn(at, frame.zone).slice(3), x, bottom + 17, ink.ink3, 'center');
   }
   write('now', right, bottom + 17, ink.ink, 'center', 600);
-  write('UTC', right + 18, bottom + 17, ink.ink3);
+  write(zoneWord(frame.zone), right + 18, bottom + 17, ink.ink3);
+  // The figures beside the lanes say since when they are the largest.
+  if (sheet.width >= 560) write(peaksSince(frame), sheet.width - 2, bottom + 17, ink.ink3, 'right');
+}
+
+/** `largest in 12 s`, or `since 15:01:05` while a passage is on. */
+function peaksSince({ peaksFromMicros, windowMicros, zone }: StripFrame): string {
+  return peaksFromMicros === null ? `largest in ${windowMicros / 1e6} s` : `since ${clockIn(peaksFromMicros, zone)}`;
 }
 
 function stroke(context: Sheet['context'], x1: number, y1: number, x2: number, y2: number): void {

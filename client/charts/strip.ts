@@ -36,7 +36,8 @@ export interface Strips {
 
 export interface StripReport {
   cursor(reading: { micros: Micros; values: (readonly [low: number, high: number] | null)[] } | null): void;
-  peaks(peaks: readonly LanePeak[]): void;
+  /** @param fromMicros from when they are the largest; null for the window shown */
+  peaks(peaks: readonly LanePeak[], fromMicros: Micros | null): void;
 }
 
 const AXIS = 24;
@@ -137,7 +138,7 @@ export function mountStrips(host: HTMLElement, firstHeight: number, source: Stri
       count,
       axles: source.axleCount(),
       zone: source.zone(),
-      peaks: peaksOf(source, first, count),
+      ...peaksOf(source, first, count),
     };
     frame.ranges = rangesOf(frame);
     const origin = first * store.columnMicros;
@@ -148,7 +149,7 @@ export function mountStrips(host: HTMLElement, firstHeight: number, source: Stri
     const nowMs = performance.now();
     if (nowMs - toldMs > TELL_MS) {
       toldMs = nowMs;
-      report.peaks(frame.peaks);
+      report.peaks(frame.peaks, frame.peaksFromMicros);
     }
     dirty = false;
     if (source.running() && store.newestMicros > 0 && !calm.matches) next();
@@ -245,12 +246,15 @@ function fill(buffers: Buffers, source: StripSource, first: number, count: numbe
   });
 }
 
-function peaksOf(source: StripSource, first: number, count: number): LanePeak[] {
-  const fromMicros = source.peaksFrom();
-  const from =
-    fromMicros === null ? first : Math.max(source.store.columnAt(fromMicros), first + count - source.store.capacity);
-  return source.lanes().map(({ sensor }) => {
-    const found = source.store.extremes(sensor.id, from, first + count - from);
+function peaksOf(
+  { store, peaksFrom, lanes }: StripSource,
+  first: number,
+  count: number,
+): Pick<StripFrame, 'peaks' | 'peaksFromMicros'> {
+  const wanted = peaksFrom();
+  const from = wanted === null ? first : Math.max(store.columnAt(wanted), first + count - store.capacity);
+  const peaks = lanes().map(({ sensor }) => {
+    const found = store.extremes(sensor.id, from, first + count - from);
     return {
       sensor: sensor.id,
       peak: found && Math.max(Math.abs(found.low), Math.abs(found.high)),
@@ -258,6 +262,7 @@ function peaksOf(source: StripSource, first: number, count: number): LanePeak[] 
       high: found?.high ?? 0,
     };
   });
+  return { peaks, peaksFromMicros: wanted === null ? null : Math.max(wanted, from * store.columnMicros) };
 }
 
 function emptyFrame(source: StripSource, ink: Ink): StripFrame {
@@ -269,6 +274,7 @@ function emptyFrame(source: StripSource, ink: Ink): StripFrame {
     ranges: source.lanes().map(() => ({ low: -1, high: 1 })),
     traces: [],
     peaks: [],
+    peaksFromMicros: null,
     firstColumn: 0,
     columnMicros,
     count: 0,

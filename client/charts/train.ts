@@ -41,13 +41,20 @@ export class LiveTrain {
   #counts = new Map<string, number>();
   #seen = new Set<string>();
   #lastMicros: Micros = 0;
+  #left = false;
 
   take(pulses: readonly AxlePulse[]): void {
     for (const pulse of pulses) this.#takeOne(pulse);
   }
 
+  /** The server says that the train has left: what has not been seen at the last sensor stands there no longer. */
+  leave(passage: string): void {
+    if (this.passage === null || this.passage === passage) this.#left = true;
+  }
+
   /** The train is gone, or was none. */
   clear(): void {
+    this.#left = false;
     this.passage = null;
     this.speedMs = null;
     this.#axles = [];
@@ -79,7 +86,7 @@ export class LiveTrain {
 
   /** How long the first axle that has not reached the last sensor should have been there, beyond what messages may take. */
   #overdueMicros(micros: Micros): number {
-    if (this.speedMs === null || this.#counts.size < 2) return 0;
+    if (this.#left || this.speedMs === null || this.#counts.size < 2) return 0;
     const places = this.#axles.flatMap((track) => track.map(({ alongM }) => alongM));
     const exitM = this.speedMs > 0 ? Math.max(...places) : Math.min(...places);
     const first = this.#axles.find((track) => track.every(({ alongM, micros: at }) => alongM !== exitM || at > micros));

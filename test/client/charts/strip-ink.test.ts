@@ -76,6 +76,7 @@ function draw(everyth: number, change: Partial<StripFrame> = {}): Map<string, nu
     ranges: lanes.map(() => ({ low: -5, high: 5 })),
     traces: lanes.map(() => trace),
     peaks: lanes.map(({ sensor }) => ({ sensor: sensor.id, peak: 4, low: 0, high: 4 })),
+    peaksFromMicros: null,
     firstColumn: 0,
     columnMicros: COLUMN,
     count: COLUMNS,

@@ -66,6 +66,16 @@ describe('the train on the bridge', () => {
     expect(train.axlesAt(T0 - 1)).toEqual([]);
   });
 
+  it('stands no longer where an axle was missed at the last sensor, once the server says that it has left', () => {
+    const train = new LiveTrain();
+    train.take(pulses(1).filter(({ alongM, micros }) => alongM === 0 || micros < T0 + 0.6e6));
+    const last = (): number => train.axlesAt(T0 + 10e6).at(-1)!.alongM;
+    train.leave('another');
+    expect(last()).toBeLessThan(16 + V * 0.5);
+    train.leave('p1');
+    expect(last()).toBeCloseTo(V * 10 - 21.5, 3);
+  });
+
   it('gives way to the next one', () => {
     const train = new LiveTrain();
     train.take(pulses(1));
