@@ -179,6 +179,7 @@ function process(
   sink: ChannelSink,
 ): void {
   if (startMicros !== null) {
+    if (afterGap && channel.newest !== null && startMicros < channel.newest) dropTicks(channel);
     channel.runStart = startMicros;
     channel.runCount = 0;
   }
@@ -317,6 +318,12 @@ function firstAtOrAfter(
   while (index > at + 1 && microsAt(index - 1) >= micros) index -= 1;
   while (index < to && microsAt(index) < micros) index += 1;
   return index;
+}
+
+/** The clock went back: what is not yet handed on belongs to a time that comes again. */
+function dropTicks(channel: Channel): void {
+  channel.ticks = [];
+  channel.tick = null;
 }
 
 function finishTick(channel: Channel): void {

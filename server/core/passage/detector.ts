@@ -101,6 +101,14 @@ export function detect(detector: Detector, setting: DetectorSetting, tick: TickF
   return events;
 }
 
+/** Time has gone back: what is open is closed, and all begins anew but for what has been learnt of the channels. */
+export function turnBack(detector: Detector, setting: DetectorSetting): DetectorEvent[] {
+  const events = interrupt(detector, setting);
+  detector.lastTick = -1;
+  detector.clearFrom = 0;
+  return events;
+}
+
 /** Nothing more will come, or not for long: what is open is closed where the data end. */
 export function interrupt(detector: Detector, setting: DetectorSetting): DetectorEvent[] {
   const events: DetectorEvent[] = [];

@@ -1,11 +1,16 @@
 import type { ConditionCode } from '../contract/health.ts';
 import type { Micros } from '../contract/time.ts';
 import { MICROS_PER_SECOND, sampleMicros } from '../contract/time.ts';
+import { createImprint, impress, isKnown, type Imprint } from './imprint.ts';
 import { RULE } from './rule.ts';
 
 /**
  * Puts the samples of one channel in order of time: joins what continues, drops what is known already, holds what
  * came too early, and declares a gap when the missing part has not come in good time.
+ *
+ * A logger's clock may step. One block stamped far ahead is set aside unless the next one continues it. Blocks stamped
+ * with times that have been are set aside too, as long as they are known or come singly; three seconds of new ones in a
+ * row mean that the clock went back: they begin a new run at their own time.
  */
 export interface Intake {
   rateHz: number;
@@ -16,6 +21,11 @@ export interface Intake {
   broken: boolean;
   /** Pieces from beyond the next expected sample, by time. */
   held: Piece[];
+  /** Pieces in a row from times that have been, and are not known. */
+  strays: Piece[];
+  imprint: Imprint;
+  /** After the clock went back: the time that had been reached before; null once it is reached again. */
+  reachedMicros: Micros | null;
   /** For the rate check: start and length of the last block, and the running excess of its spacing. */
   lastStart: Micros | null;
   lastCount: number;
@@ -41,6 +51,10 @@ export interface IntakeSink {
 const HELD_MOST = 64;
 /** A block within this many samples of its expected time continues the run. */
 const TOLERANCE_SAMPLES = 1.5;
+/** One block further ahead than this is not believed alone, s. */
+const FAR_SECONDS = 5;
+/** So much in a row from times that have been means that the clock went back, s. */
+const STRAY_SECONDS = 3;
 /** Relative error of the block spacing that is reported, and over how many blocks it must last. */
 const RATE_ERROR = 1e-3;
 const RATE_BLOCKS = 20;
@@ -52,6 +66,9 @@ export function createIntake(rateHz: number): Intake {
     count: 0,
     broken: true,
     held: [],
+    strays: [],
+    imprint: createImprint(),
+    reachedMicros: null,
     lastStart: null,
     lastCount: 0,
     spacing: 0,
@@ -87,6 +104,8 @@ function settle(intake: Intake, piece: Piece, sink: IntakeSink): void {
   const stepMicros = MICROS_PER_SECOND / intake.rateHz;
   const offBy = piece.startMicros - expected;
   if (Math.abs(offBy) <= TOLERANCE_SAMPLES * stepMicros) {
+    dropLoneAhead(intake, sink);
+    intake.strays = [];
     const corrected = Math.abs(offBy) > stepMicros / 2;
     if (corrected) {
       intake.anchorMicros = piece.startMicros;
@@ -95,6 +114,7 @@ function settle(intake: Intake, piece: Piece, sink: IntakeSink): void {
     }
     pass(intake, piece.samples, 0, sink, corrected);
   } else if (offBy > 0) {
+    intake.strays = [];
     hold(intake, piece, sink);
   } else {
     dropKnown(intake, piece, -offBy / stepMicros, sink);
@@ -106,23 +126,75 @@ function dropKnown(intake: Intake, piece: Piece, samplesBack: number, sink: Inta
   const known = Math.round(samplesBack);
   const seconds = (known / intake.rateHz).toFixed(3);
   if (known < piece.samples.length) {
+    intake.strays = [];
     sink.note('overlap', 'happened', piece.startMicros, `${known} samples came twice`);
     pass(intake, piece.samples, known, sink, false);
-  } else if (known - piece.samples.length > 60 * intake.rateHz) {
-    sink.note(
-      'clock step',
-      'happened',
-      piece.startMicros,
-      `a block from ${seconds} s ago was set aside; did the logger's clock go back?`,
-    );
-  } else {
+  } else if (isKnown(intake.imprint, intake.rateHz, piece.startMicros, piece.samples) === true) {
+    intake.strays = [];
     sink.note(
       'duplicate',
       'happened',
       piece.startMicros,
       `a block of ${piece.samples.length} known samples was dropped`,
     );
+  } else {
+    sink.note('disorder', 'happened', piece.startMicros, `a block from ${seconds} s ago was set aside`);
+    stray(intake, piece, sink);
   }
+}
+
+/** A piece from a time that has been, not known: with enough others in a row it tells that the clock went back. */
+function stray(intake: Intake, piece: Piece, sink: IntakeSink): void {
+  const last = intake.strays.at(-1);
+  if (last !== undefined && !continues(intake, last, piece)) intake.strays = [];
+  intake.strays.push(piece);
+  const first = intake.strays[0]!;
+  const end = endMicros(intake, piece);
+  if (intake.strays.length < 2 || end - first.startMicros < STRAY_SECONDS * MICROS_PER_SECOND) return;
+  const expected = expectedMicros(intake)!;
+  const back = (expected - first.startMicros) / MICROS_PER_SECOND;
+  sink.note(
+    'clock step',
+    'began',
+    first.startMicros,
+    `the logger's clock went back by ${back.toFixed(3)} s; its samples are taken at the time it gives`,
+  );
+  intake.reachedMicros = Math.max(expected, intake.reachedMicros ?? expected);
+  const strays = intake.strays;
+  intake.strays = [];
+  intake.held = [];
+  begin(intake, first, sink);
+  for (const next of strays.slice(1)) settle(intake, next, sink);
+}
+
+/** The stream goes on where it was: a single block far ahead was stamped wrongly. */
+function dropLoneAhead(intake: Intake, sink: IntakeSink): void {
+  const ahead = intake.held[0];
+  if (ahead === undefined || !isLoneAhead(intake, ahead)) return;
+  intake.held.shift();
+  const seconds = (ahead.startMicros - expectedMicros(intake)!) / MICROS_PER_SECOND;
+  sink.note(
+    'clock step',
+    'happened',
+    ahead.startMicros,
+    `a block stamped ${seconds.toFixed(3)} s ahead was set aside: those after it are on time`,
+  );
+}
+
+/** Whether the first piece held is far ahead and nothing continues it yet. */
+function isLoneAhead(intake: Intake, first: Piece): boolean {
+  const far = first.startMicros - expectedMicros(intake)! > FAR_SECONDS * MICROS_PER_SECOND;
+  const next = intake.held[1];
+  return far && (next === undefined || !continues(intake, first, next));
+}
+
+function continues(intake: Intake, before: Piece, after: Piece): boolean {
+  const off = Math.abs(after.startMicros - endMicros(intake, before));
+  return off <= (TOLERANCE_SAMPLES * MICROS_PER_SECOND) / intake.rateHz;
+}
+
+function endMicros(intake: Intake, piece: Piece): Micros {
+  return sampleMicros(piece.startMicros, piece.samples.length, intake.rateHz);
 }
 
 function hold(intake: Intake, piece: Piece, sink: IntakeSink): void {
@@ -148,8 +220,9 @@ function releaseHeld(intake: Intake, sink: IntakeSink, all: boolean): void {
       continue;
     }
     const last = intake.held.at(-1)!;
-    const end = sampleMicros(last.startMicros, last.samples.length, intake.rateHz);
-    const waited = end - expected >= RULE.reorderSeconds * MICROS_PER_SECOND || intake.held.length > HELD_MOST;
+    const end = endMicros(intake, last);
+    const late = end - expected >= RULE.reorderSeconds * MICROS_PER_SECOND && !isLoneAhead(intake, first);
+    const waited = late || intake.held.length > HELD_MOST;
     if (!all && !waited) return;
     const missing = Math.round((first.startMicros - expected) / stepMicros);
     sink.note('gap', 'happened', expected, `${missing} samples missing (${(missing / intake.rateHz).toFixed(3)} s)`);
@@ -185,10 +258,13 @@ function pass(intake: Intake, samples: Float32Array, from: number, sink: IntakeS
     const afterGap = intake.broken;
     intake.broken = false;
     restamp = false;
+    const startMicros = sampleMicros(intake.anchorMicros!, base + at, intake.rateHz);
+    impress(intake.imprint, intake.rateHz, startMicros, samples, at, end);
     sink.take(samples, at, end, stamp, afterGap);
     at = end;
   }
   intake.count = base + samples.length;
+  tellReached(intake, sink);
   if (missing > 0) {
     sink.note(
       'not a number',
@@ -197,6 +273,13 @@ function pass(intake: Intake, samples: Float32Array, from: number, sink: IntakeS
       `${missing} samples are not numbers`,
     );
   }
+}
+
+function tellReached(intake: Intake, sink: IntakeSink): void {
+  const expected = expectedMicros(intake)!;
+  if (intake.reachedMicros === null || expected < intake.reachedMicros) return;
+  intake.reachedMicros = null;
+  sink.note('clock step', 'ended', expected, 'the time that had been before the clock went back is reached again');
 }
 
 /** The spacing of block starts against their length tells a wrong rate, however small the blocks. */

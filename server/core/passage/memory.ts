@@ -38,9 +38,11 @@ export function remember(
   if (memory.length > most) forget(memory, memory.length - most);
 }
 
-/** Drops what is older than `micros`. */
+/** Drops what is older than `micros`, and what was there before the clock went back. */
 export function forgetBefore(memory: Memory, micros: Micros): void {
   if (memory.length === 0) return;
+  const back = memory.runs.findLastIndex((_, r) => r > 0 && wentBack(memory, r));
+  if (back > 0) forget(memory, memory.runs[back]!.index - memory.first);
   let drop = 0;
   for (let r = 0; r < memory.runs.length; r++) {
     const run = memory.runs[r]!;
@@ -73,6 +75,13 @@ export function recall(
     });
   });
   return found;
+}
+
+/** Whether a run begins before the one before it ends; a clock that is corrected takes back two samples at most. */
+function wentBack(memory: Memory, r: number): boolean {
+  const [before, run] = [memory.runs[r - 1]!, memory.runs[r]!];
+  const endMicros = sampleMicros(before.startMicros, run.index - before.index - 2, memory.rateHz);
+  return run.startMicros < endMicros;
 }
 
 function forget(memory: Memory, count: number): void {

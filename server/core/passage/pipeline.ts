@@ -9,6 +9,7 @@ import {
   detect,
   interrupt,
   neededFrom,
+  turnBack,
   type Detector,
   type DetectorEvent,
   type DetectorSetting,
@@ -148,6 +149,7 @@ function sinkOf(state: PipelineState, output: PipelineOutput): ChannelSink {
 function closeTicks(state: PipelineState, output: PipelineOutput, all: boolean): void {
   const taking = state.channels.filter(({ slow }) => !slow);
   for (;;) {
+    leavePast(state, taking, output);
     const number = Math.min(...taking.map(({ ticks }) => ticks[0]?.number ?? Infinity));
     if (number === Infinity) break;
     if (!all && !complete(taking, number)) break;
@@ -156,6 +158,20 @@ function closeTicks(state: PipelineState, output: PipelineOutput, all: boolean):
     tellVitals(state, number, output);
   }
   trimMemories(state);
+}
+
+/**
+ * Ticks that the detector has passed say nothing more: a channel that lagged has caught up with less than it missed. But
+ * where every channel that is waited for has gone back in time, the bridge's time has gone back.
+ */
+function leavePast(state: PipelineState, channels: readonly Channel[], output: PipelineOutput): void {
+  const { lastTick } = state.detector;
+  const waitedFor = channels.filter((channel) => channel.waitedFor);
+  if (waitedFor.length > 0 && waitedFor.every(({ through }) => through < lastTick)) {
+    act(state, turnBack(state.detector, state.setting), output);
+    return;
+  }
+  for (const { ticks } of channels) while (ticks[0] !== undefined && ticks[0].number <= lastTick) ticks.shift();
 }
 
 /** A channel that has fallen `waitTicks` behind is not waited for until it is abreast again. */

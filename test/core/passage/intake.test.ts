@@ -123,12 +123,6 @@ describe('the intake of one channel', () => {
     expect(log.details[0]).toBe('clock corrected by 7.000 ms');
   });
 
-  it('sets aside what a clock that went back by more than a minute sends', () => {
-    const { log } = feed(piece(0, 50), piece(-9000, -8950));
-    expect(log.values).toEqual(range(0, 50));
-    expect(log.notes).toEqual(['clock step happened']);
-  });
-
   it('takes NaN as missing samples between two runs, on the same clock', () => {
     const block = piece(0, 50);
     block.samples.fill(NaN, 10, 20);
@@ -160,5 +154,58 @@ describe('the intake of one channel', () => {
       }),
       { seed: 11, numRuns: 200 },
     );
+  });
+});
+
+/** Blocks of half a second, stamped `shift` samples off. */
+function halfSeconds(from: number, to: number, shift = 0): ReturnType<typeof piece>[] {
+  return range(0, (to - from) / 50).map((k) => piece(from + 50 * k, from + 50 * k + 50, shift * STEP));
+}
+
+describe('the intake of a logger whose clock steps', () => {
+  it('sets aside one block stamped far ahead, and loses nothing else', () => {
+    const odd = { ...piece(1000, 1050), startMicros: piece(6000, 6050).startMicros };
+    const { log } = feed(...halfSeconds(0, 1000), odd, ...halfSeconds(1050, 9000));
+    expect(log.values).toEqual([...range(0, 1000), ...range(1050, 9000)]);
+    expect(log.notes).not.toContain('clock step began');
+    expect(log.details.join()).toMatch(/a block stamped 49.\d+ s ahead was set aside: those after it are on time/);
+  });
+
+  it('believes a long gap when the second block continues the first, and then loses neither', () => {
+    const [first, second, ...rest] = halfSeconds(6000, 6500);
+    expect(feed(...halfSeconds(0, 1000), first!).log.values).toEqual(range(0, 1000));
+    const { log } = feed(...halfSeconds(0, 1000), first!, second!, ...rest);
+    expect(log.values).toEqual([...range(0, 1000), ...range(6000, 6500)]);
+    expect(log.notes).toEqual(['gap happened']);
+  });
+
+  it.each([600, 5000, 360_000])('goes back with a clock that went back by %i samples, and loses nothing', (back) => {
+    const { intake, log } = feed(...halfSeconds(0, 1000), ...halfSeconds(1000, 1200, -back));
+    expect(log.values).toEqual(range(0, 1000));
+    for (const one of halfSeconds(1200, 3000, -back)) takeIn(intake, one, log);
+    expect(log.values).toEqual(range(0, 3000));
+    expect(log.notes).toContain('clock step began');
+    expect(log.notes.includes('clock step ended')).toBe(back < 2000);
+    expect(log.starts.filter((start) => start !== null)).toEqual([1_000_000, 1_000_000 + (1000 - back) * STEP]);
+  });
+
+  it('does not go back for what it knows: ten seconds sent again, or a minute', () => {
+    for (const again of [1000, 6000]) {
+      const { log } = feed(
+        ...halfSeconds(0, 12_000),
+        ...halfSeconds(11_000 - again, 11_000),
+        ...halfSeconds(12_000, 13_000),
+      );
+      expect(log.values).toEqual(range(0, 13_000));
+      expect(log.notes).not.toContain('clock step began');
+      expect(log.notes).toContain('duplicate happened');
+    }
+  });
+
+  it('does not go back for single blocks of another time between those of now', () => {
+    const mixed = halfSeconds(1000, 3000).flatMap((block, k) => [block, ...halfSeconds(50 * k, 50 * k + 50, -9000)]);
+    const { log } = feed(...halfSeconds(0, 1000), ...mixed);
+    expect(log.values).toEqual(range(0, 3000));
+    expect(log.notes.every((note) => note === 'disorder happened')).toBe(true);
   });
 });
