@@ -74,21 +74,27 @@ export function offsetMinutes(micros: Micros, timeZone: string): number {
   return (sign === '+' ? 1 : -1) * (Number(hours) * 60 + Number(minutes));
 }
 
+/** Of a day, the time before monitoring began: an empty row must not read as a quiet day. Null where there is none. */
+export function notYet({ startMicros, endMicros, beganMicros }: Day): { fromMicros: Micros; toMicros: Micros } | null {
+  if (beganMicros === undefined || beganMicros <= startMicros) return null;
+  return { fromMicros: startMicros, toMicros: Math.min(beganMicros, endMicros) };
+}
+
 /**
- * Days with the time before monitoring began marked as without data: before the bridge was first defined, unless
- * passages older than that are on record. An empty row must not read as a quiet day.
+ * The share of the time that was monitored, of the time since monitoring began; null where that has not begun.
  *
- * @param definedMicros when the first version of the definition came into force; null where it is not known
+ * @param nowMicros what is yet to come counts neither way
  */
-export function withBeginning(days: readonly Day[], definedMicros: Micros | null): Day[] {
-  const oldest = days.find(({ marks }) => marks.length > 0)?.marks[0]?.micros ?? Infinity;
-  const began = Math.min(definedMicros ?? -Infinity, oldest);
-  return days.map((day) => {
-    const toMicros = Math.min(began, day.endMicros);
-    if (toMicros <= day.startMicros) return day;
-    const after = day.noData.filter((gap) => gap.toMicros > toMicros);
-    return { ...day, noData: [{ fromMicros: day.startMicros, toMicros }, ...after] };
-  });
+export function monitoredShare(days: readonly Day[], nowMicros: Micros): number | null {
+  let whole = 0;
+  let dark = 0;
+  for (const day of days) {
+    const from = notYet(day)?.toMicros ?? day.startMicros;
+    const to = Math.max(from, Math.min(day.endMicros, nowMicros));
+    whole += to - from;
+    for (const gap of day.noData) dark += Math.max(0, Math.min(gap.toMicros, to) - Math.max(gap.fromMicros, from));
+  }
+  return whole > 0 ? 1 - dark / whole : null;
 }
 
 export interface Mark {

@@ -19,9 +19,16 @@ interface CivilDay {
  * A time without monitoring is one in which at least one logger of the bridge sent nothing.
  *
  * @param nowMicros ends an interval that still lasts
+ * @param definedMicros when the bridge was first defined; monitoring began then, or with a passage on record from before
  * @throws SpanbeatError REQUEST_INVALID for no such day, more than 400 days, or an unknown time zone
  */
-export async function daysOf(ask: Ask, query: DayQuery, timeZone: string, nowMicros: Micros): Promise<Day[]> {
+export async function daysOf(
+  ask: Ask,
+  query: DayQuery,
+  timeZone: string,
+  nowMicros: Micros,
+  definedMicros: Micros | null,
+): Promise<Day[]> {
   const civil = civilDays(query.from, query.to, timeZone);
   const [first, last] = [civil[0], civil.at(-1)];
   if (first === undefined || last === undefined) return [];
@@ -31,6 +38,9 @@ export async function daysOf(ask: Ask, query: DayQuery, timeZone: string, nowMic
      WHERE bridge = $1 AND on_micros >= $2 AND on_micros < $3 ORDER BY on_micros, id`,
     span,
   );
+  const [oldest] = await ask(`SELECT min(on_micros) AS micros FROM passages WHERE bridge = $1`, [query.bridge]);
+  const oldestMicros = oldest?.['micros'] == null ? Infinity : Number(oldest['micros']);
+  const beganMicros = Math.min(definedMicros ?? Infinity, oldestMicros);
   const holes = await ask(
     `SELECT from_micros, to_micros FROM no_data
      WHERE bridge = $1 AND coalesce(to_micros, $4) > $2 AND from_micros < $3 ORDER BY from_micros`,
@@ -53,7 +63,8 @@ export async function daysOf(ask: Ask, query: DayQuery, timeZone: string, nowMic
   return civil.map((day) => {
     const from = at;
     while (at < marks.length && marks[at]!.micros < day.endMicros) at++;
-    return dayOf(day, marks.slice(from, at), noData);
+    const shown = dayOf(day, marks.slice(from, at), noData);
+    return beganMicros !== Infinity && beganMicros > day.startMicros ? { ...shown, beganMicros } : shown;
   });
 }
 

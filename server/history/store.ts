@@ -205,7 +205,7 @@ function assemble({ clock, database, archive, ledger, definitions, write, writes
     alike: (passage, limit = ALIKE) => alikeOf(ask, passage, limit),
     lastPassages: () => lastOf(ask),
     days: (query, timeZone = definitions.newest(query.bridge)?.definition.timeZone ?? 'UTC') =>
-      daysOf(ask, query, timeZone, clock()),
+      daysOf(ask, query, timeZone, clock(), definitions.versions(query.bridge)[0]?.sinceMicros ?? null),
     passagesAbove: (bridge, sinceMicros) => passagesAboveOf(ask, bridge, sinceMicros),
 
     openAlarms: () => openAlarmsOf(ask),

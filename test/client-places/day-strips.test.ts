@@ -6,10 +6,11 @@ import {
   layoutOf,
   marksOf,
   midnight,
+  monitoredShare,
   nearestMark,
+  notYet,
   offsetMinutes,
   shiftDay,
-  withBeginning,
 } from '../../client/charts/days.ts';
 
 const ZONE = 'Europe/Berlin';
@@ -119,24 +120,27 @@ describe('marks', () => {
 });
 
 describe('the time before monitoring began', () => {
-  const mark = (micros: number): Day['marks'][number] => ({ id: 'a', micros, peak: 1, ofGravest: 0.3, severity: null });
-  const defined = midnight('2026-07-02', ZONE) + 6 * HOUR;
+  const begun = { beganMicros: midnight('2026-07-02', ZONE) + 6 * HOUR };
+  const days = [{ ...day('2026-07-01'), ...begun }, { ...day('2026-07-02'), ...begun }, day('2026-07-03')];
 
-  it('is without data, so that an empty row never reads as a quiet day', () => {
-    const [first, second, third] = withBeginning([day('2026-07-01'), day('2026-07-02'), day('2026-07-03')], defined);
-    expect(first!.noData).toEqual([{ fromMicros: first!.startMicros, toMicros: first!.endMicros }]);
-    expect(second!.noData).toEqual([{ fromMicros: second!.startMicros, toMicros: defined }]);
-    expect(third!.noData).toEqual([]);
+  it('is the whole of the days before, and part of the day on which it began', () => {
+    const [first, second, third] = days.map(notYet);
+    expect(first).toEqual({ fromMicros: days[0]!.startMicros, toMicros: days[0]!.endMicros });
+    expect(second).toEqual({ fromMicros: days[1]!.startMicros, toMicros: begun.beganMicros });
+    expect(third).toBeNull();
   });
 
-  it('ends at the oldest passage where that is older than the definition', () => {
-    const early = midnight('2026-07-01', ZONE) + 3 * HOUR;
-    const [first, second] = withBeginning([day('2026-07-01', [mark(early)]), day('2026-07-02')], defined);
-    expect(first!.noData).toEqual([{ fromMicros: first!.startMicros, toMicros: early }]);
-    expect(second!.noData).toEqual([]);
-  });
-
-  it('is not guessed where the definition is not known and nothing is on record', () => {
-    expect(withBeginning([day('2026-07-01')], null)[0]!.noData).toEqual([]);
+  it('counts neither for nor against the share that was monitored', () => {
+    const gap = (fromMicros: number, hours: number): Day['noData'] => [
+      { fromMicros, toMicros: fromMicros + hours * HOUR },
+    ];
+    const late = days[2]!.endMicros;
+    expect(monitoredShare(days, late)).toBe(1);
+    // Of 18 h and 24 h since it began, 4.2 h were dark.
+    const dark = days.map((each, i) => (i === 2 ? { ...each, noData: gap(each.startMicros + HOUR, 4.2) } : each));
+    expect(monitoredShare(dark, late)).toBeCloseTo(1 - 4.2 / 42, 9);
+    // Half of the last day is yet to come.
+    expect(monitoredShare(dark, late - 12 * HOUR)).toBeCloseTo(1 - 4.2 / 30, 9);
+    expect(monitoredShare(days.slice(0, 1), late)).toBeNull();
   });
 });

@@ -346,6 +346,17 @@ describe('days', () => {
       [null, null],
     ]);
   });
+
+  test('say when monitoring began, with the definition or with an older passage, and later days say nothing of it', async () => {
+    const store = await begun();
+    const began = async (): Promise<unknown[]> =>
+      (await store.days({ bridge: 'ottermere', from: '2026-11-29', to: '2026-12-01' })).map(
+        ({ beganMicros }) => beganMicros,
+      );
+    expect(await began()).toEqual([DAWN - DAY, DAWN - DAY, undefined]);
+    await commit(store, { onMicros: DAWN - 2 * DAY });
+    expect(await began()).toEqual([DAWN - 2 * DAY, undefined, undefined]);
+  });
 });
 
 describe('retention', () => {

@@ -121,6 +121,8 @@ export const Day = Type.Object({
   ),
   /** Spans of time without monitoring. */
   noData: Type.Array(Type.Object({ fromMicros: Type.Integer(), toMicros: Type.Integer() })),
+  /** When monitoring of the bridge began, where that was within or after this day: an empty row was no quiet day. */
+  beganMicros: Type.Optional(Type.Integer()),
 });
 export type Day = Static<typeof Day>;
 
