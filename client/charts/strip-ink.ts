@@ -1,6 +1,6 @@
 import type uPlot from 'uplot';
 import type { Micros } from '#core/contract/time.ts';
-import { acceleration, fixed } from '../format.ts';
+import { acceleration, fixed, plural } from '../format.ts';
 import { clockIn, zoneWord } from '../time.ts';
 import type { Ink } from './ink.ts';
 import { DASHES, drawLozenge } from './limit-line.ts';
@@ -296,8 +296,8 @@ function drawCount(sheet: Sheet, frame: StripFrame, index: number, write: Write)
   const y = lane.top + lane.height / 2 + 5;
   if (!peak || peak.peak === null) write('no data', right, y, frame.ink.signal, 'right', 600, 13);
   else if (lane.kind === 'axles') {
-    if (frame.axles > 0) write(`${frame.axles} axles`, right, y, frame.ink.ink, 'right', 600, 13);
-    else write('none counted', right, y, frame.ink.ink2, 'right');
+    if (frame.axles > 0) write(plural(frame.axles, 'axle'), right, y, frame.ink.ink, 'right', 600, 13);
+    else write('no count', right, y, frame.ink.ink2, 'right');
   } else write(`${fixed(peak.peak, 2)} ${lane.unit}`, right, y, frame.ink.ink, 'right', 600, 13);
 }
 
