@@ -61,7 +61,7 @@ export function createEnvelopes(bridge: string, pastMicros: number): Envelopes {
 /** Takes the live samples of one channel; they are not kept. */
 export function addSamples(envelopes: Envelopes, { sensor, startMicros, rateHz, samples }: LiveSamples): void {
   let channel = envelopes.channels.get(sensor);
-  if (channel?.rateHz !== rateHz) {
+  if (channel?.rateHz !== rateHz || wentBack(channel, startMicros)) {
     channel = createChannel(sensor, rateHz, envelopes.pastMicros);
     envelopes.channels.set(sensor, channel);
   }
@@ -84,6 +84,11 @@ export function addSamples(envelopes: Envelopes, { sensor, startMicros, rateHz, 
       wide.max = Math.max(wide.max, max);
     }
   });
+}
+
+/** The logger's clock went back: what is held is of a time that comes again. */
+function wentBack({ fine }: EnvelopeChannel, startMicros: Micros): boolean {
+  return fine.end > fine.start && fine.end * fine.stepMicros - startMicros > MICROS_PER_SECOND;
 }
 
 function createChannel(sensor: string, rateHz: number, pastMicros: number): EnvelopeChannel {

@@ -139,6 +139,21 @@ describe('live envelopes', () => {
     expect(Math.min(...columns.keys())).toBe(DAWN);
   });
 
+  test('a logger whose clock goes back is shown at its new time at once', () => {
+    const envelopes = createEnvelopes('b', 1000);
+    const served = beginServing(envelopes, 10_000, null);
+    const columnsOf = (startMicros: number): number[] => {
+      feed(envelopes, 'A1', startMicros, 500, new Float32Array(500).fill(1));
+      nextFrame(envelopes, 10_000, null, served);
+      feed(envelopes, 'A1', startMicros + 1_000_000, 500, new Float32Array(500).fill(1));
+      return [...collect([decode(nextFrame(envelopes, 10_000, null, served))], 'A1').keys()];
+    };
+    expect(columnsOf(DAWN)[0]).toBeGreaterThan(DAWN);
+    const back = columnsOf(DAWN - 30_000_000);
+    expect(back.length).toBeGreaterThan(90);
+    expect(back.every((start) => start < DAWN - 20_000_000)).toBe(true);
+  });
+
   test('the past joins what follows without hole or overlap, in wider columns where the width asked for is not held', () => {
     for (const pastMicros of [5_000, 40_000]) {
       const envelopes = createEnvelopes('b', pastMicros);
