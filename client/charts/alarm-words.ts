@@ -47,6 +47,44 @@ export function againstLimit(alarm: Alarm, levels: Levels | undefined): string {
   return `${fixed(Math.abs(above), 2)} ${above >= 0 ? 'above' : 'below'} ${alarm.severity} ${fixed(limit, 2)}`;
 }
 
+/** What the record made of a level alarm. */
+export interface RecordWords {
+  /** In a list. */
+  brief: string;
+  value: string;
+  /** What that value is, or why there is none. */
+  meaning: string;
+}
+
+/** What the record of the passage made of a level alarm, or why there is none that could. */
+export function recordWords(alarm: Alarm): RecordWords {
+  const atLeast = alarm.recordAtLeast === true ? 'at least ' : '';
+  const value = alarm.recordValue === null ? 'none' : `${atLeast}${fixed(alarm.recordValue, 2)} m/s²`;
+  const found = alarm.recordSeverity === null ? 'below all limits' : `above ${alarm.recordSeverity}`;
+  switch (alarm.verdict) {
+    case null:
+      return {
+        brief: 'live value, the record is not known yet',
+        value: 'not known yet',
+        meaning: 'zero-phase filter, whole window, after the passage',
+      };
+    case 'confirmed':
+      return { brief: 'confirmed by the record', value, meaning: 'confirms the alarm' };
+    case 'corrected':
+      return { brief: `the record finds it ${found}`, value, meaning: `corrects it: ${found}` };
+    case 'inconclusive': {
+      const why = alarm.steps.findLast(({ what }) => what === 'inconclusive')?.note ?? 'cannot judge it';
+      return { brief: 'live value, the record cannot judge it', value, meaning: `it ${why}: the live value stands` };
+    }
+    case 'no passage':
+      return {
+        brief: 'live value, no train was recognised',
+        value,
+        meaning: 'no train was recognised, so no record was made: the live value stands',
+      };
+  }
+}
+
 /** One step of an alarm's life as a sentence. */
 export function stepWords(step: AlarmStep): string {
   const value = step.value === null ? '' : ` ${fixed(step.value, 2)} m/s²`;
@@ -54,13 +92,17 @@ export function stepWords(step: AlarmStep): string {
   const level = step.severity === null ? '' : ` ${step.severity}`;
   switch (step.what) {
     case 'raised':
-      return `raised,${level}${value}${on}`;
+      return `raised,${level}${value}${on}${step.note === null ? '' : `: ${step.note}`}`;
     case 'escalated':
       return `escalated to${level},${value}${on}`;
     case 'confirmed':
       return `confirmed by the record:${level},${value}${on}`;
     case 'corrected':
       return `corrected by the record:${level || ' below all limits'},${value}${on}`;
+    case 'inconclusive':
+      return `the record ${step.note ?? 'cannot judge it'}: the live value stands`;
+    case 'no passage':
+      return 'no train was recognised: the live value stands';
     case 'returned':
       return 'returned to normal';
     case 'acknowledged':

@@ -17,8 +17,11 @@ export function trustOf(alarm: Alarm, view: PassageView | null): Trust {
   if (alarm.doubt !== null) reasons.push({ good: false, words: alarm.doubt });
   if (alarm.verdict === 'confirmed') reasons.push({ good: true, words: 'the record confirms the live value' });
   if (alarm.verdict === 'corrected') {
-    const found = alarm.recordSeverity === null ? 'below all limits' : `above ${alarm.recordSeverity} only`;
+    const found = alarm.recordSeverity === null ? 'below all limits' : `above ${alarm.recordSeverity}`;
     reasons.push({ good: false, words: `the record finds it ${found}` });
+  }
+  if (alarm.verdict === 'inconclusive' || alarm.verdict === 'no passage') {
+    reasons.push({ good: false, words: 'there is no whole record to hold the live value against' });
   }
   if (view) reasons.push(...fromPassage(alarm, view));
   const doubtful = reasons.some(({ good }) => !good);

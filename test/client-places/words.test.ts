@@ -6,6 +6,7 @@ import {
   againstLimit,
   delayWords,
   needsAnswer,
+  recordWords,
   stepWords,
   subjectOf,
   valueOf,
@@ -140,6 +141,50 @@ describe('an alarm in words', () => {
       sensor: null,
     };
     expect(stepWords(answer)).toBe('acknowledged by K. Ansel: told desk 2');
+  });
+});
+
+describe('what the record made of an alarm', () => {
+  const judged = (changes: Partial<Alarm>) => recordWords(alarm(changes));
+
+  it('is not known before the record is, and a value with its meaning then', () => {
+    expect(judged({})).toMatchObject({ value: 'not known yet' });
+    expect(judged({ verdict: 'confirmed', recordValue: 2.9, recordSeverity: 'IL' })).toEqual({
+      brief: 'confirmed by the record',
+      value: '2.90 m/s²',
+      meaning: 'confirms the alarm',
+    });
+    expect(judged({ verdict: 'corrected', recordValue: 3.6, recordSeverity: 'IAL', recordAtLeast: true })).toEqual({
+      brief: 'the record finds it above IAL',
+      value: 'at least 3.60 m/s²',
+      meaning: 'corrects it: above IAL',
+    });
+    expect(judged({ verdict: 'corrected', recordValue: 1.6 }).brief).toBe('the record finds it below all limits');
+  });
+
+  it('says why there is none, and that the live value stands', () => {
+    const step = {
+      what: 'inconclusive' as const,
+      micros: 0,
+      takenMicros: 0,
+      severity: null,
+      value: null,
+      sensor: null,
+      by: null,
+      note: 'has no value (a gap)',
+    };
+    const inconclusive = alarm({ verdict: 'inconclusive', steps: [step] });
+    expect(recordWords(inconclusive)).toMatchObject({
+      value: 'none',
+      meaning: 'it has no value (a gap): the live value stands',
+    });
+    expect(stepWords(step)).toBe('the record has no value (a gap): the live value stands');
+    expect(trustOf(inconclusive, null).answer).toBe('with doubt');
+    expect(judged({ verdict: 'no passage' })).toMatchObject({
+      brief: 'live value, no train was recognised',
+      value: 'none',
+    });
+    expect(trustOf(alarm({ verdict: 'no passage' }), null).answer).toBe('with doubt');
   });
 });
 

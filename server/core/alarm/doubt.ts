@@ -61,7 +61,7 @@ export const marked = (sensor: string, code: string): string => `${sensor}${MARK
 
 /**
  * The alarm with what its passage's record says against its sensor: flags of the channel, and neighbours that felt
- * too little.
+ * too little in the band of the alarm's limit.
  *
  * A neighbour is a trusted deck channel of the same span that stands where the first bending mode moves at least half
  * as much as at the sensor (half sine over the span); one beside a bearing has no say about midspan. Without neighbours
@@ -72,8 +72,8 @@ export function recordDoubt(definition: BridgeDefinition, alarm: Alarm, passage:
   if (sensor === undefined) return alarm;
   const own = passage.channels.find((channel) => channel.sensor === sensor.id);
   const flagged = own === undefined ? alarm : flaggedDoubt(alarm, own);
-  const value = Math.max(alarm.liveValue ?? 0, (own === undefined ? null : bandPeak(own)) ?? 0);
-  const highest = highestNeighbour(definition, sensor, passage);
+  const value = Math.max(alarm.liveValue ?? 0, usablePeak(own, alarm.rule) ?? 0);
+  const highest = highestNeighbour(definition, sensor, passage, alarm.rule);
   if (highest === null || highest.value >= NEIGHBOUR_SHARE * value) return flagged;
   return withDoubt(
     flagged,
@@ -93,11 +93,12 @@ function highestNeighbour(
   definition: BridgeDefinition,
   sensor: Sensor,
   passage: Passage,
+  limit: string,
 ): { sensor: string; value: number } | null {
   const span = spanAt(definition, sensor.alongM);
   const felt = passage.channels.flatMap((channel) => {
     const neighbour = definition.sensors.find(({ id }) => id === channel.sensor);
-    const value = bandPeak(channel);
+    const value = usablePeak(channel, limit);
     if (neighbour === undefined || neighbour.id === sensor.id || value === null || channel.flags.length > 0) return [];
     if (!isDeckAcceleration(neighbour) || spanAt(definition, neighbour.alongM).id !== span.id) return [];
     return ordinate(span, neighbour) >= 0.5 * ordinate(span, sensor) ? [{ sensor: neighbour.id, value }] : [];
@@ -114,7 +115,8 @@ function ordinate(span: Span, sensor: Sensor): number {
   return Math.sin(Math.PI * x);
 }
 
-/** The band peak of a channel where it may be used. */
-export function bandPeak(channel: ChannelMeasures): number | null {
-  return channel.bandPeak.value === null || channel.bandPeak.quality === 'poor' ? null : channel.bandPeak.value;
+/** The peak of a channel in the band of a limit where it may be used; null where not, or where the limit does not hold. */
+function usablePeak(channel: ChannelMeasures | undefined, limit: string): number | null {
+  const peak = channel?.limits.find((said) => said.limit === limit)?.peak;
+  return peak === undefined || peak.value === null || peak.quality === 'poor' ? null : peak.value;
 }

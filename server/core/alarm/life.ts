@@ -1,4 +1,4 @@
-import type { Alarm, AlarmKind, AlarmState, AlarmStep } from '../contract/alarm.ts';
+import type { Alarm, AlarmKind, AlarmState, AlarmStep, Verdict } from '../contract/alarm.ts';
 import { severityRank, type Severity } from '../contract/severity.ts';
 import { timeName, type Micros } from '../contract/time.ts';
 
@@ -115,7 +115,7 @@ export function published(alarm: Alarm, micros: Micros): Alarm {
 /** The record has spoken: same severity as live, or not. Severity rises with it and never falls. */
 export function judge(
   alarm: Alarm,
-  record: { value: number; severity: Severity | null; micros: Micros },
+  record: { value: number; severity: Severity | null; micros: Micros; atLeast?: boolean },
   live: Severity | null,
   takenMicros: Micros,
   sensor: string | null,
@@ -130,10 +130,21 @@ export function judge(
         : {}),
       recordValue: record.value,
       recordSeverity: record.severity,
+      ...(record.atLeast === true ? { recordAtLeast: true } : {}),
       verdict,
     },
     { ...plainStep(verdict, record.micros, takenMicros), severity: record.severity, value: record.value, sensor },
   );
+}
+
+/** No record takes a stand, nor will: what live saw stands. */
+export function letStand(
+  alarm: Alarm,
+  verdict: Extract<Verdict, 'inconclusive' | 'no passage'>,
+  { micros, takenMicros }: Pick<Sighting, 'micros' | 'takenMicros'>,
+  note: string | null = null,
+): Alarm {
+  return withStep({ ...alarm, verdict }, { ...plainStep(verdict, micros, takenMicros), note });
 }
 
 /**

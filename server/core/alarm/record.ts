@@ -1,11 +1,13 @@
 import type { Alarm } from '../contract/alarm.ts';
-import { isDeckAcceleration, spanAt, type BridgeDefinition, type Limit } from '../contract/bridge.ts';
-import type { Passage } from '../contract/passage.ts';
+import { isDeckAcceleration, type BridgeDefinition, type Limit } from '../contract/bridge.ts';
+import type { ConditionCode } from '../contract/health.ts';
+import { isLowerBound, type Measured } from '../contract/measure.ts';
+import type { ChannelMeasures, LimitMeasures, Passage } from '../contract/passage.ts';
 import { severityOf, severityRank, type Severity } from '../contract/severity.ts';
 import { MICROS_PER_SECOND, type Micros } from '../contract/time.ts';
-import { bandPeak, recordDoubt, withDoubt, withTrain } from './doubt.ts';
+import { recordDoubt, withDoubt, withTrain } from './doubt.ts';
 import { aboveInDay, said } from './level.ts';
-import { giveBack, judge, raise } from './life.ts';
+import { giveBack, judge, letStand, raise } from './life.ts';
 import { trimmed, withAlarm, type DeskState, type PassageAbove } from './state.ts';
 
 const DAY_MICROS = 86_400 * MICROS_PER_SECOND;
@@ -13,8 +15,16 @@ const DAY_MICROS = 86_400 * MICROS_PER_SECOND;
 const REMEMBERED_ABOVE = 5000;
 
 /** What the record of a passage says about one limit. */
-type RecordOfLimit =
-  { value: number; severity: Severity | null; sensor: string | null; micros: Micros } | { value: null; reason: string };
+type RecordOfLimit = RecordValue | { value: null; reason: string };
+
+interface RecordValue {
+  value: number;
+  severity: Severity | null;
+  sensor: string;
+  micros: Micros;
+  /** `doubtful`: no channel may be trusted. Such a value may confirm or raise, in doubt, and takes nothing back. */
+  standing: 'whole' | 'lower bound' | 'doubtful';
+}
 
 /**
  * The record of a passage has come: each limit's alarm is confirmed or corrected, or raised where live saw nothing.
@@ -26,31 +36,37 @@ export function onPassage(state: DeskState, passage: Passage, takenMicros: Micro
 }
 
 /**
- * The record's value for one limit: the passage's own peak where that is the limit it was held against, else the largest
- * usable band peak of the deck channels on the limit's spans.
+ * The record's value for one limit: the largest peak of the deck channels that it holds for, each in the limit's own band.
+ * A lower bound counts as what it is; other poor values only where there is nothing better.
  *
  * @param limit a limit of `definition`
  * @returns value in m/s² with the severity it reaches (null below all levels), or why there is none
  */
 export function recordOfLimit(definition: BridgeDefinition, limit: Limit, passage: Passage): RecordOfLimit {
-  const { peak } = passage;
-  if (peak.limit === limit.id && peak.measured.value !== null) {
-    const micros = peak.micros ?? passage.phases.onMicros;
-    return { value: peak.measured.value, severity: peak.severity, sensor: peak.sensor, micros };
-  }
-  const felt = passage.channels.flatMap((channel) => {
+  const readings = passage.channels.flatMap((channel) => {
     const sensor = definition.sensors.find(({ id }) => id === channel.sensor);
-    const value = bandPeak(channel);
-    if (sensor === undefined || value === null || !isDeckAcceleration(sensor)) return [];
-    if (limit.spans !== undefined && !limit.spans.includes(spanAt(definition, sensor.alongM).id)) return [];
-    return [{ value, sensor: sensor.id, micros: channel.bandPeakMicros ?? passage.phases.onMicros }];
+    const said = limitOf(channel, limit.id);
+    if (sensor === undefined || !isDeckAcceleration(sensor) || said?.peak.value == null) return [];
+    const standing = standingOf(channel, said.peak);
+    const micros = said.micros ?? passage.phases.onMicros;
+    return [{ value: said.peak.value, sensor: sensor.id, micros, standing }];
   });
-  const [first, ...others] = felt;
-  if (first === undefined) {
-    return { value: null, reason: peak.measured.value === null ? peak.measured.reason : 'no usable deck channel' };
-  }
-  const top = others.reduce((best, one) => (one.value > best.value ? one : best), first);
-  return { ...top, severity: severityOf(top.value, limit.levels) };
+  const trusted = readings.filter(({ standing }) => standing !== 'doubtful');
+  const [top] = (trusted.length > 0 ? trusted : readings).toSorted((a, b) => b.value - a.value);
+  if (top !== undefined) return { ...top, severity: severityOf(top.value, limit.levels) };
+  const { measured } = passage.peak;
+  return { value: null, reason: measured.value === null ? measured.reason : 'no usable deck channel' };
+}
+
+const limitOf = ({ limits }: ChannelMeasures, limit: string): LimitMeasures | undefined =>
+  limits.find((said) => said.limit === limit);
+
+/** Flags that make a peak too small, never too large. */
+const BOUNDING: readonly string[] = ['gap', 'clipped'] satisfies ConditionCode[];
+
+function standingOf({ flags }: ChannelMeasures, peak: Measured): RecordValue['standing'] {
+  if (peak.value !== null && peak.quality !== 'poor') return 'whole';
+  return isLowerBound(peak) && flags.every((flag) => BOUNDING.includes(flag)) ? 'lower bound' : 'doubtful';
 }
 
 /** The gravest severity that the live signal reached; null where live saw nothing. */
@@ -82,27 +98,60 @@ function judgedAlarm(
   record: RecordOfLimit,
   takenMicros: Micros,
 ): Alarm {
-  if (alarm.recordValue !== null) return alarm;
-  if (record.value === null && (alarm.doubt ?? '').includes(unmeasured(record.reason))) return alarm;
+  if (isJudged(alarm, passage)) return alarm;
   const attached = {
     ...withTrain(alarm),
     passage: passage.id,
     passagesAboveInDay: aboveInDay(state, alarm.rule, alarm.raisedMicros, passage.id),
   };
-  const judged =
-    record.value === null
-      ? withDoubt(attached, unmeasured(record.reason))
-      : judge(attached, record, liveSeverity(alarm), takenMicros, record.sensor);
-  return said(state, recordDoubt(state.definition, judged, passage));
+  return said(state, recordDoubt(state.definition, judgement(attached, passage, record, takenMicros), passage));
 }
 
-const unmeasured = (reason: string): string => `the record has no value: ${reason.replaceAll('; ', ', ')}`;
+const isJudged = ({ verdict, recordValue, passage: id }: Alarm, passage: Passage): boolean =>
+  recordValue !== null || (verdict === 'inconclusive' && id === passage.id);
+
+function judgement(alarm: Alarm, passage: Passage, record: RecordOfLimit, takenMicros: Micros): Alarm {
+  const why = record.value === null ? `has no value (${record.reason})` : shortfall(alarm, passage, record);
+  if (record.value === null || why !== null) {
+    return letStand(alarm, 'inconclusive', { micros: passage.endMicros, takenMicros }, why);
+  }
+  return judgedBy(alarm, record, liveSeverity(alarm), takenMicros);
+}
+
+function judgedBy(alarm: Alarm, record: RecordValue, live: Severity | null, takenMicros: Micros): Alarm {
+  const judged = judge(
+    alarm,
+    { ...record, atLeast: record.standing === 'lower bound' },
+    live,
+    takenMicros,
+    record.sensor,
+  );
+  return record.standing === 'doubtful' ? withDoubt(judged, 'no channel of the record may be trusted') : judged;
+}
+
+/**
+ * Why a record that reaches less than live saw cannot take it back; null where it can, or reaches as much.
+ * A sensor whose record has holes may have felt in them what it told live, whatever the others say.
+ */
+function shortfall(alarm: Alarm, passage: Passage, record: RecordValue): string | null {
+  if (severityRank(record.severity) >= severityRank(liveSeverity(alarm))) return null;
+  const reached = `${record.value.toFixed(2)} m/s² at ${record.sensor}`;
+  if (record.standing === 'doubtful') return `holds no channel that may be trusted (${reached})`;
+  const short = alarm.sensors.find((sensor) => isIncomplete(passage, sensor, alarm.rule));
+  return short === undefined ? null : `is incomplete at ${short} (the most it holds is ${reached})`;
+}
+
+function isIncomplete({ channels }: Passage, sensor: string, limit: string): boolean {
+  const channel = channels.find((one) => one.sensor === sensor);
+  const peak = channel === undefined ? undefined : limitOf(channel, limit)?.peak;
+  return peak === undefined || peak.value === null || isLowerBound(peak);
+}
 
 function raisedFrom(
   state: DeskState,
   limit: Limit,
   passage: Passage,
-  record: { value: number; severity: Severity; sensor: string | null; micros: Micros },
+  record: RecordValue & { severity: Severity },
   takenMicros: Micros,
 ): Alarm {
   const raised = raise(passage.bridge, 'level', limit.id, { ...record, takenMicros });
@@ -112,7 +161,7 @@ function raisedFrom(
     passage: passage.id,
     passagesAboveInDay: aboveInDay(state, limit.id, record.micros, passage.id),
   };
-  const judged = judge(alarm, record, null, takenMicros, record.sensor);
+  const judged = judgedBy(alarm, record, null, takenMicros);
   return said(state, recordDoubt(state.definition, giveBack(judged, passage.endMicros, takenMicros), passage));
 }
 

@@ -52,7 +52,10 @@ function placeOf(definition: BridgeDefinition, alarm: Alarm): string {
 
 function liveClause(definition: BridgeDefinition, alarm: Alarm): string {
   const value = alarm.liveValue ?? alarm.recordValue ?? 0;
-  const source = alarm.liveValue === null ? 'the record finds a deck acceleration of' : 'deck acceleration';
+  const source =
+    alarm.liveValue === null
+      ? `the record finds a deck acceleration of ${atLeast(alarm)}`.trimEnd()
+      : 'deck acceleration';
   const verb = alarm.liveValue === null ? ',' : ' is';
   const at = alarm.sensor === null ? '' : ` at ${alarm.sensor}`;
   const levels = definition.limits.find(({ id }) => id === alarm.rule)?.levels;
@@ -66,10 +69,24 @@ function liveClause(definition: BridgeDefinition, alarm: Alarm): string {
   );
 }
 
-function recordClause({ recordValue, recordSeverity, verdict }: Alarm): string[] {
-  if (recordValue === null || verdict === null) return [];
+function recordClause(alarm: Alarm): string[] {
+  const { verdict, recordValue, recordSeverity } = alarm;
   const reaches = recordSeverity === null ? 'below all limits' : recordSeverity;
-  return verdict === 'confirmed'
-    ? [`the record confirms ${reaches} with ${recordValue.toFixed(2)} m/s²`]
-    : [`the record corrects it to ${recordValue.toFixed(2)} m/s² (${reaches})`];
+  const value = `${atLeast(alarm)}${(recordValue ?? 0).toFixed(2)} m/s²`;
+  switch (verdict) {
+    case null:
+      return [];
+    case 'confirmed':
+      return [`the record confirms ${reaches} with ${value}`];
+    case 'corrected':
+      return [`the record corrects it to ${value} (${reaches})`];
+    case 'inconclusive': {
+      const why = alarm.steps.findLast(({ what }) => what === 'inconclusive')?.note ?? 'cannot judge it';
+      return [`the record ${why.replaceAll('; ', ', ')}: the live value stands`];
+    }
+    case 'no passage':
+      return ['no train was recognised and no record was made: the live value stands'];
+  }
 }
+
+const atLeast = ({ recordAtLeast }: Alarm): string => (recordAtLeast === true ? 'at least ' : '');

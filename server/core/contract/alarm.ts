@@ -17,7 +17,7 @@ export type AlarmKind = Static<typeof AlarmKind>;
 
 /** A step in an alarm's life, kept for ever. */
 export const AlarmStep = Type.Object({
-  /** Event time for raised, escalated, returned, confirmed, corrected; wall clock for the rest. */
+  /** Wall clock for acknowledged and published, event time for the rest. */
   micros: Type.Integer(),
   /** When the server took the step, by its wall clock. */
   takenMicros: Type.Integer(),
@@ -26,6 +26,8 @@ export const AlarmStep = Type.Object({
     Type.Literal('escalated'),
     Type.Literal('confirmed'),
     Type.Literal('corrected'),
+    Type.Literal('inconclusive'),
+    Type.Literal('no passage'),
     Type.Literal('returned'),
     Type.Literal('acknowledged'),
     Type.Literal('published'),
@@ -34,9 +36,23 @@ export const AlarmStep = Type.Object({
   value: Nullable(Type.Number()),
   sensor: Nullable(Type.String()),
   by: Nullable(Type.String()),
+  /** Of a person who acknowledged; of a fault that raised a sensor's alarm; why the record could not judge. */
   note: Nullable(Type.String()),
 });
 export type AlarmStep = Static<typeof AlarmStep>;
+
+/**
+ * What became of an alarm of the live signal, by the record of its passage: the same severity, another one, or no judgement
+ * (inconclusive: the record has no value, or is incomplete and does not reach what live saw), or no train was recognised, so
+ * that no record was made. In the last two the live value stands.
+ */
+export const Verdict = Type.Union([
+  Type.Literal('confirmed'),
+  Type.Literal('corrected'),
+  Type.Literal('inconclusive'),
+  Type.Literal('no passage'),
+]);
+export type Verdict = Static<typeof Verdict>;
 
 export const Alarm = Type.Object({
   /** Deterministic: bridge, rule, and time name of the first crossing. */
@@ -53,10 +69,13 @@ export const Alarm = Type.Object({
   sensor: Nullable(Type.String()),
   /** Sensors that passed a limit in this alarm. */
   sensors: Type.Array(Type.String()),
-  /** The record's value (zero-phase, whole window) and what it made of the alarm; null until it is known. */
+  /** The record's value (zero-phase, whole window); null until it is known, and where it cannot judge. */
   recordValue: Nullable(Type.Number()),
   recordSeverity: Nullable(Severity),
-  verdict: Nullable(Type.Union([Type.Literal('confirmed'), Type.Literal('corrected')])),
+  /** The record's value is a lower bound: a part of the passage was not recorded. Absent: it is not. */
+  recordAtLeast: Type.Optional(Type.Boolean()),
+  /** Null until it is known; always null where the alarm is not of a level. */
+  verdict: Nullable(Verdict),
   /** Said when a neighbour that should have felt it did not. */
   doubt: Nullable(Type.String()),
   passage: Nullable(Type.String()),
