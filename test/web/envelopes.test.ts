@@ -132,7 +132,7 @@ describe('live envelopes', () => {
     const envelopes = createEnvelopes('b', 5000);
     const served = beginServing(envelopes, 20_000, null);
     feed(envelopes, 'A', DAWN, 500, new Float32Array(500).fill(1));
-    feed(envelopes, 'A', DAWN - 500_000, 500, new Float32Array(500).fill(9));
+    feed(envelopes, 'A', DAWN + 500_000, 500, new Float32Array(100).fill(9));
     feed(envelopes, 'A', DAWN + 1_000_000, 500, new Float32Array(500).fill(1));
     const columns = collect([decode(nextFrame(envelopes, 20_000, null, served))], 'A');
     expect(new Set([...columns.values()].flat())).toEqual(new Set([1]));
