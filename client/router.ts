@@ -6,9 +6,12 @@ export type Route =
   | { place: 'passage'; passage: string }
   | { place: 'alarms'; alarm: string | null }
   | { place: 'bridges'; bridge: string }
+  /** A place of a bridge without saying of which. */
+  | { place: 'choice'; of: PlaceOfBridge }
   | { place: 'nowhere'; path: string };
 
 export type Place = Route['place'];
+export type PlaceOfBridge = 'live' | 'passages' | 'bridges';
 
 /** Filters of a place; `undefined` and empty leave the address. */
 export type Query = Readonly<Record<string, string | number | undefined>>;
@@ -22,8 +25,10 @@ export function parsePath(path: string): Route {
   if (rest.length > 0) return nowhere;
   if (place === undefined) return { place: 'network' };
   if (place === 'alarms') return { place, alarm: id ?? null };
+  if (place === 'live' || place === 'passages' || place === 'bridges') {
+    return id === undefined ? { place: 'choice', of: place } : { place, bridge: id };
+  }
   if (id === undefined) return nowhere;
-  if (place === 'live' || place === 'passages' || place === 'bridges') return { place, bridge: id };
   if (place === 'passage') return { place, passage: id };
   return nowhere;
 }
@@ -48,6 +53,8 @@ function pathOf(route: Route): string {
       return `/passage/${encodeURIComponent(route.passage)}`;
     case 'nowhere':
       return route.path;
+    case 'choice':
+      return `/${route.of}`;
     default:
       return `/${route.place}/${encodeURIComponent(route.bridge)}`;
   }

@@ -132,7 +132,7 @@ class Live {
         this.#each('spectrum', message);
         break;
       case 'complaint':
-        this.complaint = `${message.code}: ${message.message}`;
+        this.complaint = message.message;
     }
   }
 

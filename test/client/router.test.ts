@@ -16,8 +16,16 @@ describe('an address', () => {
     expect(parsePath('/bridges/fennick')).toEqual({ place: 'bridges', bridge: 'fennick' });
   });
 
+  it('of a bridge’s place without a bridge leads to a choice', () => {
+    for (const of of ['live', 'passages', 'bridges'] as const) {
+      expect(parsePath(`/${of}`)).toEqual({ place: 'choice', of });
+      expect(parsePath(`/${of}/`)).toEqual({ place: 'choice', of });
+      expect(hrefOf({ place: 'choice', of })).toBe(`/${of}`);
+    }
+  });
+
   it('that names none is told, with what was asked for', () => {
-    for (const path of ['/live', '/nothing/x', '/live/a/b', '/passage', '/live/%E0%A4%A']) {
+    for (const path of ['/lives', '/nothing/x', '/live/a/b', '/passage', '/live/%E0%A4%A']) {
       expect(parsePath(path)).toEqual({ place: 'nowhere', path });
     }
   });
