@@ -6,7 +6,7 @@ import { unitConversion } from '../contract/units.ts';
 import { highpass, lowpass } from '../signal/butterworth.ts';
 import { createCascade, filterInto, settleAt, type Cascade } from '../signal/cascade.ts';
 import { HOLE_MOST } from '../signal/hole.ts';
-import { bandOfLimit } from './band.ts';
+import { bandOfLimit, canFilter } from './band.ts';
 import { closeIntake, createIntake, takeIn, type Intake, type IntakeSink } from './intake.ts';
 import { createLevelWatch, resumeLevel, watchLevel, type LevelWatch } from './level.ts';
 import { createMemory, remember, type Memory } from './memory.ts';
@@ -130,7 +130,7 @@ function bandsOf(bridge: BridgeDefinition, sensor: Sensor, limits: BridgeDefinit
     upToHz,
     settling: 0,
     watched: 0,
-    cascade: upToHz < 0.49 * sensor.rateHz ? createCascade(lowpass(RULE.bandOrder, upToHz, sensor.rateHz)) : null,
+    cascade: canFilter(upToHz, sensor.rateHz) ? createCascade(lowpass(RULE.bandOrder, upToHz, sensor.rateHz)) : null,
     watches,
   }));
 }

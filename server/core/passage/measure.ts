@@ -13,7 +13,7 @@ import { severityRank } from '../contract/severity.ts';
 import { MICROS_PER_SECOND } from '../contract/time.ts';
 import { mad, median } from '../signal/robust.ts';
 import { readAxles, type AxleReading } from './axles.ts';
-import { bandOfLimit } from './band.ts';
+import { bandOfLimit, canFilter } from './band.ts';
 import { measureFreeDecay } from './free-decay.ts';
 import { noiseSpeed } from './noise-speed.ts';
 import { measureChannel, type CutShort } from './peaks.ts';
@@ -210,10 +210,18 @@ function recordNotes(frame: PassageFrame, record: readonly RecordChannel[]): str
 }
 
 function filterOf(bridge: BridgeDefinition, record: readonly RecordChannel[]): Passage['provenance']['filter'] {
-  const sensor = record.find(({ deck }) => deck)?.sensor ?? { alongM: 0 };
-  const { upToHz, setBy } = bandOfLimit(bridge, bridge.limits[0]?.band ?? 'EN 1990 A2', sensor);
+  const deck = record.filter((channel) => channel.deck);
+  const { upToHz, setBy } = bandOfLimit(
+    bridge,
+    bridge.limits[0]?.band ?? 'EN 1990 A2',
+    deck[0]?.sensor ?? { alongM: 0 },
+  );
+  const filtered = deck.filter(({ rateHz }) => canFilter(upToHz, rateHz)).length;
   return {
-    kind: 'Butterworth low-pass',
+    kind:
+      filtered === deck.length
+        ? 'Butterworth low-pass'
+        : `Butterworth low-pass on ${filtered} of ${deck.length} channels; the others are sampled too slowly for it`,
     order: RULE.bandOrder,
     upToHz,
     rule: setBy,

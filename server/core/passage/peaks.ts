@@ -9,7 +9,7 @@ import { excursions, slidingMeanSquareMax } from '../signal/sliding.ts';
 import { truePeak, type TruePeak } from '../signal/true-peak.ts';
 import { hann } from '../signal/window.ts';
 import { zeroPhase, zeroPhaseLowpass } from '../signal/zero-phase.ts';
-import { bandOfLimit } from './band.ts';
+import { bandOfLimit, canFilter } from './band.ts';
 import { microsOf, rangeOf, solidParts, type RecordChannel } from './record.ts';
 import { RULE } from './rule.ts';
 
@@ -101,7 +101,7 @@ function bandSignals(bridge: BridgeDefinition, channel: RecordChannel, from: num
   }
   if (byEdge.size === 0) byEdge.set(bandOfLimit(bridge, 'EN 1990 A2', channel.sensor).upToHz, []);
   return [...byEdge].flatMap(([upToHz, limits]) => {
-    const wide = upToHz > BAND_OF_RATE * channel.rateHz;
+    const wide = !canFilter(upToHz, channel.rateHz);
     const signal = wide ? channel.x : zeroPhase(zeroPhaseLowpass(RULE.bandOrder, upToHz, channel.rateHz), channel.x);
     const found = largestOf(channel, signal, from, to, Math.ceil(channel.rateHz / upToHz));
     if (found === null) return [];
@@ -163,9 +163,6 @@ function againstLimit(
 
 /** Straight lines between so many points a swing of the highest frequency lose 1 % of its height. */
 const POINTS_A_SWING = 20;
-
-/** Above this share of the rate the band edge is out of reach of a digital filter worth the name. */
-const BAND_OF_RATE = 0.45;
 
 function noiseAndOffset(channel: RecordChannel): { offset: Measured; noise: Measured } {
   const { offset, offsetError, noise } = channel;

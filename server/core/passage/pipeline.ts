@@ -71,7 +71,7 @@ export function step(state: PipelineState, block: SampleBlock): PipelineOutput {
     if (channel !== undefined) feedChannel(channel, state.definition.id, block.startMicros, samples, sink);
   }
   closeTicks(state, output, false);
-  return output;
+  return settled(state, output);
 }
 
 /** The end of a recording: everything still open is measured with the samples there are. */
@@ -81,7 +81,7 @@ export function finish(state: PipelineState): PipelineOutput {
   for (const channel of state.channels) closeChannel(channel, state.definition.id, sink);
   closeTicks(state, output, true);
   act(state, interrupt(state.detector, state.setting), output);
-  return output;
+  return settled(state, output);
 }
 
 /** The passage computed again from its stored wave form. */
@@ -122,7 +122,14 @@ export function measureWhole(
 }
 
 function emptyOutput(): PipelineOutput {
-  return { levels: [], passages: [], progress: [], axles: [], spectra: [], health: [], vitals: [], live: [] };
+  const none = { levels: [], passages: [], progress: [], axles: [], spectra: [], health: [], vitals: [], live: [] };
+  return { ...none, settledMicros: null };
+}
+
+/** No window begins before the samples that are still kept for it. */
+function settled({ detector }: PipelineState, output: PipelineOutput): PipelineOutput {
+  if (detector.lastTick >= 0) output.settledMicros = neededFrom(detector, detector.lastTick * TICK_MICROS);
+  return output;
 }
 
 function sinkOf(state: PipelineState, output: PipelineOutput): ChannelSink {

@@ -25,7 +25,7 @@ const CANDIDATE = 0.7;
  * @param to one past the last; interpolation may use samples outside the range
  * @returns signed value and place; value 0 at `from` where all samples are zero
  * @throws RangeError where the range is empty or outside the record
- * @example truePeak(Float64Array.from({ length: 99 }, (_, i) => Math.cos((i - 49.5) * 0.9)), 30, 70).value // 1.0000
+ * @example truePeak(Float64Array.from({ length: 99 }, (_, i) => Math.cos((i - 49.5) * 0.9) / Math.cosh((i - 49.5) / 9)), 30, 70) // { value: 1.0000, index: 49.50 }
  */
 export function truePeak(x: Float64Array, from = 0, to: number = x.length): TruePeak {
   if (!(from >= 0 && from < to && to <= x.length)) {
