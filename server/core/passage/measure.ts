@@ -50,7 +50,8 @@ export function measurePassage(
   const measures = dynamic.map((channel) => measureChannel(bridge, channel, onMicros - 200_000, frame.toMicros, cut));
   const decay = measureFreeDecay(bridge, dynamic, frame.triggerMicros, offMicros, frame.toMicros);
   const speed = speedOf(axles, noise, found);
-  const peak = peakOf(bridge, dynamic, measures);
+  const speaking = speakingOf(dynamic, measures);
+  const peak = peakOf(bridge, speaking);
   const notes = [...found.notes, ...axles.notes, ...(cut === null ? [] : [cut]), ...recordNotes(frame, dynamic)];
   const quality = worstOf([
     found.quality,
@@ -69,7 +70,7 @@ export function measurePassage(
     axleCount: cut === null ? axles.count : boundOf(axles.count, cut),
     axles: axles.axles,
     peak,
-    rawPeak: largestRaw(dynamic, measures),
+    rawPeak: rawPeakOf(speaking),
     f1Hz: decay.f1Hz,
     zeta1: decay.zeta1,
     temperatureC: temperatureOf(record),
@@ -120,22 +121,27 @@ function boundOf(count: Measured, cut: string): Measured {
   return count.value === null ? count : measured(count.value, null, 'poor', `${LOWER_BOUND}: ${cut}`);
 }
 
-/** The gravest reading of the channels that may be trusted; of all that move where none may. */
-function peakOf(
-  bridge: BridgeDefinition,
-  record: readonly RecordChannel[],
-  measures: readonly ChannelMeasures[],
-): Passage['peak'] {
-  const deck = measures.filter((_, i) => record[i]!.deck && !record[i]!.flags.includes('flat'));
+/** The channels that speak for the deck: those that may be trusted; all that move where none may. */
+interface Speaking {
+  used: readonly ChannelMeasures[];
+  trustworthy: boolean;
+}
+
+function speakingOf(record: readonly RecordChannel[], measures: readonly ChannelMeasures[]): Speaking {
+  const moving = measures.filter((_, i) => record[i]!.deck && !record[i]!.flags.includes('flat'));
   const good = measures.filter((_, i) => record[i]!.deck && trusted(record[i]!));
-  const used = good.length > 0 ? good : deck;
+  return { used: good.length > 0 ? good : moving, trustworthy: good.length > 0 };
+}
+
+/** The gravest reading. */
+function peakOf(bridge: BridgeDefinition, { used, trustworthy }: Speaking): Passage['peak'] {
   const worst = used
     .flatMap(({ sensor, limits }) => limits.map((said) => ({ ...said, sensor, ofGravest: ofGravest(bridge, said) })))
     .sort(graver)[0];
   if (worst !== undefined) {
     const { sensor, micros, limit, severity } = worst;
     return {
-      measured: believed(worst.peak, good.length > 0),
+      measured: believed(worst.peak, trustworthy),
       sensor,
       micros,
       limit,
@@ -145,8 +151,7 @@ function peakOf(
   }
   const free = used.toSorted((a, b) => (b.bandPeak.value ?? 0) - (a.bandPeak.value ?? 0))[0];
   return {
-    measured:
-      free === undefined ? notMeasurable('no deck channel with samples') : believed(free.bandPeak, good.length > 0),
+    measured: free === undefined ? notMeasurable('no deck channel with samples') : believed(free.bandPeak, trustworthy),
     sensor: free?.sensor ?? null,
     micros: free?.bandPeakMicros ?? null,
     limit: null,
@@ -178,12 +183,9 @@ function graver(a: LimitMeasures & { ofGravest: number }, b: LimitMeasures & { o
   return severityRank(b.severity) - severityRank(a.severity) || b.ofGravest - a.ofGravest;
 }
 
-function largestRaw(record: readonly RecordChannel[], measures: readonly ChannelMeasures[]): Measured {
-  const deck = measures.filter((_, i) => record[i]!.deck && trusted(record[i]!)).map(({ rawPeak }) => rawPeak);
-  return deck.reduce<Measured>(
-    (most, next) => ((next.value ?? -1) > (most.value ?? -1) ? next : most),
-    notMeasurable('no deck channel that may be trusted'),
-  );
+function rawPeakOf({ used, trustworthy }: Speaking): Measured {
+  const [top] = used.map(({ rawPeak }) => rawPeak).toSorted((a, b) => (b.value ?? -1) - (a.value ?? -1));
+  return top === undefined ? notMeasurable('no deck channel with samples') : believed(top, trustworthy);
 }
 
 function temperatureOf(record: readonly RecordChannel[]): Measured {

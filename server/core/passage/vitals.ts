@@ -97,7 +97,6 @@ export function watchVitals(
   const note = (code: ConditionCode, state: SensorCondition['state'], micros: Micros, detail: string): void =>
     tell({ bridge, sensor: vitals.sensor, code, state, micros, detail });
   const dynamic = vitals.rateHz >= DYNAMIC_HZ;
-  if (dynamic) watchShape(vitals, x, from, to, microsAt, note);
   let at = from;
   while (at < to) {
     const second = Math.floor(microsAt(at) / MICROS_PER_SECOND);
@@ -108,6 +107,7 @@ export function watchVitals(
     }
     const left = ((second + 1) * MICROS_PER_SECOND - microsAt(at)) * (vitals.rateHz / MICROS_PER_SECOND);
     const end = Math.min(to, at + Math.max(1, Math.ceil(left - 1e-9)));
+    if (dynamic) watchShape(vitals, x, at, end, microsAt, note);
     let { sum, squares } = vitals;
     for (let i = at; i < end; i++) {
       const d = x[i]! - vitals.pivot;
@@ -117,9 +117,9 @@ export function watchVitals(
     vitals.sum = sum;
     vitals.squares = squares;
     vitals.count += end - at;
+    vitals.samples += end - at;
     at = end;
   }
-  vitals.samples += to - from;
 }
 
 type Note = (code: ConditionCode, state: SensorCondition['state'], micros: Micros, detail: string) => void;

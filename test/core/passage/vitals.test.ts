@@ -16,15 +16,15 @@ const SENSOR: Sensor = {
   noiseLimit: 0.05,
 };
 
-/** Runs `seconds` of samples, in blocks of half a second, and lists the conditions as `code state`. */
-function watch(seconds: number, sampleAt: (second: number) => number, sensor = SENSOR) {
+/** Runs `seconds` of samples, in blocks of half a second where no size is given, and lists the conditions as `code state`. */
+function watch(seconds: number, sampleAt: (second: number) => number, sensor = SENSOR, size = 50) {
   const vitals = createVitals(sensor);
   const seen: string[] = [];
   const start = 1_700_000_040_000_000;
-  for (let at = 0; at < seconds * RATE; at += 50) {
-    const block = Float32Array.from({ length: 50 }, (_, i) => sampleAt((at + i) / RATE));
+  for (let at = 0; at < seconds * RATE; at += size) {
+    const block = Float32Array.from({ length: size }, (_, i) => sampleAt((at + i) / RATE));
     const microsAt = (index: number): number => start + ((at + index) * 1e6) / RATE;
-    watchVitals(vitals, 'b', block, 0, 50, microsAt, ({ code, state }) => seen.push(`${code} ${state}`));
+    watchVitals(vitals, 'b', block, 0, size, microsAt, ({ code, state }) => seen.push(`${code} ${state}`));
   }
   return { vitals, seen };
 }
@@ -62,6 +62,17 @@ describe('the vitals of one sensor', () => {
   it('see single samples that stand out, and forget them after a minute', () => {
     const { seen } = watch(200, (s) => quiet() + (Math.abs(s - 20) < 0.001 ? 3 : 0));
     expect(seen).toEqual(['spike began', 'spike ended']);
+  });
+
+  it.each([1, 5, 200, 1000])('see the same where blocks are of %i samples', (size) => {
+    // A blow: it rings for a tenth of a second, so that the next seconds have no part in the bends of its own.
+    const blow = (s: number): number =>
+      s < 20 ? 0 : 5 * Math.exp(-(s - 20) / 0.02) * Math.cos(2 * Math.PI * 45 * (s - 20));
+    const loud = createRandom(9);
+    const noise = Array.from({ length: 130 * RATE }, () => 0.01 * loud.normal());
+    const sampleAt = (s: number): number =>
+      noise[Math.round(s * RATE)]! + blow(s) + (s > 21 ? 0.3 * Math.sin(300 * s) : 0);
+    expect(watch(130, sampleAt, SENSOR, size).seen).toEqual(watch(130, sampleAt).seen);
   });
 
   it('see a noise floor above its limit, and its return', () => {
