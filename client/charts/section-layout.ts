@@ -5,16 +5,18 @@ import {
   type Sensor,
   type Span,
 } from '#core/contract/bridge.ts';
-import { spread } from './balloons.ts';
+import { spread, type Wish } from './balloons.ts';
 
 /** Scales of drawings that a long section may have, 1 : n, largest first. */
 const SCALES = [75, 100, 125, 150, 200, 250, 300, 400, 500, 750, 1000, 1500, 2000, 3000, 5000, 10_000, 20_000];
 /** CSS pixels per metre of paper: 96 to the inch. */
 const PX_PER_M = 96 / 0.0254;
-/** Track shown beyond each abutment, at the least. */
-const APPROACH_M = 12;
-/** Narrower than this the drawing keeps its scale and pans. */
+/** Track shown beyond each abutment: at the least, and as a part of the bridge. */
+const APPROACH = { wide: { leastM: 12, part: 0.1 }, narrow: { leastM: 3, part: 0.05 } };
+/** Narrower than this the drawing leaves out most of the track beyond the bridge, so that all of the bridge is seen. */
 export const LEAST_WIDTH = 860;
+/** Room for the dimension of a span. */
+const DIMENSION_PX = 62;
 
 /** Heights below the running surface, m, as usual for such decks; the definition states none. */
 export const LEVEL = {
@@ -47,6 +49,8 @@ export interface SectionLayout {
   chainageY: number;
   /** Enough room for stones, cross-beams and rollers. */
   fine: boolean;
+  /** Little room: what is written beside the drawing is short. */
+  narrow: boolean;
 }
 
 export interface SpanLevels {
@@ -60,15 +64,33 @@ export interface SpanLevels {
 /** Room for a vehicle above the running surface, m, and over it for the speed, px. */
 const UP_M = 4.15;
 const SPEED_ROW = 20;
+/** Over the rails where no train is to be drawn, px. */
+const CLEAR_PX = 12;
 
-export function layoutSection(definition: BridgeDefinition, roomPx: number): SectionLayout {
+/**
+ * @param roomPx wider than this is the drawing only where its balloons and dimensions would not stand beside each other
+ * @param train whether room is kept for a train
+ */
+export function layoutSection(
+  definition: BridgeDefinition,
+  roomPx: number,
+  { train = true }: { train?: boolean } = {},
+): SectionLayout {
   const lengthM = bridgeLengthM(definition);
-  const width = Math.max(roomPx, LEAST_WIDTH);
-  const needM = lengthM + 2 * Math.max(APPROACH_M, lengthM * 0.1);
-  const scale = SCALES.find((n) => (PX_PER_M / n) * needM <= width) ?? SCALES.at(-1)!;
+  const narrow = roomPx < LEAST_WIDTH;
+  const { leastM, part } = APPROACH[narrow ? 'narrow' : 'wide'];
+  const needM = lengthM + 2 * Math.max(leastM, lengthM * part);
+  const smallest = SCALES.at(-1)!;
+  const width = Math.max(
+    roomPx,
+    (PX_PER_M / smallest) * needM,
+    definition.spans.length * DIMENSION_PX + 40,
+    definition.sensors.reduce((sum, { id }) => sum + 2 * halfOf(id) + GAP_PX, 0),
+  );
+  const scale = SCALES.find((n) => (PX_PER_M / n) * needM <= width) ?? smallest;
   const pxPerM = PX_PER_M / scale;
   const fromM = (lengthM - width / pxPerM) / 2;
-  const top = Math.max(UP_M * pxPerM, 60) + SPEED_ROW;
+  const top = train ? Math.max(UP_M * pxPerM, 60) + SPEED_ROW * (narrow ? 2 : 1) : CLEAR_PX;
   const x = (alongM: number): number => (alongM - fromM) * pxPerM;
   const y = (belowM: number): number => top + belowM * pxPerM;
   const spans = definition.spans.map(levelsOf);
@@ -95,6 +117,7 @@ export function layoutSection(definition: BridgeDefinition, roomPx: number): Sec
     chainageY,
     height: chainageY + 26,
     fine: pxPerM >= 12,
+    narrow,
   };
 }
 
@@ -139,12 +162,19 @@ export interface PlacedSensor {
 }
 
 const CHARACTER_PX = 5.6;
+/** Between one balloon and the next. */
+const GAP_PX = 3;
+const halfOf = (id: string): number => Math.max(10.5, (id.length * CHARACTER_PX + 10) / 2);
 
 /** Sensors at their true place with balloons in one row that never overlap, in the order along the bridge. */
 export function placeSensors(definition: BridgeDefinition, layout: SectionLayout): PlacedSensor[] {
   const sensors = definition.sensors.toSorted((a, b) => a.alongM - b.alongM);
-  const halves = sensors.map(({ id }) => Math.max(10.5, (id.length * CHARACTER_PX + 10) / 2));
-  const places = spread(sensors.map((sensor, i) => ({ at: layout.x(sensor.alongM), half: halves[i]! + 1.5 })));
+  const halves = sensors.map(({ id }) => halfOf(id));
+  const wishes = sensors.map((sensor, i) => {
+    const half = halves[i]! + GAP_PX / 2;
+    return { at: Math.min(Math.max(layout.x(sensor.alongM), half), layout.width - half), half };
+  });
+  const places = inside(spread(wishes), wishes, layout.width);
   return sensors.map((sensor, i) => ({
     sensor,
     x: layout.x(sensor.alongM),
@@ -153,6 +183,24 @@ export function placeSensors(definition: BridgeDefinition, layout: SectionLayout
     balloonX: places[i]!,
     half: halves[i]!,
   }));
+}
+
+/** A row that was spread beyond an end of the drawing is pushed back in; `layoutSection` keeps room for all of it. */
+function inside(places: number[], wishes: readonly Wish[], width: number): number[] {
+  const kept = [...places];
+  let left = 0;
+  for (let i = 0; i < kept.length; i++) {
+    const { half } = wishes[i]!;
+    kept[i] = Math.max(kept[i]!, left + half);
+    left = kept[i]! + half;
+  }
+  let right = width;
+  for (let i = kept.length - 1; i >= 0; i--) {
+    const { half } = wishes[i]!;
+    kept[i] = Math.min(kept[i]!, right - half);
+    right = kept[i]! - half;
+  }
+  return kept;
 }
 
 function depthOf(sensor: Sensor, layout: SectionLayout): number {

@@ -32,7 +32,8 @@ export interface StripFrame {
   edge: Micros;
   windowMicros: number;
   newestMicros: Micros;
-  axles: number;
+  /** Counted of the train; null where they were not all seen. */
+  axles: number | null;
   zone: string;
   still: StillLayer;
 }
@@ -296,8 +297,9 @@ function drawCount(sheet: Sheet, frame: StripFrame, index: number, write: Write)
   const y = lane.top + lane.height / 2 + 5;
   if (!peak || peak.peak === null) write('no data', right, y, frame.ink.signal, 'right', 600, 13);
   else if (lane.kind === 'axles') {
-    if (frame.axles > 0) write(plural(frame.axles, 'axle'), right, y, frame.ink.ink, 'right', 600, 13);
-    else write('no count', right, y, frame.ink.ink2, 'right');
+    if (frame.axles !== null && frame.axles > 0) {
+      write(plural(frame.axles, 'axle'), right, y, frame.ink.ink, 'right', 600, 13);
+    } else write(frame.axles === null ? 'no count' : 'no axles', right, y, frame.ink.ink2, 'right');
   } else write(`${fixed(peak.peak, 2)} ${lane.unit}`, right, y, frame.ink.ink, 'right', 600, 13);
 }
 

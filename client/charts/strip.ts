@@ -19,7 +19,8 @@ export interface StripSource {
   lanes: () => readonly Lane[];
   /** From when the peaks count, and how many axles have been counted; asked once a redraw. */
   peaksFrom: () => Micros | null;
-  axleCount: () => number;
+  /** Null where they were not all seen. */
+  axleCount: () => number | null;
   zone: () => string;
 }
 

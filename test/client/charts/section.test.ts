@@ -63,10 +63,32 @@ describe('the long section', () => {
     );
   });
 
-  it('keeps its scale on a narrow screen and becomes wider than it', () => {
-    const narrow = layoutSection(bridge([17.6]), 358);
-    expect(narrow.width).toBeGreaterThan(358);
-    expect(narrow.scale).toBe(layoutSection(bridge([17.6]), narrow.width).scale);
+  it('shows the whole bridge on a narrow screen, too, and is wider than it only where its words need the room', () => {
+    for (const lengths of [[17.6], [39.6, 39.6]]) {
+      const narrow = layoutSection(bridge(lengths), 358);
+      expect(narrow.width).toBe(358);
+      expect(narrow.fromM).toBeLessThan(0);
+      expect(narrow.toM).toBeGreaterThan(narrow.lengthM);
+    }
+    const spans = Array.from({ length: 12 }, () => 20);
+    const viaduct = layoutSection(bridge(spans), 358);
+    expect(viaduct.width).toBeGreaterThanOrEqual(12 * 60);
+  });
+
+  it('keeps no room for a train where none is to be drawn', () => {
+    const [full, low] = [true, false].map((train) => layoutSection(bridge([17.6]), 1384, { train }));
+    expect(low!.height).toBeLessThan(full!.height - 4 * full!.pxPerM);
+    expect(low!.scale).toBe(full!.scale);
+  });
+
+  it('keeps all balloons within a narrow drawing', () => {
+    const sensors = Array.from({ length: 40 }, (_, i) => sensor(`A${i}`, i < 20 ? 0 : 17.6));
+    const definition = bridge([17.6], 'steel trough', sensors);
+    const layout = layoutSection(definition, 358);
+    for (const { balloonX, half } of placeSensors(definition, layout)) {
+      expect(balloonX - half).toBeGreaterThanOrEqual(0);
+      expect(balloonX + half).toBeLessThanOrEqual(layout.width);
+    }
   });
 
   it('draws every kind of structure without a broken figure', () => {
