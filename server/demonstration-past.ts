@@ -47,7 +47,7 @@ function measured({ definition, blocks }: PastPassage, work: PastWork): { window
   const outputs: PipelineOutput[] = [...blocks.map((block) => step(pipeline, block)), finish(pipeline)];
   const nowMicros = blocks.at(-1)?.startMicros ?? work.nowMicros;
   let desk = openDesk({ definition, nowMicros });
-  for (const output of outputs) desk = nextAll(desk, eventsOf(output), nowMicros).state;
+  for (const output of outputs) desk = nextAll(desk, eventsOf(definition.id, output), nowMicros).state;
   return outputs
     .flatMap(({ passages }) => passages)
     .map((window) => ({

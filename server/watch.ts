@@ -124,10 +124,11 @@ export function createWatch(start: WatchStart): BridgeWatch {
       const { passages, health: conditions, vitals } = output;
       for (const condition of conditions) noteCondition(health, condition);
       for (const one of vitals) noteVitals(health, one);
+      for (const samples of output.live) noteReading(health, samples);
       if (conditions.length + vitals.length > 0) effects.health(definition.id, healthView(health, definition, clock()));
       const kept: Promise<void>[] = [];
       // A block finishes one passage at most, save for replays in large blocks: each is committed with its own alarms.
-      const events = eventsOf(output);
+      const events = eventsOf(definition.id, output);
       let from = 0;
       for (const window of passages) {
         const at = events.findIndex((one) => one.kind === 'passage' && one.passage === window.passage) + 1;

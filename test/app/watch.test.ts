@@ -48,6 +48,7 @@ const saying = (...health: SensorCondition[]): PipelineOutput => ({
   spectra: [],
   health,
   vitals: [],
+  settledMicros: null,
   live: [],
 });
 

@@ -50,6 +50,7 @@ export function runPipeline(definition: BridgeDefinition, blocks: Iterable<Sampl
     health: [],
     vitals: [],
     live: [],
+    settledMicros: null,
   };
   const add = (output: PipelineOutput): void => {
     all.levels.push(...output.levels);

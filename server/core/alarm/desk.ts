@@ -6,6 +6,7 @@ import { onCondition } from './condition.ts';
 import { onLevel, onProgress } from './level.ts';
 import { acknowledge, isActive, mayAcknowledge, published } from './life.ts';
 import { onPassage } from './record.ts';
+import { onSettled } from './settled.ts';
 import { onHeard, onTick } from './silence.ts';
 import {
   trimmed,
@@ -49,6 +50,8 @@ export function openDesk({ definition, alarms = [], above = [], newest = {}, now
         .map((alarm) => [alarm.id, Object.fromEntries(alarm.sensors.map((sensor) => [sensor, null]))]),
     ),
     passage: null,
+    records: [],
+    settledSecond: -1,
     above,
     conditions: {},
     loggers: Object.fromEntries(
@@ -66,7 +69,8 @@ export function openDesk({ definition, alarms = [], above = [], newest = {}, now
  * Level alarms: one a passage and limit, joined by every channel that passes while the passage lasts (where no passage is
  * known, while the excursion lasts), escalating AL → IL → IAL; the states are tabled in `life.ts`. `liveValue` and `sensor`
  * are the largest so far. The record of the passage confirms or corrects it; a record above a limit without a
- * live alarm raises one. Events that were seen before change nothing, so a replay of any part of the stream is harmless.
+ * live alarm raises one. Where no train was recognised until none can be any more, the alarm says so, and the live value
+ * stands. Events that were seen before change nothing, so a replay of any part of the stream is harmless.
  *
  * At the limits: an alarm keeps 200 steps (`withStep` says which go), the desk 500 closed and 2000 open alarms; older ones
  * are in the store and can be brought back by `recall`.
@@ -101,19 +105,28 @@ export function nextAll(state: DeskState, events: readonly DeskEvent[], nowMicro
 }
 
 /**
- * What one step of the pipeline said, as events for the desk, in the order of event time; records of passages last.
+ * What one step of the pipeline said, as events for the desk, in the order of event time; then records of passages, then
+ * how far all passages are known.
  *
  * However the samples were split into blocks, the alarms are the same in the end, but for the order in which steps were
  * taken.
  */
-export function eventsOf(output: Pick<PipelineOutput, 'levels' | 'progress' | 'health' | 'passages'>): DeskEvent[] {
+export function eventsOf(
+  bridge: string,
+  output: Pick<PipelineOutput, 'levels' | 'progress' | 'health' | 'passages' | 'settledMicros'>,
+): DeskEvent[] {
+  const { passages, settledMicros } = output;
   const timed: [Micros, DeskEvent][] = [
     ...output.progress.map((progress): [Micros, DeskEvent] => [progress.micros, { kind: 'progress', progress }]),
     ...output.health.map((condition): [Micros, DeskEvent] => [condition.micros, { kind: 'condition', condition }]),
     ...output.levels.map((level): [Micros, DeskEvent] => [level.micros, { kind: 'level', level }]),
   ];
   const inTime = timed.toSorted((a, b) => a[0] - b[0]).map(([, event]) => event);
-  return [...inTime, ...output.passages.map(({ passage }): DeskEvent => ({ kind: 'passage', passage }))];
+  return [
+    ...inTime,
+    ...passages.map(({ passage }): DeskEvent => ({ kind: 'passage', passage })),
+    ...(settledMicros === null ? [] : [{ kind: 'settled' as const, bridge, micros: settledMicros }]),
+  ];
 }
 
 function reaction(state: DeskState, event: DeskEvent, nowMicros: Micros): DeskStep {
@@ -124,6 +137,8 @@ function reaction(state: DeskState, event: DeskEvent, nowMicros: Micros): DeskSt
       return quiet(onProgress(state, event.progress, nowMicros));
     case 'passage':
       return quiet(onPassage(state, event.passage, nowMicros));
+    case 'settled':
+      return quiet(onSettled(state, event.micros, nowMicros));
     case 'condition':
       return quiet(onCondition(state, event.condition, nowMicros));
     case 'heard':
@@ -182,6 +197,8 @@ function bridgeOf(event: DeskEvent): string | null {
       return event.progress.bridge;
     case 'passage':
       return event.passage.bridge;
+    case 'settled':
+      return event.bridge;
     case 'condition':
       return event.condition.bridge;
     case 'recall':

@@ -24,7 +24,7 @@ export function withDoubt(alarm: Alarm, reason: string): Alarm {
   return isSaid(alarm, reason) ? alarm : { ...alarm, doubt: [...reasonsOf(alarm), reason].toSorted().join('; ') };
 }
 
-export const isSaid = (alarm: Alarm, reason: string): boolean => reasonsOf(alarm).includes(reason);
+const isSaid = (alarm: Alarm, reason: string): boolean => reasonsOf(alarm).includes(reason);
 
 const reasonsOf = ({ doubt }: Alarm): string[] => (doubt === null ? [] : doubt.split('; '));
 
@@ -33,12 +33,17 @@ function without(alarm: Alarm, drop: (reason: string) => boolean): Alarm {
   return { ...alarm, doubt: kept.length === 0 ? null : kept.join('; ') };
 }
 
-/** What is said while no passage is known for a crossing. */
-export const NO_TRAIN = 'no train was found on the bridge';
+/** Said where one channel alone passed and no record could ask its neighbours. */
+const ALONE = 'no other sensor passed';
 
-/** The alarm without the doubt that no train was there: one was found. */
-export function withTrain(alarm: Alarm): Alarm {
-  return without(alarm, (reason) => reason.startsWith(NO_TRAIN));
+/** The alarm of a passage that there is none of: a channel that passed alone is in doubt. */
+export function aloneDoubt(alarm: Alarm): Alarm {
+  return alarm.sensors.length > 1 ? alarm : withDoubt(alarm, ALONE);
+}
+
+/** The alarm without that doubt: another sensor passed, or a record will ask the neighbours. */
+export function withoutAlone(alarm: Alarm): Alarm {
+  return without(alarm, (reason) => reason === ALONE);
 }
 
 /** The alarm with the conditions of the sensor that it rests on, as far as they are known by now, and of no other. */

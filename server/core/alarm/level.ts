@@ -1,8 +1,8 @@
 import type { Alarm } from '../contract/alarm.ts';
 import type { LevelEvent, PassageProgress } from '../contract/pipeline.ts';
 import { MICROS_PER_SECOND, type Micros } from '../contract/time.ts';
-import { conditionsDoubt, isSaid, NO_TRAIN, withDoubt, withTrain } from './doubt.ts';
-import { alarmId, escalate, giveBack, isActive, raise, reopen, type Sighting } from './life.ts';
+import { aloneDoubt, conditionsDoubt, withoutAlone } from './doubt.ts';
+import { alarmId, escalate, giveBack, isActive, letStand, raise, reopen, type Sighting } from './life.ts';
 import { trimmed, withAlarm, type DeskState } from './state.ts';
 import { levelMessage } from './wording.ts';
 
@@ -30,8 +30,9 @@ export function onProgress(state: DeskState, event: PassageProgress, takenMicros
   }
   const cleared = state.passage?.id === event.passage ? { ...state, passage: null } : state;
   return ofPassage(cleared, event.passage)
-    .filter((alarm) => alarm.recordValue === null)
-    .reduce((now, alarm) => withAlarm(now, said(now, withDoubt({ ...alarm, passage: null }, NO_TRAIN))), cleared);
+    .filter(({ verdict }) => verdict === null)
+    .map((alarm) => letStand({ ...alarm, passage: null }, 'no passage', { micros: event.micros, takenMicros }))
+    .reduce((now, alarm) => withAlarm(now, said(now, aloneDoubt(alarm))), cleared);
 }
 
 /** How many passages of the day before a time were above a limit, by their records. */
@@ -69,9 +70,11 @@ function raised(state: DeskState, event: LevelEvent, sighting: Sighting): DeskSt
 function joined(state: DeskState, alarm: Alarm, event: LevelEvent, sighting: Sighting): Alarm {
   const again = alarm.returnedMicros !== null && event.micros > alarm.returnedMicros;
   let next = escalate(again ? reopen(alarm, sighting) : alarm, sighting);
-  const passage = next.passage ?? (isSaid(next, NO_TRAIN) ? null : passageAt(state, event.micros));
-  if (passage !== next.passage) next = { ...withTrain(next), passage };
-  if (!next.sensors.includes(event.sensor)) next = { ...next, sensors: [...next.sensors, event.sensor] };
+  const passage = next.passage ?? (next.verdict === null ? passageAt(state, event.micros) : null);
+  if (passage !== next.passage) next = { ...next, passage };
+  if (!next.sensors.includes(event.sensor)) {
+    next = { ...withoutAlone(next), sensors: [...next.sensors, event.sensor] };
+  }
   if (next.liveValue === null || event.value > next.liveValue) {
     next = conditionsDoubt(state, { ...next, liveValue: event.value, sensor: event.sensor });
   }
@@ -87,14 +90,8 @@ function onReturned(state: DeskState, event: LevelEvent, takenMicros: Micros): D
       const back = { ...sensors, [event.sensor]: event.micros };
       const next = { ...now, excursions: { ...now.excursions, [alarm.id]: back } };
       if (!Object.values(back).every((micros) => micros !== null)) return next;
-      return withAlarm(next, aloneDoubt(state, giveBack(alarm, event.micros, takenMicros)));
+      return withAlarm(next, giveBack(alarm, event.micros, takenMicros));
     }, state);
-}
-
-/** With no passage there will be no record, so what can be said about a lone sensor is said now. */
-function aloneDoubt(state: DeskState, alarm: Alarm): Alarm {
-  if (alarm.passage !== null || alarm.sensors.length > 1) return alarm;
-  return said(state, withDoubt(alarm, `${NO_TRAIN} and only ${alarm.sensors.join()} passed`));
 }
 
 function onEntered(state: DeskState, event: PassageProgress, takenMicros: Micros): DeskState {
@@ -103,7 +100,7 @@ function onEntered(state: DeskState, event: PassageProgress, takenMicros: Micros
   let next: DeskState = { ...state, passage };
   for (const alarm of levelAlarms(state).toSorted((a, b) => b.raisedMicros - a.raisedMicros)) {
     if (isOfOnset(alarm, event) && !holds(next, alarm.rule, event.passage)) {
-      next = withAlarm(next, said(state, { ...withTrain(alarm), passage: event.passage }));
+      next = withAlarm(next, { ...alarm, passage: event.passage });
     } else if (isActive(alarm) && alarm.raisedMicros < event.micros - STALE_MICROS) {
       // Its channels' return was lost in a crash; the ringing of a train just before is not touched.
       next = withAlarm(next, giveBack(alarm, event.micros, takenMicros));
@@ -115,7 +112,7 @@ function onEntered(state: DeskState, event: PassageProgress, takenMicros: Micros
 /** Whether the alarm was raised while the detector was making up its mind about this train. */
 function isOfOnset(alarm: Alarm, { micros }: PassageProgress): boolean {
   const near = alarm.raisedMicros >= micros - BEFORE_ONSET_MICROS && alarm.raisedMicros <= micros + DETECTION_MICROS;
-  return near && alarm.passage === null && !isSaid(alarm, NO_TRAIN);
+  return near && alarm.passage === null && alarm.verdict === null;
 }
 
 const holds = (state: DeskState, limit: string, passage: string): boolean =>

@@ -5,10 +5,10 @@ import { isLowerBound, type Measured } from '../contract/measure.ts';
 import type { ChannelMeasures, LimitMeasures, Passage } from '../contract/passage.ts';
 import { severityOf, severityRank, type Severity } from '../contract/severity.ts';
 import { MICROS_PER_SECOND, type Micros } from '../contract/time.ts';
-import { recordDoubt, withDoubt, withTrain } from './doubt.ts';
+import { recordDoubt, withDoubt, withoutAlone } from './doubt.ts';
 import { aboveInDay, said } from './level.ts';
 import { giveBack, judge, letStand, raise } from './life.ts';
-import { trimmed, withAlarm, type DeskState, type PassageAbove } from './state.ts';
+import { REMEMBERED_RECORDS, trimmed, withAlarm, type DeskState, type PassageAbove } from './state.ts';
 
 const DAY_MICROS = 86_400 * MICROS_PER_SECOND;
 /** Passages above a limit that are remembered; a day has some hundred. */
@@ -32,7 +32,13 @@ interface RecordValue {
  */
 export function onPassage(state: DeskState, passage: Passage, takenMicros: Micros): DeskState {
   const judged = state.definition.limits.reduce((now, limit) => judgedByLimit(now, limit, passage, takenMicros), state);
-  return judged.passage?.id === passage.id ? { ...judged, passage: null } : judged;
+  return recorded(judged.passage?.id === passage.id ? { ...judged, passage: null } : judged, passage);
+}
+
+function recorded(state: DeskState, { id, startMicros, endMicros }: Passage): DeskState {
+  if (state.records.some(({ passage }) => passage === id)) return state;
+  const records = [...state.records, { passage: id, startMicros, endMicros }].slice(-REMEMBERED_RECORDS);
+  return { ...state, records };
 }
 
 /**
@@ -100,7 +106,7 @@ function judgedAlarm(
 ): Alarm {
   if (isJudged(alarm, passage)) return alarm;
   const attached = {
-    ...withTrain(alarm),
+    ...withoutAlone(alarm),
     passage: passage.id,
     passagesAboveInDay: aboveInDay(state, alarm.rule, alarm.raisedMicros, passage.id),
   };

@@ -15,6 +15,10 @@ export interface DeskState {
   readonly excursions: Readonly<Record<string, Readonly<Record<string, Micros | null>>>>;
   /** The passage on the bridge or in its free decay. */
   readonly passage: CurrentPassage | null;
+  /** Windows of the newest records; samples of theirs may yet come, too late for them. */
+  readonly records: readonly RecordWindow[];
+  /** Whole second of event time before which no passage is yet to come; -1 before any. */
+  readonly settledSecond: number;
   /** Passages above a limit by the record, of the newest day. */
   readonly above: readonly PassageAbove[];
   /** By sensor. */
@@ -29,6 +33,12 @@ interface CurrentPassage {
   readonly id: string;
   readonly onMicros: Micros;
   readonly leftMicros: Micros | null;
+}
+
+export interface RecordWindow {
+  readonly passage: string;
+  readonly startMicros: Micros;
+  readonly endMicros: Micros;
 }
 
 export interface PassageAbove {
@@ -50,6 +60,8 @@ export type DeskEvent =
   | { kind: 'progress'; progress: PassageProgress }
   /** The record of a finished passage. */
   | { kind: 'passage'; passage: Passage }
+  /** No passage that is yet to come reaches back before this time. */
+  | { kind: 'settled'; bridge: string; micros: Micros }
   | { kind: 'condition'; condition: SensorCondition }
   /** A block of a logger was taken: event times of its first and one past its last sample. */
   | { kind: 'heard'; logger: string; fromMicros: Micros; toMicros: Micros }
@@ -87,6 +99,9 @@ export interface DeskStep {
 export const REMEMBERED_CLOSED = 500;
 /** Open alarms that the desk holds; beyond, the oldest that are back to normal are in the store only (see `recall`). */
 const HELD_OPEN = 2000;
+
+/** Records whose windows the desk remembers. */
+export const REMEMBERED_RECORDS = 32;
 
 /** The state with one alarm put in; the same state where nothing changed. */
 export function withAlarm(state: DeskState, alarm: Alarm): DeskState {

@@ -31,6 +31,7 @@ const condition = (
   kind: 'condition',
   condition: { bridge: 'ottermere', sensor, code, state, micros, detail: 'seen' },
 });
+const settled = (micros: Micros): DeskEvent => ({ kind: 'settled', bridge: 'ottermere', micros });
 const acknowledge = (alarm: string): DeskEvent => ({ kind: 'acknowledge', alarm, by: 'R. Fenn', note: 'looked at it' });
 
 const fresh = (alarms: Alarm[] = []): DeskState => openDesk({ definition: aDefinition(), alarms, nowMicros: DAWN });
@@ -124,19 +125,60 @@ describe('a level alarm', () => {
     expect(alarmsOf(over).map(({ returnedMicros }) => returnedMicros)).toEqual([DAWN + 11 * S, DAWN + 12 * S]);
   });
 
-  test('without a train says so when it is over', () => {
-    const state = run([passed('A1', 'AL', 2.3, DAWN), returned('A1', DAWN + S)]);
-    expect(only(state).doubt).toBe('no train was found on the bridge and only A1 passed');
-    expect(only(state).message).toContain('doubtful');
+  test('without a train says so when it is over and no passage can include it any more', () => {
+    const over = run([passed('A1', 'AL', 2.3, DAWN), returned('A1', DAWN + S), settled(DAWN + S)]);
+    expect(only(over)).toMatchObject({ verdict: null, doubt: null });
+    const state = run([settled(DAWN + 3 * S)], over);
+    expect(only(state)).toMatchObject({ verdict: 'no passage', passage: null, doubt: 'no other sensor passed' });
+    expect(only(state).message).toContain('no train was recognised and no record was made: the live value stands');
+    expect(only(state).steps.at(-1)).toMatchObject({ what: 'no passage', micros: DAWN + S });
+    expect(run([settled(DAWN + 9 * S)], state).alarms).toEqual(state.alarms);
+    const two = run([passed('A1', 'AL', 2.3, DAWN), passed('A2', 'AL', 2.4, DAWN), settled(DAWN + 60 * S)]);
+    expect(only(two).verdict).toBeNull();
+    const both = run([returned('A1', DAWN + S), returned('A2', DAWN + S), settled(DAWN + 70 * S)], two);
+    expect(only(both)).toMatchObject({ verdict: 'no passage', doubt: null });
   });
 
-  test('loses that doubt when a train is found after all', () => {
+  test('says so after a restart too, and where the time of the bridge went back it waits', () => {
+    const stored = run([passed('A1', 'AL', 2.3, DAWN), returned('A1', DAWN + S)]);
+    const again = run([settled(DAWN - 60 * S), settled(DAWN + 60 * S)], fresh(alarmsOf(stored)));
+    expect(only(again).verdict).toBe('no passage');
+    const earlier = DAWN - 600 * S;
+    const back = run(
+      [settled(DAWN + 60 * S), settled(earlier), passed('A1', 'AL', 2.3, earlier), returned('A1', earlier + 11 * S)],
+      fresh(),
+    );
+    expect(only(back).verdict).toBeNull();
+    expect(only(run([settled(earlier + 20 * S)], back)).verdict).toBe('no passage');
+  });
+
+  test('is judged by the record of a train that is found after all', () => {
     const state = run([
       passed('A1', 'AL', 2.3, DAWN),
       returned('A1', DAWN + S),
+      settled(DAWN + 30 * S),
       { kind: 'passage', passage: aPassage({ peaks: { A1: 2.4, A2: 2.1 } }) },
     ]);
     expect(only(state)).toMatchObject({ doubt: null, passage: PASSAGE, verdict: 'confirmed' });
+    expect(whats(only(state))).toEqual(['raised', 'returned', 'no passage', 'confirmed']);
+  });
+
+  test('says when the record of its train was never made', () => {
+    const events = [progress('entered', DAWN), passed('A1', 'AL', 2.3, DAWN + S), returned('A1', DAWN + 12 * S)];
+    const lost = only(run([...events, settled(DAWN + 60 * S)]));
+    expect(lost).toMatchObject({ verdict: 'inconclusive', passage: null });
+    expect(lost.message).toContain(`the record of ${PASSAGE} was not made: the live value stands`);
+  });
+
+  test('of samples that came after the record of their train was made does not deny the train', () => {
+    const state = run([
+      { kind: 'passage', passage: aPassage() },
+      passed('A1', 'AL', 2.3, DAWN + S),
+      returned('A1', DAWN + 12 * S),
+      settled(DAWN + 60 * S),
+    ]);
+    expect(only(state).verdict).toBe('inconclusive');
+    expect(only(state).message).toContain('the record was made before these samples came: the live value stands');
   });
 
   test('of a passage that is discarded stays, without passage and in doubt', () => {
@@ -145,8 +187,9 @@ describe('a level alarm', () => {
       passed('A1', 'AL', 2.3, DAWN + S),
       progress('discarded', DAWN + 2 * S),
     ]);
-    expect(only(state)).toMatchObject({ passage: null, doubt: 'no train was found on the bridge' });
+    expect(only(state)).toMatchObject({ passage: null, verdict: 'no passage', doubt: 'no other sensor passed' });
     expect(state.passage).toBeNull();
+    expect(only(run([passed('A2', 'AL', 2.3, DAWN + 3 * S)], state))).toMatchObject({ doubt: null, passage: null });
   });
 
   test('is not joined by what passes long after its train has left', () => {

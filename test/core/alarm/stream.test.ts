@@ -2,6 +2,7 @@ import { beforeAll, describe, expect, test } from 'vitest';
 import { eventsOf, nextAll, openDesk } from '#core/alarm/desk.ts';
 import type { DeskState } from '#core/alarm/state.ts';
 import type { Alarm } from '#core/contract/alarm.ts';
+import type { PipelineOutput } from '#core/contract/pipeline.ts';
 import { severityRank } from '#core/contract/severity.ts';
 import { createPipeline, finish, step } from '#core/passage/pipeline.ts';
 import { bridgeParameters } from '../../../simulator/parameters.ts';
@@ -19,14 +20,29 @@ const BRIDGE = plainBridge({
   limits: [{ ...plainBridge().limits[0]!, levels: { AL: 0.1, IL: 0.25, IAL: 50 } }],
 });
 
-function deskAfter(channels: readonly SimulatedChannel[], blockSeconds: number): DeskState {
+function outputsOf(channels: readonly SimulatedChannel[], blockSeconds: number): PipelineOutput[] {
   const pipeline = createPipeline(BRIDGE, 1);
-  let desk = openDesk({ definition: BRIDGE, nowMicros: FROM });
-  for (const block of blocksOf(BRIDGE.id, channels, blockSeconds)) {
-    desk = nextAll(desk, eventsOf(step(pipeline, block)), FROM).state;
-  }
-  return nextAll(desk, eventsOf(finish(pipeline)), FROM).state;
+  const outputs = [...blocksOf(BRIDGE.id, channels, blockSeconds)].map((block) => step(pipeline, block));
+  return [...outputs, finish(pipeline)];
 }
+
+function deskAfter(outputs: readonly PipelineOutput[]): DeskState {
+  return outputs.reduce(
+    (desk, output) => nextAll(desk, eventsOf(BRIDGE.id, output), FROM).state,
+    openDesk({ definition: BRIDGE, nowMicros: FROM }),
+  );
+}
+
+const BLOW = {
+  kind: 'blow' as const,
+  micros: FROM + 50e6,
+  alongM: 9,
+  acrossM: 0,
+  peakKn: 15,
+  lengthS: 0.006,
+};
+
+const levelAlarms = ({ alarms }: DeskState): Alarm[] => Object.values(alarms).filter(({ kind }) => kind === 'level');
 
 /** Steps stand in the order in which they were taken, which the size of blocks may turn round; event time does not. */
 const inEventTime = ({ alarms }: DeskState): Alarm[] =>
@@ -35,7 +51,8 @@ const inEventTime = ({ alarms }: DeskState): Alarm[] =>
     steps: alarm.steps.toSorted((a, b) => a.micros - b.micros || (a.what < b.what ? -1 : 1)),
   }));
 
-describe('two simulated trains that pass the limits', () => {
+describe('two simulated trains and a blow that pass the limits', () => {
+  let streams: PipelineOutput[][];
   let desks: DeskState[];
   beforeAll(() => {
     const train = (second: number, type: 'intercity' | 'light engine') => ({
@@ -51,24 +68,40 @@ describe('two simulated trains that pass the limits', () => {
       seed: 42,
       fromMicros: FROM,
       toMicros: FROM + 120e6,
-      events: [train(20, 'intercity'), train(75, 'light engine')],
+      events: [train(20, 'intercity'), BLOW, train(75, 'light engine')],
     });
-    desks = SPLITS_S.map((seconds) => deskAfter(channels, seconds));
+    streams = SPLITS_S.map((seconds) => outputsOf(channels, seconds));
+    desks = streams.map(deskAfter);
   });
 
   test('leave one alarm each, with both values and a verdict', () => {
-    const alarms = Object.values(desks[0]!.alarms).filter(({ kind }) => kind === 'level');
+    const alarms = levelAlarms(desks[0]!).filter(({ passage }) => passage !== null);
     expect(alarms).toHaveLength(2);
     expect(new Set(alarms.map(({ passage }) => passage)).size).toBe(2);
     for (const alarm of alarms) {
       expect(alarm).toMatchObject({ state: 'returned to normal, unacknowledged', rule: 'deck' });
-      expect(alarm.passage).not.toBeNull();
-      expect(alarm.verdict).not.toBeNull();
+      expect(['confirmed', 'corrected']).toContain(alarm.verdict);
       expect(severityRank(alarm.severity)).toBeGreaterThan(0);
       // Causal and zero-phase low-pass of the same cut-off see the same vibration: of one size, not of one value.
       expect(alarm.liveValue! / alarm.recordValue!).toBeGreaterThan(0.5);
       expect(alarm.liveValue! / alarm.recordValue!).toBeLessThan(2);
     }
+  });
+
+  test('leave one alarm of the blow, whose live value stands since no train was recognised', () => {
+    const [blow, ...others] = levelAlarms(desks[0]!).filter(({ passage }) => passage === null);
+    expect(others).toEqual([]);
+    expect(blow).toMatchObject({ verdict: 'no passage', recordValue: null });
+    expect(Math.abs(blow!.raisedMicros - BLOW.micros)).toBeLessThan(1e6);
+  });
+
+  test.each(SPLITS_S)('no passage reaches back into time that was settled, in blocks of %s s', (seconds) => {
+    let settledMicros = 0;
+    for (const output of streams[SPLITS_S.indexOf(seconds)]!) {
+      for (const { passage } of output.passages) expect(passage.startMicros).toBeGreaterThanOrEqual(settledMicros);
+      settledMicros = Math.max(settledMicros, output.settledMicros ?? 0);
+    }
+    expect(settledMicros).toBeGreaterThan(FROM + 100e6);
   });
 
   test.each(SPLITS_S.slice(1))('leave the same alarms when blocks are of %s s', (seconds) => {
