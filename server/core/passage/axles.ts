@@ -19,6 +19,8 @@ export interface AxleReading {
   /** First and last pulse of any sensor, for what can be said without a second sensor. */
   firstPulse: Micros | null;
   lastPulse: Micros | null;
+  /** How many sensors saw axles enough for a train, whether they agree or not. */
+  heardBy: number;
   notes: string[];
 }
 
@@ -26,6 +28,9 @@ export interface Pulse {
   micros: Micros;
   height: number;
 }
+
+/** The lightest train on two bogies. */
+const TRAIN_AXLES_LEAST = 4;
 
 /** Standing uncertainty of a sensor's place along the bridge, m: tape and eye (common practice). */
 const PLACE_ERROR_M = 0.02;
@@ -67,7 +72,14 @@ function readTrack(bridge: BridgeDefinition, places: readonly Place[], listeners
   const last = places.at(-1);
   if (first === undefined || last === undefined) return null;
   const all = places.flatMap(({ pulses }) => pulses.map(({ micros }) => micros));
-  const nothing = { ...nothingSeen(true), trains: 1, firstPulse: Math.min(...all), lastPulse: Math.max(...all) };
+  const heardBy = places.filter(({ pulses }) => pulses.length >= TRAIN_AXLES_LEAST).length;
+  const nothing = {
+    ...nothingSeen(true),
+    trains: 1,
+    firstPulse: Math.min(...all),
+    lastPulse: Math.max(...all),
+    heardBy,
+  };
   if (last.alongM - first.alongM < 1)
     return { ...oneSensor(nothing, first.pulses, first.id), lonely: places.length < listeners };
   return { ...pairSensors(nothing, bridge, first, last), lonely: false };
@@ -84,6 +96,7 @@ function nothingSeen(sensors: boolean): AxleReading {
     offMicros: null,
     firstPulse: null,
     lastPulse: null,
+    heardBy: 0,
     notes: [],
   };
 }
@@ -109,6 +122,7 @@ function together(readings: readonly AxleReading[]): AxleReading {
     offMicros: whole ? Math.max(...times(({ offMicros }) => offMicros)) : null,
     firstPulse: Math.min(...times(({ firstPulse }) => firstPulse)),
     lastPulse: Math.max(...times(({ lastPulse }) => lastPulse)),
+    heardBy: readings.reduce((sum, { heardBy }) => sum + heardBy, 0),
     notes: [reason, ...readings.flatMap(({ notes }) => notes)],
   };
 }
@@ -128,7 +142,7 @@ interface Place {
 }
 
 function pairSensors(nothing: AxleReading, bridge: BridgeDefinition, low: Place, high: Place): AxleReading {
-  const { pairs, complete } = matchPulses(low.pulses, high.pulses);
+  const { pairs, complete, axles: counted } = matchPulses(low.pulses, high.pulses);
   const notes: string[] = [];
   if (pairs.length === 0)
     return {
@@ -159,9 +173,7 @@ function pairSensors(nothing: AxleReading, bridge: BridgeDefinition, low: Place,
   const afterM = rising ? lengthM - exit.alongM : exit.alongM;
   return {
     trains: 1,
-    count: complete
-      ? measured(pairs.length, 0)
-      : measured(Math.max(low.pulses.length, high.pulses.length), null, 'usable', notes.at(-1) ?? ''),
+    count: complete ? measured(pairs.length, 0) : measured(counted, null, 'usable', notes.at(-1) ?? ''),
     axles,
     speedMs: even
       ? measured(meanSpeed, error, complete ? 'good' : 'usable', complete ? undefined : notes.at(-1))
@@ -175,6 +187,7 @@ function pairSensors(nothing: AxleReading, bridge: BridgeDefinition, low: Place,
     ),
     firstPulse: nothing.firstPulse,
     lastPulse: nothing.lastPulse,
+    heardBy: nothing.heardBy,
     notes,
   };
 }
@@ -188,36 +201,43 @@ function bogieSpeed(pulses: readonly Pulse[]): number {
   return (SHORTEST_WHEELBASE_M * MICROS_PER_SECOND) / shortest;
 }
 
+interface PulsePairs {
+  pairs: [Pulse, Pulse][];
+  /** Whether both sensors saw every axle. */
+  complete: boolean;
+  /** How many axles there were, as far as the two tell. */
+  axles: number;
+}
+
 /**
  * Pairs the pulses of two sensors: one to one where their numbers are equal, else by the delay that three quarters of
  * the shorter list share. Equal numbers can hide a different miss on either side; then nearly all others share a delay
  * which one-to-one pairs do not.
  */
-export function matchPulses(
-  low: readonly Pulse[],
-  high: readonly Pulse[],
-): { pairs: [Pulse, Pulse][]; complete: boolean } {
+export function matchPulses(low: readonly Pulse[], high: readonly Pulse[]): PulsePairs {
   const direct: [Pulse, Pulse][] = low.length === high.length ? low.map((pulse, i) => [pulse, high[i]!]) : [];
   const delays = direct.map(([a, b]) => b.micros - a.micros);
   const oneWay = delays.length > 0 && Math.min(...delays) * Math.max(...delays) > 0;
   const alike = oneWay && Math.max(...delays.map(Math.abs)) < 1.5 * Math.min(...delays.map(Math.abs));
-  if (alike) return { pairs: direct, complete: true };
+  if (alike) return { pairs: direct, complete: true, axles: direct.length };
+  const most = Math.max(low.length, high.length);
   const shared = bestShared(low, high);
   const fewest = Math.min(low.length, high.length);
   const wanted = oneWay ? fewest - Math.max(1, Math.floor(fewest / 16)) : 0.75 * fewest;
-  if (shared.length >= Math.max(2, wanted)) return { pairs: shared, complete: false };
-  if (oneWay) return { pairs: direct, complete: true };
-  return { pairs: withoutLowest(low, high), complete: false };
+  if (shared.length >= Math.max(2, wanted)) return { pairs: shared, complete: false, axles: most };
+  if (oneWay) return { pairs: direct, complete: true, axles: direct.length };
+  const pairs = withoutLowest(low, high);
+  return { pairs, complete: false, axles: pairs.length > 0 ? pairs.length : most };
 }
 
 /** A pulse lower than this share of the usual one may be left out for the sake of the others. */
 const FALSE_SHARE = 0.4;
 
-/** A standing train can leave a false pulse or two, low ones: one-to-one pairs without them, if they then run one way. */
+/** A standing train can leave false pulses, low ones: one-to-one pairs without them, if they then run one way. */
 function withoutLowest(low: readonly Pulse[], high: readonly Pulse[]): [Pulse, Pulse][] {
   const fewest = Math.min(low.length, high.length);
   const surplus = Math.max(low.length, high.length) - fewest;
-  if (fewest < 2 || surplus === 0 || surplus > Math.max(2, Math.floor(fewest / 8))) return [];
+  if (fewest < 2 || surplus === 0 || surplus > Math.max(2, Math.floor(fewest / 2))) return [];
   const highest = (pulses: readonly Pulse[]): Pulse[] => {
     const byHeight = [...pulses].sort((a, b) => b.height - a.height);
     const kept = new Set(byHeight.slice(0, fewest));

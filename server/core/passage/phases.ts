@@ -55,6 +55,11 @@ export function findPhases(
     const notes = listening > 0 ? ['the axle sensors did not see the whole train'] : [];
     return { ...sharpened(bridge, frame, span, axles, record), foundBy: 'wheel-rail noise', quality: 'usable', notes };
   }
+  if (axles.heardBy >= 2 && axles.firstPulse !== null && axles.lastPulse !== null) {
+    const [onMicros, offMicros] = [axles.firstPulse, axles.lastPulse];
+    const notes = ['first and last axle as any axle sensor saw them: the sensors do not agree on the train'];
+    return { onMicros, offMicros, foundBy: 'axle sensors', quality: 'poor', notes };
+  }
   if (frame.whole === true) {
     return {
       onMicros: frame.fromMicros,

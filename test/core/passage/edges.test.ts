@@ -361,6 +361,20 @@ describe('pulses where a train stood on a gauge', () => {
     expect(pairs.map(([a]) => a.micros / 1e6)).toEqual([1, 2, 30]);
   });
 
+  it('are paired without all the low ones that a long stand left', () => {
+    const through = [1, 2, 5, 6, 40, 41, 44, 45].map((s): [number, number] => [s, 180]);
+    const later = through.map(([s, height]): [number, number] => [s < 10 ? 45 + s / 2 : s + 8, height - 5]);
+    const wiggles = [20, 22, 26, 31].map((s): [number, number] => [s, 44]);
+    const { pairs, complete, axles } = matchPulses(
+      pulses(...through),
+      pulses(...[...wiggles, ...later].toSorted((a, b) => a[0] - b[0])),
+    );
+    expect(axles).toBe(8);
+    expect(complete).toBe(false);
+    expect(pairs.map(([a]) => a.micros / 1e6)).toEqual(through.map(([s]) => s));
+    expect(pairs.map(([, b]) => b.micros / 1e6)).toEqual(later.map(([s]) => s));
+  });
+
   it('are not paired when too many are over', () => {
     expect(matchPulses(pulses([1, 9], [2, 9], [3.1, 9], [4.7, 9]), pulses([20, 9])).pairs).toEqual([]);
   });

@@ -1,5 +1,8 @@
 import { describe, expect, it } from 'vitest';
-import { offEdge, onEdge } from '#core/passage/phases.ts';
+import { notMeasurable } from '#core/contract/measure.ts';
+import type { AxleReading } from '#core/passage/axles.ts';
+import { findPhases, offEdge, onEdge } from '#core/passage/phases.ts';
+import { plainBridge } from '../../support/bridges.ts';
 
 const NOISE = 1_780_000_000_000_000;
 /** An edge of motion so many seconds after that of noise. */
@@ -30,5 +33,35 @@ describe('the last axle', () => {
     ['by motion well after noise that died early', motion(0.5, 20), true, 0.5],
   ])('is placed %s', (_, edge, clear, expected) => {
     expect(after(offEdge(NOISE, edge, clear))).toBeCloseTo(expected, 6);
+  });
+});
+
+describe('a train whose axle sensors do not agree, and whose noise is not heard', () => {
+  const axlesBy = (heardBy: number): AxleReading => ({
+    trains: 1,
+    count: notMeasurable('the axle sensors do not agree'),
+    axles: [],
+    speedMs: notMeasurable('the axle sensors do not agree'),
+    direction: null,
+    onMicros: null,
+    offMicros: null,
+    firstPulse: NOISE + 1e6,
+    lastPulse: NOISE + 9e6,
+    heardBy,
+    notes: [],
+  });
+  const frame = { id: 'x', triggerMicros: NOISE, fromMicros: NOISE - 5e6, toMicros: NOISE + 20e6, cut: null };
+
+  it('was there all the same where two sensors saw axles enough; when, is poorly known', () => {
+    expect(findPhases(plainBridge(), frame, axlesBy(2), null, [])).toMatchObject({
+      onMicros: NOISE + 1e6,
+      offMicros: NOISE + 9e6,
+      foundBy: 'axle sensors',
+      quality: 'poor',
+    });
+  });
+
+  it('was none where only one sensor did', () => {
+    expect(findPhases(plainBridge(), frame, axlesBy(1), null, [])).toBeNull();
   });
 });
