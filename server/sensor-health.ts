@@ -1,7 +1,7 @@
 import type { BridgeDefinition, Sensor } from '#core/contract/bridge.ts';
 import type { SensorCondition, SensorHealth } from '#core/contract/health.ts';
-import type { SensorVitals } from '#core/contract/pipeline.ts';
-import { MICROS_PER_SECOND, type Micros } from '#core/contract/time.ts';
+import type { LiveSamples, SensorVitals } from '#core/contract/pipeline.ts';
+import { MICROS_PER_SECOND, sampleMicros, type Micros } from '#core/contract/time.ts';
 import { DEFAULT_SILENT_AFTER_S } from '#core/alarm/silence.ts';
 
 /** What is known of the health of a bridge's sensors, gathered from what the pipeline says and from when each was heard. */
@@ -10,6 +10,8 @@ export interface HealthRecord {
   sensors: Map<string, SensorHealth>;
   /** Wall clock when each sensor was last heard; absent before. */
   heardMicros: Map<string, Micros>;
+  /** Thermometers, whose readings are kept. */
+  thermometers: ReadonlySet<string>;
 }
 
 /**
@@ -25,6 +27,7 @@ export function createHealthRecord(
   return {
     sensors: new Map(definition.sensors.map(({ id }) => [id, before.get(id) ?? fresh(id)])),
     heardMicros,
+    thermometers: new Set(definition.sensors.flatMap(({ id, quantity }) => (quantity === 'temperature' ? [id] : []))),
   };
 }
 
@@ -44,6 +47,16 @@ export function noteSamples(record: HealthRecord, sensor: string, count: number,
   health.samples += count;
   health.newestMicros = Math.max(health.newestMicros ?? 0, newest);
   record.heardMicros.set(sensor, Math.max(record.heardMicros.get(sensor) ?? 0, heard));
+}
+
+/** Calibrated samples came; of a thermometer the newest is kept. Older ones, as of a replay, change nothing. */
+export function noteReading(record: HealthRecord, { sensor, startMicros, rateHz, samples }: LiveSamples): void {
+  if (!record.thermometers.has(sensor)) return;
+  const health = record.sensors.get(sensor);
+  const value = samples.at(-1);
+  if (health === undefined || value === undefined || Number.isNaN(value)) return;
+  const micros = sampleMicros(startMicros, samples.length - 1, rateHz);
+  if (micros >= (health.reading?.micros ?? 0)) health.reading = { micros, value };
 }
 
 export function noteVitals(record: HealthRecord, { sensor, noise, offset }: SensorVitals): void {

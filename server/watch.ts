@@ -16,6 +16,7 @@ import {
   healthView,
   isAlive,
   noteCondition,
+  noteReading,
   noteSamples,
   noteVitals,
   type HealthRecord,
@@ -124,6 +125,7 @@ export function createWatch(start: WatchStart): BridgeWatch {
       const { passages, health: conditions, vitals } = output;
       for (const condition of conditions) noteCondition(health, condition);
       for (const one of vitals) noteVitals(health, one);
+      for (const samples of output.live) noteReading(health, samples);
       for (const samples of output.live) noteReading(health, samples);
       if (conditions.length + vitals.length > 0) effects.health(definition.id, healthView(health, definition, clock()));
       const kept: Promise<void>[] = [];

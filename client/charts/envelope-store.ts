@@ -6,15 +6,6 @@ interface Ring {
   column: Float64Array;
   low: Float32Array;
   high: Float32Array;
-  newest: NewestColumn | null;
-}
-
-/** The newest column of a sensor as it came. A slow sensor has one sample in it, so that `low` is `high`. */
-export interface NewestColumn {
-  low: number;
-  high: number;
-  startMicros: Micros;
-  endMicros: Micros;
 }
 
 /**
@@ -48,12 +39,7 @@ export class EnvelopeStore {
       for (let i = 0; i < count; i++) {
         const low = data[at + 2 * i]!;
         if (Number.isNaN(low)) continue;
-        const high = data[at + 2 * i + 1]!;
-        const from = startMicros + i * stepMicros;
-        this.#fill(ring, from, stepMicros, low, high);
-        if (from >= (ring.newest?.startMicros ?? 0)) {
-          ring.newest = { low, high, startMicros: from, endMicros: from + stepMicros };
-        }
+        this.#fill(ring, startMicros + i * stepMicros, stepMicros, low, data[at + 2 * i + 1]!);
         taken = true;
       }
       this.newestMicros = Math.max(this.newestMicros, startMicros + count * stepMicros);
@@ -114,11 +100,6 @@ export class EnvelopeStore {
     return low > high ? null : { low, high };
   }
 
-  /** Null before the first. */
-  newest(sensor: string): NewestColumn | null {
-    return this.#rings.get(sensor)?.newest ?? null;
-  }
-
   #fill(ring: Ring, startMicros: Micros, stepMicros: number, low: number, high: number): void {
     const first = Math.floor(startMicros / this.columnMicros);
     const end = Math.max(first + 1, Math.round((startMicros + stepMicros) / this.columnMicros));
@@ -147,7 +128,6 @@ export class EnvelopeStore {
       column: new Float64Array(this.capacity).fill(-1),
       low: new Float32Array(this.capacity),
       high: new Float32Array(this.capacity),
-      newest: null,
     };
     this.#rings.set(sensor, ring);
     return ring;

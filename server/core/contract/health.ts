@@ -45,5 +45,7 @@ export const SensorHealth = Type.Object({
   /** r.m.s. of the last quiet minute, in the quantity's SI unit. */
   noise: Type.Union([Type.Number(), Type.Null()]),
   offset: Type.Union([Type.Number(), Type.Null()]),
+  /** Of a thermometer, its newest sample as it was measured, in SI; absent before the first. */
+  reading: Type.Optional(Type.Object({ micros: Type.Integer(), value: Type.Number() })),
 });
 export type SensorHealth = Static<typeof SensorHealth>;

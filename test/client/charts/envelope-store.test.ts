@@ -82,27 +82,6 @@ describe('the envelope store', () => {
     }
   });
 
-  it('gives the newest sample of a slow sensor as it was measured, not a mean of those before', () => {
-    const store = new EnvelopeStore(COLUMN, 100);
-    expect(store.newest('A1')).toBeNull();
-    store.take(
-      frame(
-        'A1',
-        0,
-        [
-          [3, 3],
-          [4.5, 4.5],
-          [NaN, NaN],
-        ],
-        64 * COLUMN,
-      ),
-    );
-    const newest = { low: 4.5, high: 4.5, startMicros: 64 * COLUMN, endMicros: 128 * COLUMN };
-    expect(store.newest('A1')).toEqual(newest);
-    store.take(frame('A1', 0, [[9, 9]], 64 * COLUMN));
-    expect(store.newest('A1')).toEqual(newest);
-  });
-
   it('keeps the newest columns when it is full', () => {
     const store = new EnvelopeStore(COLUMN, 10);
     store.take(
