@@ -25,7 +25,11 @@ export const needsAnswer = ({ state }: Pick<Alarm, 'state'>): boolean =>
 /** What the alarm is about, in a few words. */
 export function subjectOf(alarm: Alarm): string {
   if (alarm.kind === 'no data') return `no data from logger ${alarm.rule}`;
-  if (alarm.kind === 'sensor') return `sensor ${alarm.rule} not to be trusted`;
+  if (alarm.kind === 'sensor') {
+    const faults = alarm.steps.filter(({ what, note }) => what === 'raised' && note !== null);
+    const clock = faults.length > 0 && faults.every(({ note }) => note!.startsWith('clock step'));
+    return clock ? `clock of the logger of ${alarm.rule} not to be trusted` : `sensor ${alarm.rule} not to be trusted`;
+  }
   return 'peak deck acceleration';
 }
 

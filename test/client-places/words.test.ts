@@ -142,6 +142,17 @@ describe('an alarm in words', () => {
     };
     expect(stepWords(answer)).toBe('acknowledged by K. Ansel: told desk 2');
   });
+
+  it("tells a fault of a sensor from one of its logger's clock", () => {
+    const raised = (note: string) => {
+      const at = { micros: 0, takenMicros: 0, severity: 'AL' as const, value: null, sensor: 'A1', by: null };
+      return { what: 'raised' as const, note, ...at };
+    };
+    const faulty = (...notes: string[]) => alarm({ kind: 'sensor', rule: 'A1', steps: notes.map(raised) });
+    expect(subjectOf(faulty('clock step (back)'))).toBe('clock of the logger of A1 not to be trusted');
+    expect(subjectOf(faulty('clock step (back)', 'flat (seen)'))).toBe('sensor A1 not to be trusted');
+    expect(stepWords(raised('flat (seen)'))).toBe('raised, AL on A1: flat (seen)');
+  });
 });
 
 describe('what the record made of an alarm', () => {

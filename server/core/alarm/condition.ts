@@ -1,8 +1,9 @@
 import type { Alarm } from '../contract/alarm.ts';
 import type { ConditionCode, SensorCondition } from '../contract/health.ts';
-import type { Micros } from '../contract/time.ts';
+import { MICROS_PER_SECOND, type Micros } from '../contract/time.ts';
 import { marked, withDoubt } from './doubt.ts';
-import { giveBack, isActive, isOpen, raise, reopen } from './life.ts';
+import { faultNote, faultsOf, stretchMicros, tellsOf } from './fault.ts';
+import { giveBack, isActive, isOpen, raise, raiseAgain, reopen } from './life.ts';
 import { said } from './level.ts';
 import { silenceOf } from './silence.ts';
 import { trimmed, withAlarm, type DeskState } from './state.ts';
@@ -12,7 +13,9 @@ import { sensorMessage } from './wording.ts';
  * Conditions that last and that somebody must go and see to; each raises the sensor's alarm (AL). The others are counted
  * and cast doubt on a level alarm of the sensor, but ask for no answer of their own.
  */
-const ALARMING: readonly ConditionCode[] = ['silent', 'flat', 'noise high', 'rate wrong', 'twin channel'];
+const ALARMING: readonly ConditionCode[] = ['silent', 'flat', 'noise high', 'rate wrong', 'twin channel', 'clock step'];
+/** Channels of one logger tell of its clock within this time. */
+const TOGETHER_MICROS = 60 * MICROS_PER_SECOND;
 
 /** A condition of a sensor began, happened or ended. */
 export function onCondition(state: DeskState, condition: SensorCondition, takenMicros: Micros): DeskState {
@@ -39,26 +42,56 @@ function doubtLevels(state: DeskState, { sensor, code }: SensorCondition): DeskS
     .reduce((now, alarm) => withAlarm(now, said(now, withDoubt(alarm, marked(sensor, code)))), state);
 }
 
+/**
+ * A sensor has one alarm at a time. A fault that it does not tell of yet was in nobody's answer: it is added, and a new
+ * answer is asked for. One that it tells of, and that comes and goes while another lasts, is no news.
+ */
 function raised(state: DeskState, condition: SensorCondition, takenMicros: Micros): DeskState {
   const { sensor, micros, code, detail } = condition;
-  const logger = state.definition.sensors.find(({ id }) => id === sensor)?.logger;
-  // The silence of its logger says it already.
-  if (code === 'silent' && logger !== undefined && silenceOf(state, logger) !== null) return state;
-  const sighting = { micros, takenMicros, severity: 'AL', value: null, sensor } as const;
-  const message = sensorMessage(state.definition, sensor, code, detail);
+  if (isToldOfLogger(state, condition)) return state;
+  const note = faultNote(code, detail);
+  const sighting = { micros, takenMicros, severity: 'AL', value: null, sensor, note } as const;
   const known = alarmOf(state, condition);
   if (known === null) {
-    return trimmed(withAlarm(state, { ...raise(state.definition.id, 'sensor', sensor, sighting), message }));
+    return trimmed(withAlarm(state, worded(state, raise(state.definition.id, 'sensor', sensor, sighting))));
   }
-  if (known.returnedMicros === null || micros <= known.returnedMicros) return state;
-  return withAlarm(state, { ...reopen(known, sighting), message });
+  if (known.returnedMicros === null) {
+    const isNews = micros >= stretchMicros(known) && !tellsOf(known, condition);
+    return isNews ? withAlarm(state, worded(state, raiseAgain(known, sighting))) : state;
+  }
+  return micros <= known.returnedMicros ? state : withAlarm(state, worded(state, reopen(known, sighting)));
 }
+
+const worded = (state: DeskState, alarm: Alarm): Alarm => ({
+  ...alarm,
+  message: sensorMessage(state.definition, alarm.rule, faultsOf(alarm)),
+});
+
+/** What is wrong with a whole logger is said once: its silence by an alarm of its own, its clock by its first sensor. */
+function isToldOfLogger(state: DeskState, { sensor, code, micros }: SensorCondition): boolean {
+  const logger = loggerOf(state, sensor);
+  if (logger === undefined) return false;
+  if (code === 'silent') return silenceOf(state, logger) !== null;
+  if (code !== 'clock step') return false;
+  return Object.values(state.alarms).some(
+    (alarm) =>
+      alarm.kind === 'sensor' &&
+      alarm.rule !== sensor &&
+      loggerOf(state, alarm.rule) === logger &&
+      faultsOf(alarm).some((fault) => fault.code === code) &&
+      stretchMicros(alarm) - TOGETHER_MICROS <= micros &&
+      (alarm.returnedMicros === null || micros <= alarm.returnedMicros),
+  );
+}
+
+const loggerOf = ({ definition }: DeskState, sensor: string): string | undefined =>
+  definition.sensors.find(({ id }) => id === sensor)?.logger;
 
 function returned(state: DeskState, { sensor, micros }: SensorCondition, takenMicros: Micros): DeskState {
   const lasting = state.conditions[sensor]!.some((one) => one.state === 'began' && ALARMING.includes(one.code));
   if (lasting) return state;
   return sensorAlarms(state, sensor)
-    .filter((alarm) => isActive(alarm) && alarm.raisedMicros <= micros)
+    .filter((alarm) => isActive(alarm) && stretchMicros(alarm) <= micros)
     .reduce((now, alarm) => withAlarm(now, giveBack(alarm, micros, takenMicros)), state);
 }
 

@@ -10,6 +10,7 @@ const NEIGHBOUR_SHARE = 0.25;
 /** Conditions that last until they are said to have ended; the others count against a crossing for a moment only. */
 const LASTING: readonly ConditionCode[] = [
   'silent',
+  'clock step',
   'clock drift',
   'rate wrong',
   'flat',

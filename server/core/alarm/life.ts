@@ -16,6 +16,9 @@ import { timeName, type Micros } from '../contract/time.ts';
  * What was answered was the severity of that moment: a graver one asks for a new answer, the old one stays among the steps.
  * A correction by the record, or a late sample from before the return, that finds a graver severity leaves a returned alarm
  * returned: normal → returned to normal, unacknowledged. Severity never falls.
+ *
+ * For a sensor's alarm another fault that it does not tell of yet counts as graver (its severity stays): it was in nobody's
+ * answer.
  */
 export const MAX_STEPS = 200;
 
@@ -26,6 +29,8 @@ export interface Sighting {
   severity: Severity;
   value: number | null;
   sensor: string | null;
+  /** Of a fault of a sensor. */
+  note?: string;
 }
 
 /** `bridge-rule-20261201-051233-2`: the same samples give the same id, however often they are read. */
@@ -84,6 +89,11 @@ export function reopen(alarm: Alarm, sighting: Sighting): Alarm {
   if (isActive(alarm)) return alarm;
   const state = alarm.state === 'normal' ? 'acknowledged' : 'unacknowledged';
   return withStep({ ...alarm, state, returnedMicros: null }, step('raised', sighting));
+}
+
+/** Something else that the alarm does not tell of yet, no graver: what was answered did not know of it. */
+export function raiseAgain(alarm: Alarm, sighting: Sighting): Alarm {
+  return withStep({ ...alarm, state: unanswered(alarm.state), acknowledged: null }, step('raised', sighting));
 }
 
 /** The excursion is over. */
@@ -167,8 +177,9 @@ function dispensable(steps: readonly AlarmStep[]): number {
 const unanswered = (state: AlarmState): AlarmState =>
   state === 'unacknowledged' || state === 'acknowledged' ? 'unacknowledged' : 'returned to normal, unacknowledged';
 
-function step(what: AlarmStep['what'], { micros, takenMicros, severity, value, sensor }: Sighting): AlarmStep {
-  return { micros, takenMicros, what, severity, value, sensor, by: null, note: null };
+function step(what: AlarmStep['what'], sighting: Sighting): AlarmStep {
+  const { micros, takenMicros, severity, value, sensor, note = null } = sighting;
+  return { micros, takenMicros, what, severity, value, sensor, by: null, note };
 }
 
 function plainStep(what: AlarmStep['what'], micros: Micros, takenMicros: Micros): AlarmStep {

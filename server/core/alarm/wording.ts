@@ -1,6 +1,7 @@
 import type { Alarm } from '../contract/alarm.ts';
 import { spanAt, type BridgeDefinition } from '../contract/bridge.ts';
 import { severityOf, type Severity } from '../contract/severity.ts';
+import type { Fault } from './fault.ts';
 import { civilTime, MICROS_PER_SECOND, type Micros } from '../contract/time.ts';
 
 const LEVEL_NAMES: Readonly<Record<Severity, string>> = {
@@ -32,11 +33,27 @@ export function noDataMessage(definition: BridgeDefinition, logger: string, sinc
   );
 }
 
-/** One sentence about a sensor that cannot be trusted. */
-export function sensorMessage(definition: BridgeDefinition, sensor: string, code: string, detail: string): string {
-  const why = detail === '' ? '' : ` (${detail})`;
-  return `${definition.name}: sensor ${sensor} is marked "${code}"${why}; its values are not to be trusted until it is seen to; ${ADVISORY}.`;
+/** One sentence about a sensor that cannot be trusted, or whose logger's clock cannot. */
+export function sensorMessage(definition: BridgeDefinition, sensor: string, faults: readonly Fault[]): string {
+  const own = faults.filter(({ code }) => code !== 'clock step').map(markedWords);
+  const clock = faults.findLast(({ code }) => code === 'clock step');
+  const logger = definition.sensors.find(({ id }) => id === sensor)?.logger ?? `of ${sensor}`;
+  const parts = [
+    ...(own.length === 0
+      ? []
+      : [`sensor ${sensor} is ${own.join(' and ')}; its values are not to be trusted until it is seen to`]),
+    ...(clock === undefined
+      ? []
+      : [
+          `the clock of logger ${logger} stepped${inBrackets(clock.detail)}; ` +
+            'the times of what it measures are not to be trusted until its clock is seen to',
+        ]),
+  ];
+  return `${definition.name}: ${[...parts, ADVISORY].join('; ')}.`;
 }
+
+const markedWords = ({ code, detail }: Fault): string => `marked "${code}"${inBrackets(detail)}`;
+const inBrackets = (detail: string): string => (detail === '' ? '' : ` (${detail.replaceAll('; ', ', ')})`);
 
 /** `05:12:33 UTC on 2026-12-01`. */
 function clockTime(micros: Micros): string {

@@ -24,12 +24,13 @@ const progress = (kind: 'entered' | 'left' | 'discarded', micros: Micros, passag
 });
 const condition = (
   sensor: string,
-  code: 'silent' | 'spike' | 'flat',
+  code: 'silent' | 'spike' | 'flat' | 'clock step',
   state: 'began' | 'happened' | 'ended',
   micros: Micros,
+  detail = 'seen',
 ): DeskEvent => ({
   kind: 'condition',
-  condition: { bridge: 'ottermere', sensor, code, state, micros, detail: 'seen' },
+  condition: { bridge: 'ottermere', sensor, code, state, micros, detail },
 });
 const settled = (micros: Micros): DeskEvent => ({ kind: 'settled', bridge: 'ottermere', micros });
 const acknowledge = (alarm: string): DeskEvent => ({ kind: 'acknowledge', alarm, by: 'R. Fenn', note: 'looked at it' });
@@ -506,6 +507,56 @@ describe('a sensor that cannot be trusted', () => {
     expect(only(whole).state).toBe('returned to normal, unacknowledged');
     const again = run([condition('A1', 'flat', 'began', DAWN + 9 * S)], whole);
     expect(only(again).state).toBe('unacknowledged');
+  });
+
+  test('asks for a new answer when another fault joins the one that was answered, and names both', () => {
+    const id = 'ottermere-A1-20261201-051233-2';
+    const answered = run([condition('A1', 'flat', 'began', DAWN), acknowledge(id)]);
+    expect(only(answered).state).toBe('acknowledged');
+    const both = run([condition('A1', 'silent', 'began', DAWN + 60 * S, 'nothing for 30 s')], answered);
+    expect(only(both)).toMatchObject({ state: 'unacknowledged', acknowledged: null, severity: 'AL' });
+    expect(only(both).message).toBe(
+      'Ottermere Trough: sensor A1 is marked "flat" (seen) and marked "silent" (nothing for 30 s); its values are not to ' +
+        'be trusted until it is seen to; advisory: a reason to look, without authority over train movement.',
+    );
+    expect(only(both).steps.map(({ what, note }) => [what, note])).toEqual([
+      ['raised', 'flat (seen)'],
+      ['acknowledged', 'looked at it'],
+      ['raised', 'silent (nothing for 30 s)'],
+    ]);
+    const again = run([acknowledge(id), condition('A1', 'silent', 'ended', DAWN + 70 * S)], both);
+    const flutter = run([condition('A1', 'silent', 'began', DAWN + 80 * S)], again);
+    expect(only(flutter).state).toBe('acknowledged');
+  });
+
+  test('is not announced again by a replay into a desk built anew', () => {
+    const events = [
+      condition('A1', 'flat', 'began', DAWN),
+      condition('A1', 'flat', 'ended', DAWN + S),
+      condition('A1', 'silent', 'began', DAWN + 5 * S),
+      condition('A1', 'flat', 'began', DAWN + 7 * S),
+    ];
+    const once = run(events);
+    expect(only(once).message).toContain('marked "silent" (seen) and marked "flat" (seen)');
+    expect(run(events, fresh(alarmsOf(once))).alarms).toEqual(once.alarms);
+  });
+
+  test('whose logger has a clock that stepped is told once a logger, as a matter of the clock', () => {
+    const back = 'went back by 3600 s';
+    const began = ['A1', 'A2', 'A3'].map((sensor, i) => condition(sensor, 'clock step', 'began', DAWN + i, back));
+    const state = run(began);
+    expect(only(state)).toMatchObject({ kind: 'sensor', rule: 'A1', severity: 'AL', state: 'unacknowledged' });
+    expect(only(state).message).toBe(
+      'Ottermere Trough: the clock of logger north stepped (went back by 3600 s); the times of what it measures are not ' +
+        'to be trusted until its clock is seen to; advisory: a reason to look, without authority over train movement.',
+    );
+    const level = run([passed('A2', 'AL', 2.3, DAWN + 100 * S)], state).alarms['ottermere-ballast-20261201-051413-2'];
+    expect(level?.doubt).toBe('A2 is marked "clock step"');
+    const ended = ['A1', 'A2', 'A3'].map((sensor, i) => condition(sensor, 'clock step', 'ended', DAWN + 3600 * S + i));
+    const over = run(ended, state);
+    expect(only(over).state).toBe('returned to normal, unacknowledged');
+    expect(run([...began, ...ended], over).alarms).toEqual(over.alarms);
+    expect(alarmsOf(run([condition('A2', 'clock step', 'began', DAWN + 9000 * S)], over))).toHaveLength(2);
   });
 
   test('is not announced again by a replay', () => {
