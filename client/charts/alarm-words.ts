@@ -108,7 +108,7 @@ export function stepWords(step: AlarmStep): string {
     case 'no passage':
       return 'no train was recognised: the live value stands';
     case 'returned':
-      return 'returned to normal';
+      return `returned to normal${step.note === null ? '' : `: ${step.note}`}`;
     case 'acknowledged':
       return `acknowledged${step.by === null ? '' : ` by ${step.by}`}${step.note ? `: ${step.note}` : ''}`;
     case 'published':

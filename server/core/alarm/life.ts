@@ -97,10 +97,10 @@ export function raiseAgain(alarm: Alarm, sighting: Sighting): Alarm {
 }
 
 /** The excursion is over. */
-export function giveBack(alarm: Alarm, micros: Micros, takenMicros: Micros): Alarm {
+export function giveBack(alarm: Alarm, micros: Micros, takenMicros: Micros, note: string | null = null): Alarm {
   if (!isActive(alarm)) return alarm;
   const state = alarm.state === 'acknowledged' ? 'normal' : 'returned to normal, unacknowledged';
-  return withStep({ ...alarm, state, returnedMicros: micros }, plainStep('returned', micros, takenMicros));
+  return withStep({ ...alarm, state, returnedMicros: micros }, { ...plainStep('returned', micros, takenMicros), note });
 }
 
 /** Whether a person may acknowledge it now. */

@@ -1,6 +1,7 @@
 import type { Alarm } from '../contract/alarm.ts';
 import { MICROS_PER_SECOND, type Micros } from '../contract/time.ts';
 import { escalate, giveBack, raise } from './life.ts';
+import { withoutGone } from './gone.ts';
 import { trimmed, withAlarm, type DeskEffect, type DeskState, type DeskStep } from './state.ts';
 import { noDataMessage } from './wording.ts';
 
@@ -33,20 +34,21 @@ export function onHeard(
 }
 
 /**
- * The wall clock went on. A logger that was heard once and is silent for longer than `silentAfterS` raises an alarm (AL),
- * after ten times as long it becomes IL. A logger that was never heard raises none: its bridge has "no data yet".
+ * The wall clock went on. A logger that was heard once and is silent for longer than `silentAfterS` raises an alarm (AL);
+ * when it has been silent for ten times as long, the alarm becomes IL, which asks for a new answer. A logger that was never heard raises none: its bridge has "no data yet".
  *
- * The alarm's time is the event time at which the silence became too long: newest sample + `silentAfterS`.
+ * The alarm's time is the event time at which the silence became too long: newest sample + `silentAfterS`. Silence counts
+ * from when the logger was last heard, or from when the server came up again: meanwhile nobody listened.
  */
 export function onTick(state: DeskState, nowMicros: Micros): DeskStep {
   const effects: DeskEffect[] = [];
-  let next = state;
+  let next = withoutGone(state, nowMicros);
   for (const { id: logger } of state.definition.loggers) {
     const heard = state.loggers[logger];
     const alarm = silenceOf(state, logger);
     const after = silentAfterMicros(state, logger);
     if (alarm !== null) {
-      next = withAlarm(next, prolonged(alarm, nowMicros, after));
+      next = withAlarm(next, prolonged(state, alarm, nowMicros, after));
     } else if (heard !== undefined && nowMicros - heard.heardMicros > after) {
       const silence = raised(state, logger, heard.newestMicros, after, nowMicros);
       next = { ...next, silences: { ...next.silences, [logger]: silence.id } };
@@ -68,16 +70,18 @@ function raised(state: DeskState, logger: string, newestMicros: Micros, after: M
   const sighting = { micros: newestMicros + after, takenMicros, severity: 'AL', value: null, sensor: null } as const;
   return {
     ...raise(definition.id, 'no data', logger, sighting),
-    message: noDataMessage(definition, logger, newestMicros),
+    message: noDataMessage(definition, logger, newestMicros, after),
   };
 }
 
 /** Counted on the wall clock from when the alarm was raised, so that a restart of the server does not begin anew. */
-function prolonged(alarm: Alarm, nowMicros: Micros, after: Micros): Alarm {
+function prolonged({ definition }: DeskState, alarm: Alarm, nowMicros: Micros, after: Micros): Alarm {
   const lastedMicros = nowMicros - alarm.steps[0]!.takenMicros + after;
-  if (lastedMicros < GRAVE_SILENCE * after) return alarm;
+  if (lastedMicros < GRAVE_SILENCE * after || alarm.severity === 'IL') return alarm;
   const micros = alarm.raisedMicros + (GRAVE_SILENCE - 1) * after;
-  return escalate(alarm, { micros, takenMicros: nowMicros, severity: 'IL', value: null, sensor: null });
+  const graver = escalate(alarm, { micros, takenMicros: nowMicros, severity: 'IL', value: null, sensor: null });
+  const sinceMicros = alarm.raisedMicros - after;
+  return { ...graver, message: noDataMessage(definition, alarm.rule, sinceMicros, GRAVE_SILENCE * after) };
 }
 
 function silentAfterMicros(state: DeskState, logger: string): Micros {

@@ -25,10 +25,16 @@ export function levelMessage(definition: BridgeDefinition, alarm: Alarm): string
   return `${[...parts, ADVISORY].join('; ')}.`;
 }
 
-/** One sentence about a logger that sends nothing. */
-export function noDataMessage(definition: BridgeDefinition, logger: string, sinceMicros: Micros): string {
+/** One sentence about a logger that sends nothing, and has not for at least so long. */
+export function noDataMessage(
+  definition: BridgeDefinition,
+  logger: string,
+  sinceMicros: Micros,
+  lastedMicros: Micros,
+): string {
   return (
-    `${definition.name}: no data from logger ${logger} since ${clockTime(sinceMicros)}; ` +
+    `${definition.name}: no data from logger ${logger} since ${clockTime(sinceMicros)}, for more than ` +
+    `${Number((lastedMicros / MICROS_PER_SECOND).toFixed(1))} s; ` +
     `what it measures is not monitored, and the absence of alarms says nothing; ${ADVISORY}.`
   );
 }

@@ -432,6 +432,10 @@ describe('silence of a logger', () => {
     expect(next(raised.state, tick, DAWN + 101 * S).effects).toEqual([]);
     const grave = next(raised.state, tick, DAWN + 102 * S);
     expect(only(grave.state).severity).toBe('IL');
+    expect(only(raised.state).message).toContain(
+      'no data from logger north since 05:12:34 UTC on 2026-12-01, for more than 10 s;',
+    );
+    expect(only(grave.state).message).toContain('since 05:12:34 UTC on 2026-12-01, for more than 100 s;');
     expect(next(grave.state, tick, DAWN + 5000 * S).effects).toEqual([]);
     const back = next(grave.state, heard(DAWN + 6000 * S), DAWN + 6001 * S);
     expect(only(back.state).state).toBe('returned to normal, unacknowledged');
@@ -580,6 +584,8 @@ describe('a sensor that cannot be trusted', () => {
   });
 });
 
+const heardNorth: DeskEvent = { kind: 'heard', logger: 'north', fromMicros: DAWN, toMicros: DAWN };
+
 describe('the desk', () => {
   test('keeps at most 200 steps of an alarm and loses neither its first nor its answers', () => {
     const id = anAlarm().id;
@@ -628,6 +634,33 @@ describe('the desk', () => {
     expect(state).toEqual(fresh());
     const on = run([progress('entered', DAWN), progress('left', DAWN + S)]);
     expect(run([progress('left', DAWN + S), progress('discarded', DAWN, 'another')], on)).toEqual(on);
+  });
+
+  test('ends the alarms of what a new definition no longer has, and keeps asking for their answer', () => {
+    const silent = next(next(fresh(), heardNorth, DAWN).state, { kind: 'tick' }, DAWN + 11 * S).state;
+    const state = run([condition('A2', 'flat', 'began', DAWN), passed('A1', 'AL', 2.3, DAWN)], silent);
+    const old = aDefinition();
+    const definition = aDefinition({
+      loggers: [{ id: 'south' }],
+      sensors: old.sensors.filter(({ id }) => id !== 'A2').map((sensor) => ({ ...sensor, logger: 'south' })),
+      limits: [{ ...old.limits[0]!, id: 'deck' }],
+    });
+    const after = next(
+      openDesk({ definition, alarms: alarmsOf(state), nowMicros: DAWN }),
+      { kind: 'tick' },
+      DAWN + 99 * S,
+    );
+    expect(alarmsOf(after.state).map((alarm) => [alarm.rule, alarm.state, alarm.steps.at(-1)?.note])).toEqual(
+      ['north', 'A2', 'ballast'].map((rule) => [
+        rule,
+        'returned to normal, unacknowledged',
+        `${rule} is no longer in the definition`,
+      ]),
+    );
+    expect(after.state.silences).toEqual({});
+    expect(after.effects.filter(({ kind }) => kind === 'alarm')).toHaveLength(3);
+    const same = openDesk({ definition: old, alarms: alarmsOf(state), newest: { north: DAWN }, nowMicros: DAWN });
+    expect(next(same, { kind: 'tick' }, DAWN + 12 * S).effects).toEqual([]);
   });
 
   test('takes a new definition', () => {
