@@ -4,11 +4,13 @@ import { fileURLToPath } from 'node:url';
 
 /** The command line: `spanbeat serve`, `demo`, `analyse`, `simulate`, `check`, `schema`. */
 keepCompiled();
-const [{ processConsole }, { complainOf }, { createProgram }] = await Promise.all([
+const [{ processConsole }, { complainOf }, { createProgram }, { endWithNpm }] = await Promise.all([
   import('./command/console.ts'),
   import('./command/outcome.ts'),
   import('./command/program.ts'),
+  import('./signal.ts'),
 ]);
+endWithNpm();
 const { version } = JSON.parse(readFileSync(new URL('../package.json', import.meta.url), 'utf8')) as {
   version: string;
 };
@@ -17,7 +19,7 @@ const streams = processConsole();
 const exit = await createProgram(version, streams)
   .run(process.argv.slice(2))
   .catch((error: unknown) => complainOf(error, streams));
-// A server goes on; it ends by a signal, which app.ts hears.
+// A server goes on; it ends by a signal, which signal.ts hears.
 if (exit !== null) process.exitCode = exit;
 
 /**
