@@ -43,3 +43,28 @@ export function spread(wishes: readonly Wish[]): number[] {
   }
   return places;
 }
+
+/**
+ * As `spread`, then pushed back in where the row would run over an end; over the right one at last where all of it is wider
+ * than the room.
+ *
+ * @param wishes in order, px
+ * @param width of the room, px
+ * @example spreadWithin([{ at: 2, half: 5 }, { at: 2, half: 5 }], 100) // [5, 15]
+ */
+export function spreadWithin(wishes: readonly Wish[], width: number): number[] {
+  const places = spread(wishes);
+  let right = width;
+  for (let i = places.length - 1; i >= 0; i--) {
+    const { half } = wishes[i]!;
+    places[i] = Math.min(places[i]!, right - half);
+    right = places[i]! - half;
+  }
+  let left = 0;
+  for (let i = 0; i < places.length; i++) {
+    const { half } = wishes[i]!;
+    places[i] = Math.max(places[i]!, left + half);
+    left = places[i]! + half;
+  }
+  return places;
+}

@@ -5,7 +5,7 @@ import {
   type Sensor,
   type Span,
 } from '#core/contract/bridge.ts';
-import { spread, type Wish } from './balloons.ts';
+import { spreadWithin } from './balloons.ts';
 
 /** Scales of drawings that a long section may have, 1 : n, largest first. */
 const SCALES = [75, 100, 125, 150, 200, 250, 300, 400, 500, 750, 1000, 1500, 2000, 3000, 5000, 10_000, 20_000];
@@ -170,11 +170,10 @@ const halfOf = (id: string): number => Math.max(10.5, (id.length * CHARACTER_PX 
 export function placeSensors(definition: BridgeDefinition, layout: SectionLayout): PlacedSensor[] {
   const sensors = definition.sensors.toSorted((a, b) => a.alongM - b.alongM);
   const halves = sensors.map(({ id }) => halfOf(id));
-  const wishes = sensors.map((sensor, i) => {
-    const half = halves[i]! + GAP_PX / 2;
-    return { at: Math.min(Math.max(layout.x(sensor.alongM), half), layout.width - half), half };
-  });
-  const places = inside(spread(wishes), wishes, layout.width);
+  const places = spreadWithin(
+    sensors.map((sensor, i) => ({ at: layout.x(sensor.alongM), half: halves[i]! + GAP_PX / 2 })),
+    layout.width,
+  );
   return sensors.map((sensor, i) => ({
     sensor,
     x: layout.x(sensor.alongM),
@@ -183,24 +182,6 @@ export function placeSensors(definition: BridgeDefinition, layout: SectionLayout
     balloonX: places[i]!,
     half: halves[i]!,
   }));
-}
-
-/** A row that was spread beyond an end of the drawing is pushed back in; `layoutSection` keeps room for all of it. */
-function inside(places: number[], wishes: readonly Wish[], width: number): number[] {
-  const kept = [...places];
-  let left = 0;
-  for (let i = 0; i < kept.length; i++) {
-    const { half } = wishes[i]!;
-    kept[i] = Math.max(kept[i]!, left + half);
-    left = kept[i]! + half;
-  }
-  let right = width;
-  for (let i = kept.length - 1; i >= 0; i--) {
-    const { half } = wishes[i]!;
-    kept[i] = Math.min(kept[i]!, right - half);
-    right = kept[i]! - half;
-  }
-  return kept;
 }
 
 function depthOf(sensor: Sensor, layout: SectionLayout): number {

@@ -61,6 +61,24 @@ describe.skipIf(!available('chromium'))('in a browser, over the demonstration', 
     await page.getByText('Measuring', { exact: true }).waitFor();
   });
 
+  it('closes the choice of channels by Escape and stands again where it was opened', async () => {
+    const choose = page.getByRole('button', { name: 'Choose channels' });
+    await pressOn(page, choose);
+    await page.getByRole('checkbox', { name: /^A1/ }).focus();
+    await page.keyboard.press('Escape');
+    await page.getByRole('checkbox', { name: /^A1/ }).waitFor({ state: 'detached' });
+    expect(await choose.evaluate((button) => button === document.activeElement)).toBe(true);
+  });
+
+  it('chooses the sensor of the spectrum, and the address keeps it', async () => {
+    await page.getByRole('combobox', { name: 'Sensor of the spectrum' }).selectOption('A4');
+    await page.getByText(/^A4, .*a line a minute/).waitFor();
+    expect(new URL(page.url()).searchParams.get('spectrum')).toBe('A4');
+    await page.getByRole('combobox', { name: 'Sensor of the spectrum' }).selectOption('A1');
+    await page.getByText(/^A1, .*a line a minute/).waitFor();
+    expect(new URL(page.url()).search).toBe('');
+  });
+
   it('hears of the alarm on whatever page it is', async () => {
     await page.getByRole('link', { name: /Unanswered alarms.*[1-9]\d*\s*IL/ }).waitFor();
     const alarm = await settledAlarm(server, BRIDGE);

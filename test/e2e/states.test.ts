@@ -111,6 +111,9 @@ describe.skipIf(!available('chromium'))(
       const { page } = browser;
       await page.goto(`${server.url}/nowhere/at/all`);
       await page.getByRole('heading', { name: 'There is no such page' }).waitFor();
+      await page.goto(`${server.url}/live`);
+      await page.getByRole('heading', { name: 'Live: of which bridge?' }).waitFor();
+      await page.getByRole('main').getByRole('link', { name: 'Ottermere Trough' }).waitFor();
       await page.goto(`${server.url}/live/atlantis`);
       await page.getByText('No bridge of this name is defined here').waitFor();
       await page.goto(`${server.url}/passage/ottermere-20260101-000000-0`);

@@ -1,6 +1,6 @@
 import fc from 'fast-check';
 import { describe, expect, it } from 'vitest';
-import { spread, type Wish } from '../../../client/charts/balloons.ts';
+import { spread, spreadWithin, type Wish } from '../../../client/charts/balloons.ts';
 
 const wishes = fc.array(
   fc.record({ at: fc.double({ min: 0, max: 1000, noNaN: true }), half: fc.double({ min: 1, max: 30, noNaN: true }) }),
@@ -61,5 +61,37 @@ describe('labels in a row', () => {
         },
       ),
     );
+  });
+});
+
+describe('labels in a room', () => {
+  it('stay in it and beside each other, wherever they wish to stand, as far as there is room for all', () => {
+    const anywhere = fc.array(
+      fc.record({ at: fc.double({ min: -50, max: 450, noNaN: true }), half: fc.integer({ min: 2, max: 15 }) }),
+      {
+        minLength: 1,
+        maxLength: 12,
+      },
+    );
+    fc.assert(
+      fc.property(anywhere, (given) => {
+        const sorted = given.toSorted((a, b) => a.at - b.at);
+        const places = spreadWithin(sorted, 400);
+        let left = 0;
+        places.forEach((place, i) => {
+          expect(place - sorted[i]!.half).toBeGreaterThanOrEqual(left - 1e-9);
+          left = place + sorted[i]!.half;
+        });
+        expect(left).toBeLessThanOrEqual(400 + 1e-9);
+      }),
+    );
+  });
+
+  it('stand where they would without its ends, where those are far', () => {
+    const two = [
+      { at: 100, half: 5 },
+      { at: 102, half: 5 },
+    ];
+    expect(spreadWithin(two, 400)).toEqual(spread(two));
   });
 });
