@@ -86,6 +86,32 @@ export function isAlive(
   return heard !== undefined && nowMicros - heard <= silentAfterMicros(definition, sensor);
 }
 
+/**
+ * What there is to say of a sensor's silence: that it began, or that it is over; null where nothing can be said, since it
+ * was never heard, or has not been waited for long enough.
+ *
+ * @param awaitedMicros wall clock from when on it could have been heard: the server came up, or its logger came back
+ */
+export function silenceOfSensor(
+  record: HealthRecord,
+  definition: BridgeDefinition,
+  sensor: Sensor,
+  awaitedMicros: Micros,
+  nowMicros: Micros,
+): SensorCondition | null {
+  const newest = record.sensors.get(sensor.id)?.newestMicros ?? null;
+  if (newest === null) return null;
+  const after = silentAfterMicros(definition, sensor);
+  const told = { bridge: definition.id, sensor: sensor.id, code: 'silent' as const };
+  if (isAlive(record, definition, sensor, nowMicros)) {
+    return { ...told, state: 'ended', micros: newest, detail: 'its samples come again' };
+  }
+  const heard = Math.max(awaitedMicros, record.heardMicros.get(sensor.id) ?? 0);
+  if (nowMicros - heard <= after) return null;
+  const detail = `no sample for more than ${after / MICROS_PER_SECOND} s, though its logger sends`;
+  return { ...told, state: 'began', micros: newest + after, detail };
+}
+
 /** As the Bridges place shows it: silence is judged by the wall clock, so it is added when it is looked at. */
 export function healthView(record: HealthRecord, definition: BridgeDefinition, nowMicros: Micros): SensorHealth[] {
   return definition.sensors.map((sensor) => {

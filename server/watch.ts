@@ -3,11 +3,13 @@ import type { SampleBlock } from '#core/contract/block.ts';
 import type { BridgeDefinition } from '#core/contract/bridge.ts';
 import type { Complaint, Result } from '#core/contract/errors.ts';
 import { accept } from '#core/contract/errors.ts';
-import type { SensorHealth } from '#core/contract/health.ts';
+import type { SensorCondition, SensorHealth } from '#core/contract/health.ts';
 import type { PassageWindow, PipelineOutput } from '#core/contract/pipeline.ts';
 import type { BridgeStatus } from '#core/contract/status.ts';
 import { sampleMicros, type Micros } from '#core/contract/time.ts';
 import { eventsOf, next, nextAll, openDesk, type DeskStart } from '#core/alarm/desk.ts';
+import { stretchMicros } from '#core/alarm/fault.ts';
+import { isActive } from '#core/alarm/life.ts';
 import { silenceOf } from '#core/alarm/silence.ts';
 import type { DeskEffect, DeskEvent, DeskState, DeskStep, NoData } from '#core/alarm/state.ts';
 import type { BridgeMemory } from './pipelines.ts';
@@ -19,6 +21,7 @@ import {
   noteReading,
   noteSamples,
   noteVitals,
+  silenceOfSensor,
   type HealthRecord,
 } from './sensor-health.ts';
 
@@ -70,6 +73,11 @@ export function createWatch(start: WatchStart): BridgeWatch {
   let lastPassage = start.lastPassage;
   let counted: { alarms: DeskState['alarms']; open: Alarm[] } | null = null;
 
+  const openedMicros = clock();
+  /** Of a sensor: whether its silence was told to have begun or ended, and from when on it is waited for. */
+  const told = new Map<string, SensorCondition['state']>();
+  const awaited = new Map<string, Micros>();
+
   const openAlarms = (): Alarm[] => {
     if (counted?.alarms !== desk.alarms) {
       counted = { alarms: desk.alarms, open: Object.values(desk.alarms).filter(({ state }) => state !== 'normal') };
@@ -97,6 +105,20 @@ export function createWatch(start: WatchStart): BridgeWatch {
   const event = (deskEvent: DeskEvent, nowMicros: Micros = clock()): Promise<void>[] =>
     settle(next(desk, deskEvent, nowMicros));
 
+  /**
+   * A sensor that is silent while its logger sends: the pipeline cannot know, since its samples make no time pass.
+   * Said when it changes; what was said in an earlier run, its alarm remembers.
+   */
+  const watchSensors = (): void => {
+    const nowMicros = clock();
+    for (const sensor of definition.sensors) {
+      if (silenceOf(desk, sensor.logger) !== null) awaited.set(sensor.id, nowMicros);
+      const condition = silenceOfSensor(health, definition, sensor, awaited.get(sensor.id) ?? openedMicros, nowMicros);
+      if (condition === null || told.get(sensor.id) === condition.state) continue;
+      told.set(sensor.id, condition.state);
+      quietly(event({ kind: 'condition', condition: afterAlarm(desk, condition) }));
+    }
+  };
   const hear = (block: SampleBlock, toMicros: Micros, receivedMicros: Micros | null): void => {
     const { logger, startMicros } = block;
     if (receivedMicros !== null) {
@@ -114,8 +136,9 @@ export function createWatch(start: WatchStart): BridgeWatch {
       const heard = receivedMicros ?? clock();
       let length = 0;
       for (const { sensor, samples } of block.channels) {
-        if (samples.length === 0) continue;
         length = Math.max(length, samples.length);
+        // A channel without a single number is as good as silent.
+        if (samples.every(Number.isNaN)) continue;
         const newest = sampleMicros(block.startMicros, samples.length - 1, block.rateHz);
         noteSamples(health, sensor, samples.length, newest, heard);
       }
@@ -125,7 +148,6 @@ export function createWatch(start: WatchStart): BridgeWatch {
       const { passages, health: conditions, vitals } = output;
       for (const condition of conditions) noteCondition(health, condition);
       for (const one of vitals) noteVitals(health, one);
-      for (const samples of output.live) noteReading(health, samples);
       for (const samples of output.live) noteReading(health, samples);
       if (conditions.length + vitals.length > 0) effects.health(definition.id, healthView(health, definition, clock()));
       const kept: Promise<void>[] = [];
@@ -142,7 +164,10 @@ export function createWatch(start: WatchStart): BridgeWatch {
       if (from < events.length) kept.push(...settle(nextAll(desk, events.slice(from), clock())));
       return kept.length === 0 ? null : Promise.all(kept).then(() => undefined);
     },
-    tick: () => quietly(event({ kind: 'tick' })),
+    tick() {
+      quietly(event({ kind: 'tick' }));
+      watchSensors();
+    },
     async acknowledge(alarm, by, note) {
       const step = next(desk, { kind: 'acknowledge', alarm, by, note }, clock());
       const refusal = step.effects.find(
@@ -168,6 +193,7 @@ export function createWatch(start: WatchStart): BridgeWatch {
       const known: Record<string, { newestMicros: Micros; heardMicros: Micros }> = {};
       for (const [id, newestMicros] of Object.entries(loggers)) known[id] = { newestMicros, heardMicros };
       desk = { ...desk, loggers: { ...known, ...desk.loggers }, conditions: conditionsOf(definition.id, sensors) };
+      told.clear();
     },
   };
 
@@ -179,6 +205,15 @@ export function createWatch(start: WatchStart): BridgeWatch {
       });
     }
   }
+}
+
+/** Samples that come again end a silence even where the logger's clock went back meanwhile. */
+function afterAlarm({ alarms }: DeskState, condition: SensorCondition): SensorCondition {
+  if (condition.state !== 'ended') return condition;
+  const begun = Object.values(alarms).flatMap((alarm) =>
+    alarm.kind === 'sensor' && alarm.rule === condition.sensor && isActive(alarm) ? [stretchMicros(alarm)] : [],
+  );
+  return { ...condition, micros: Math.max(condition.micros, ...begun) };
 }
 
 /** What held when the snapshot was taken; the pipeline that goes on from it will say when it ends. */
