@@ -73,7 +73,8 @@ export const marked = (sensor: string, code: string): string => `${sensor}${MARK
  * as much as at the sensor (half sine over the span); one beside a bearing has no say about midspan. Without neighbours
  * there is no doubt from them.
  */
-export function recordDoubt(definition: BridgeDefinition, alarm: Alarm, passage: Passage): Alarm {
+export function recordDoubt(definition: BridgeDefinition, judged: Alarm, passage: Passage): Alarm {
+  const alarm = passage.phases.foundBy === 'live level' ? withDoubt(judged, 'no train was recognised') : judged;
   const sensor = definition.sensors.find(({ id }) => id === alarm.sensor);
   if (sensor === undefined) return alarm;
   const own = passage.channels.find((channel) => channel.sensor === sensor.id);

@@ -184,7 +184,9 @@ function alarmOf(state: DeskState, limit: string, passage: Passage): Alarm | nul
   return within.toSorted((a, b) => value(b) - value(a))[0] ?? null;
 }
 
+/** Passages above the limit are counted; what no train did is none. */
 function remembered(state: DeskState, limit: string, passage: Passage, record: RecordOfLimit): DeskState {
+  if (passage.phases.foundBy === 'live level') return state;
   if (record.value === null || record.severity === null) return state;
   if (state.above.some((one) => one.passage === passage.id && one.limit === limit)) return state;
   const added: PassageAbove = { limit, passage: passage.id, micros: passage.phases.onMicros };

@@ -72,7 +72,14 @@ export const Phases = Type.Object({
   offMicros: MicrosType,
   freeEndMicros: MicrosType,
   /** What found them. */
-  foundBy: Type.Union([Type.Literal('axle sensors'), Type.Literal('wheel-rail noise'), Type.Literal('given')]),
+  foundBy: Type.Union([
+    Type.Literal('axle sensors'),
+    Type.Literal('wheel-rail noise'),
+    /** No train was recognised: the deck passed a level from `onMicros` to `offMicros`. */
+    Type.Literal('live level'),
+    /** A person said that the whole recording is one event. */
+    Type.Literal('given'),
+  ]),
   quality: Quality,
   notes: Type.Array(Type.String()),
 });

@@ -324,6 +324,7 @@ function firstAtOrAfter(
 function dropTicks(channel: Channel): void {
   channel.ticks = [];
   channel.tick = null;
+  for (const { watches } of channel.bands) for (const watch of watches) watch.aboveTicks = [];
 }
 
 function finishTick(channel: Channel): void {

@@ -3,7 +3,7 @@ import type { LevelEvent } from '../contract/pipeline.ts';
 import { severityOf, severityRank, type Levels, type Severity } from '../contract/severity.ts';
 import type { Micros } from '../contract/time.ts';
 import { MICROS_PER_SECOND } from '../contract/time.ts';
-import { RULE } from './rule.ts';
+import { RULE, TICK_MICROS } from './rule.ts';
 
 /**
  * Watches the live, band-limited signal of one channel against one limit, sample by sample. An excursion begins when
@@ -27,6 +27,8 @@ export interface LevelWatch {
   beforeLast: number;
   last: number;
   lastMicros: Micros;
+  /** Ticks with a height above the lowest level that the bridge has not taken yet, oldest first. */
+  aboveTicks: number[];
 }
 
 export function createLevelWatch(limit: Limit): LevelWatch {
@@ -43,6 +45,7 @@ export function createLevelWatch(limit: Limit): LevelWatch {
     beforeLast: NaN,
     last: NaN,
     lastMicros: 0,
+    aboveTicks: [],
   };
 }
 
@@ -124,6 +127,8 @@ function takeHeight(watch: LevelWatch, value: number, micros: Micros, tell: Tell
   }
   if (magnitude > watch.lowest) {
     watch.lastAboveMicros = micros;
+    const tick = Math.floor(micros / TICK_MICROS);
+    if (watch.aboveTicks.at(-1) !== tick) watch.aboveTicks.push(tick);
     if (magnitude > watch.crest) {
       watch.crest = magnitude;
       watch.crestMicros = micros;

@@ -14,12 +14,16 @@ export interface PassageFrame {
   fromMicros: Micros;
   toMicros: Micros;
   cut: Cut | null;
+  /** Where a live level was passed without a train: from when to when. */
+  above?: { fromMicros: Micros; toMicros: Micros };
   /** True where a person says that the whole stretch is one event, train or not. */
   whole?: boolean;
 }
 
 /** When the first axle came and the last one left, and how that is known. */
 export type FoundPhases = Omit<Phases, 'freeEndMicros'>;
+
+const NO_TRAIN = 'a level was passed, but no train was recognised: what moved the deck is not known';
 
 /** Rolling for this long makes a train where no axle sensor speaks; a single blow rings for less. */
 const SUSTAINED_SECONDS = 0.3;
@@ -43,6 +47,10 @@ export function findPhases(
   span: NoiseSpan | null,
   record: readonly RecordChannel[],
 ): FoundPhases | null {
+  if (frame.above !== undefined) {
+    const { fromMicros: onMicros, toMicros: offMicros } = frame.above;
+    return { onMicros, offMicros, foundBy: 'live level', quality: 'usable', notes: [NO_TRAIN] };
+  }
   if (axles.onMicros !== null && axles.offMicros !== null && axles.offMicros > axles.onMicros) {
     return byAxles(axles, axles.onMicros, axles.offMicros, span);
   }

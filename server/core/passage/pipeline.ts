@@ -15,6 +15,14 @@ import {
   type DetectorSetting,
   type TickFeatures,
 } from './detector.ts';
+import {
+  closeExceedance,
+  createExceedanceWatch,
+  exceedanceNeeds,
+  followExceedance,
+  type Exceedance,
+  type ExceedanceWatch,
+} from './exceedance.ts';
 import { createLiveSpeed, noteLivePulse, type LiveSpeed } from './live-speed.ts';
 import { measurePassage } from './measure.ts';
 import { forgetBefore, recall } from './memory.ts';
@@ -34,6 +42,7 @@ export interface PipelineState {
   channels: Channel[];
   detector: Detector;
   setting: DetectorSetting;
+  exceedance: ExceedanceWatch;
   liveSpeed: LiveSpeed;
   vitalsMinute: number;
 }
@@ -51,6 +60,7 @@ export function createPipeline(definition: BridgeDefinition, definitionVersion: 
       freeSeconds: freeSeconds(definition),
       axleTracks: axleTracks(definition).map(trackOf),
     },
+    exceedance: createExceedanceWatch(),
     liveSpeed: createLiveSpeed(),
     vitalsMinute: -1,
   };
@@ -81,6 +91,7 @@ export function finish(state: PipelineState): PipelineOutput {
   for (const channel of state.channels) closeChannel(channel, state.definition.id, sink);
   closeTicks(state, output, true);
   act(state, interrupt(state.detector, state.setting), output);
+  recordExceedance(state, closeExceedance(state.exceedance, state.detector.lastTick), output);
   return settled(state, output);
 }
 
@@ -91,14 +102,15 @@ export function recompute(
   stored: Passage,
   channels: readonly WindowChannel[],
 ): Passage | null {
-  const whole = stored.phases.foundBy === 'given';
+  const { foundBy, onMicros, offMicros } = stored.phases;
   const frame = {
     id: stored.id,
     triggerMicros: stored.triggerMicros,
     fromMicros: stored.startMicros,
     toMicros: stored.endMicros,
     cut: stored.cut,
-    whole,
+    whole: foundBy === 'given',
+    ...(foundBy === 'live level' ? { above: { fromMicros: onMicros, toMicros: offMicros } } : {}),
   };
   return measurePassage(definition, definitionVersion, frame, channels);
 }
@@ -127,8 +139,8 @@ function emptyOutput(): PipelineOutput {
 }
 
 /** No window begins before the samples that are still kept for it. */
-function settled({ detector }: PipelineState, output: PipelineOutput): PipelineOutput {
-  if (detector.lastTick >= 0) output.settledMicros = neededFrom(detector, detector.lastTick * TICK_MICROS);
+function settled(state: PipelineState, output: PipelineOutput): PipelineOutput {
+  if (state.detector.lastTick >= 0) output.settledMicros = keptFrom(state);
   return output;
 }
 
@@ -162,6 +174,9 @@ function closeTicks(state: PipelineState, output: PipelineOutput, all: boolean):
     if (!all && !complete(taking, number)) break;
     const features = takeTick(taking, number, state.liveSpeed.speedMs);
     act(state, detect(state.detector, state.setting, features), output);
+    const busy = state.detector.open !== null || state.detector.ringing !== null;
+    const exceedance = followExceedance(state.exceedance, number, takeAbove(taking, number), busy);
+    recordExceedance(state, exceedance, output);
     tellVitals(state, number, output);
   }
   trimMemories(state);
@@ -176,6 +191,7 @@ function leavePast(state: PipelineState, channels: readonly Channel[], output: P
   const waitedFor = channels.filter((channel) => channel.waitedFor);
   if (waitedFor.length > 0 && waitedFor.every(({ through }) => through < lastTick)) {
     act(state, turnBack(state.detector, state.setting), output);
+    recordExceedance(state, closeExceedance(state.exceedance, lastTick), output);
     return;
   }
   for (const { ticks } of channels) while (ticks[0] !== undefined && ticks[0].number <= lastTick) ticks.shift();
@@ -205,6 +221,15 @@ function takeTick(channels: readonly Channel[], number: number, liveSpeedMs: num
   return features;
 }
 
+/** Whether a live level was passed in a tick, on any channel. */
+function takeAbove(channels: readonly Channel[], number: number): boolean {
+  let above = false;
+  for (const { aboveTicks } of channels.flatMap(({ bands }) => bands.flatMap(({ watches }) => watches))) {
+    while (aboveTicks[0] !== undefined && aboveTicks[0] <= number) above = aboveTicks.shift() === number || above;
+  }
+  return above;
+}
+
 function act(state: PipelineState, events: readonly DetectorEvent[], output: PipelineOutput): void {
   const bridge = state.definition.id;
   for (const event of events) {
@@ -218,8 +243,22 @@ function act(state: PipelineState, events: readonly DetectorEvent[], output: Pip
     const frame = { id, triggerMicros: candidate.onsetTick * TICK_MICROS, fromMicros, toMicros, cut };
     const passage = measurePassage(state.definition, state.definitionVersion, frame, channels);
     if (passage === null) output.progress.push({ bridge, passage: candidate.id, kind: 'discarded', micros: toMicros });
-    else output.passages.push({ passage, channels });
+    else {
+      output.passages.push({ passage, channels });
+      state.exceedance.recorded = { fromMicros, toMicros };
+    }
   }
+}
+
+/** The record of a level that was passed without a train. */
+function recordExceedance(state: PipelineState, exceedance: Exceedance | null, output: PipelineOutput): void {
+  if (exceedance === null) return;
+  const { above, window } = exceedance;
+  const channels = cutWindow(state, window.fromMicros, window.toMicros);
+  const id = `${state.definition.id}-${timeName(above.fromMicros)}`;
+  const frame = { id, triggerMicros: above.fromMicros, ...window, cut: null, above };
+  const passage = measurePassage(state.definition, state.definitionVersion, frame, channels);
+  if (passage !== null) output.passages.push({ passage, channels });
 }
 
 /** A temperature may be this old and still hold for a passage. */
@@ -244,10 +283,14 @@ function cutWindow(state: PipelineState, fromMicros: Micros, toMicros: Micros): 
   });
 }
 
+/** From when on samples may still be needed. */
+function keptFrom({ detector, exceedance }: PipelineState): Micros {
+  return Math.min(neededFrom(detector, detector.lastTick * TICK_MICROS), exceedanceNeeds(exceedance));
+}
+
 function trimMemories(state: PipelineState): void {
   if (state.detector.lastTick < 0) return;
-  const now = state.detector.lastTick * TICK_MICROS;
-  const needed = neededFrom(state.detector, now);
+  const needed = keptFrom(state);
   for (const channel of state.channels) {
     forgetBefore(channel.memory, channel.slow ? needed - TEMPERATURE_MICROS : needed);
   }
