@@ -37,6 +37,8 @@ export interface Running {
 
 export interface Surroundings {
   clock?: () => Micros;
+  /** Since when definitions are in force of bridges that the history does not know; now where absent. */
+  firstDefinedMicros?: Micros;
   /** Checks each answer of the interface against its schema; for tests. */
   checkAnswers?: boolean;
   clientFolder?: string;
@@ -95,7 +97,7 @@ async function start(
   begun.push(() => journal.close());
 
   const outlets: Outlets = { live: null, publisher: null };
-  const watches = await openWatches(sound, history, outlets, clock, complaints);
+  const watches = await openWatches(sound, history, outlets, surroundings, complaints);
   const definitions = [...watches.values()].map(({ definition, version }) => ({ definition, version }));
   const { directory, complaints: mapping } = buildDirectory(
     sound.map(({ definition }) => definition),
@@ -205,14 +207,15 @@ async function openWatches(
   sound: readonly GivenDefinition[],
   history: History,
   outlets: Outlets,
-  clock: () => Micros,
+  { clock = wallClock, firstDefinedMicros }: Surroundings,
   complaints: ComplaintLog,
 ): Promise<Map<string, BridgeWatch>> {
   const last = new Map((await history.lastPassages()).map(({ bridge, id, onMicros }) => [bridge, { id, onMicros }]));
   const watches = new Map<string, BridgeWatch>();
   for (const { definition, text } of sound) {
     const { id } = definition;
-    const version = await history.saveDefinition(definition, text, clock());
+    const known = history.versions(id).length > 0;
+    const version = await history.saveDefinition(definition, text, (known ? undefined : firstDefinedMicros) ?? clock());
     const newest = last.get(id);
     const [alarms, above] = await Promise.all([
       history.deskAlarms(id),

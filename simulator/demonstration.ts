@@ -245,7 +245,7 @@ const PAST_AFTER_S = 24;
 export function* pastPassages(options: PastOptions): Generator<PastPassage> {
   const { definitions, nowMicros, days, perDay = 8, seed } = options;
   const today = Math.floor(nowMicros / DAY_MICROS);
-  for (let day = today - days; day <= today; day++) {
+  for (let day = pastFromMicros(nowMicros, days) / DAY_MICROS; day <= today; day++) {
     const trains = pastTrains(day, perDay, seed, definitions.length);
     for (const { onMicros, type, speedMs, direction, bridge, number } of trains) {
       const definition = definitions[bridge];
@@ -257,6 +257,11 @@ export function* pastPassages(options: PastOptions): Generator<PastPassage> {
       if (past !== null) yield past;
     }
   }
+}
+
+/** When the past begins that is made by `pastPassages`: at midnight (UTC), before its first train. */
+export function pastFromMicros(nowMicros: Micros, days: number): Micros {
+  return (Math.floor(nowMicros / DAY_MICROS) - days) * DAY_MICROS;
 }
 
 interface PastTrain {

@@ -1,3 +1,4 @@
+import { counted } from '#core/contract/counted.ts';
 import { readDefinition } from '../definition.ts';
 import { complain, EXIT, type Console } from './outcome.ts';
 
@@ -20,5 +21,3 @@ export async function check(files: readonly string[], console: Console): Promise
   }
   return exit;
 }
-
-const counted = (number: number, one: string): string => `${number} ${one}${number === 1 ? '' : 's'}`;
