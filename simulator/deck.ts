@@ -204,7 +204,8 @@ export class Deck {
       }
       if (u >= TABLE) break;
       const v = rising ? u : TABLE - u;
-      const i = v | 0;
+      // the far end itself, where an axle enters there at a step to the last bit, belongs to the last cell
+      const i = Math.min(v | 0, TABLE - 1);
       cell[j] = i;
       share[j] = v - i;
       to = j;

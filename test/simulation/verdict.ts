@@ -27,6 +27,8 @@ export interface SceneVerdict {
 export function judgeScene(index: number, seed: number): SceneVerdict {
   const scene = campaignScene(index, seed);
   const { channels, truths } = simulate(scene);
+  const broken = channels.find(({ samples }) => !samples.every(Number.isFinite));
+  if (broken !== undefined) throw new Error(`${scene.label}: ${broken.sensor} is not simulated to its end`);
   const output = runPipeline(scene.definition, blocksOf(scene.definition.id, channels));
   // A level that was passed without a train is recorded too, and claims none.
   const found = output.passages.map(({ passage }) => passage).filter(({ phases }) => phases.foundBy !== 'live level');

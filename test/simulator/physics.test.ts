@@ -2,6 +2,7 @@ import { describe, expect, it } from 'vitest';
 import type { BridgeDefinition } from '#core/contract/bridge.ts';
 import { beamModes, beamMotion } from '#core/mechanics/moving-force.ts';
 import { welch } from '#core/signal/welch.ts';
+import { campaignScene } from '../../simulator/campaign.ts';
 import type { SceneEvent } from '../../simulator/nuisance.ts';
 import { bridgeParameters, cleanParameters } from '../../simulator/parameters.ts';
 import type { PassageEvent } from '../../simulator/passage.ts';
@@ -145,4 +146,11 @@ const SHORT = plainBridge({
     },
   ],
   sensors: [deckSensor('A2', 8.8)],
+});
+
+describe('a simulated passage', () => {
+  it('stays a number where an axle enters the far end at a step of the simulation to the last bit', () => {
+    const { channels } = simulate(campaignScene(384, 17));
+    for (const { samples } of channels) expect(samples.every(Number.isFinite)).toBe(true);
+  });
 });

@@ -32,6 +32,8 @@ const SUSTAINED_UNHEARD_SECONDS = 0.8;
 /** Noise that falls by so much within a second rings off after a blow; no train so short grows that quiet. */
 const BLOW_SECONDS = 1;
 const BLOW_FALL = 3;
+/** What is loud for longer in all is no single blow, s: on a short bridge the bogies of a train come one by one. */
+const BLOW_LOUD_SECONDS = 2;
 
 /**
  * When a train was on the bridge: by its axles where their sensors saw all of it, else by wheel-rail noise, whose edges
@@ -58,7 +60,7 @@ export function findPhases(
   const heard = axles.firstPulse !== null;
   const least = listening === 0 || heard ? SUSTAINED_SECONDS : SUSTAINED_UNHEARD_SECONDS;
   const denied = listening >= 2 && !heard;
-  const blow = span !== null && !heard && span.sustainedSeconds < BLOW_SECONDS && span.fall > BLOW_FALL;
+  const blow = !heard && span !== null && ringsOff(span);
   if (span !== null && !denied && !blow && span.sustainedSeconds >= least) {
     const notes = listening > 0 ? ['the axle sensors did not see the whole train'] : [];
     return { ...sharpened(bridge, frame, span, axles, record), foundBy: 'wheel-rail noise', quality: 'usable', notes };
@@ -78,6 +80,10 @@ export function findPhases(
     };
   }
   return null;
+}
+
+function ringsOff({ sustainedSeconds, loudSeconds, fall }: NoiseSpan): boolean {
+  return sustainedSeconds < BLOW_SECONDS && loudSeconds < BLOW_LOUD_SECONDS && fall > BLOW_FALL;
 }
 
 /** The free stretches beside a train keep this distance from where noise says that it came and went, s. */

@@ -92,6 +92,8 @@ export interface NoiseSpan {
   offMicros: Micros;
   /** Longest time without a break in which noise was near its level, s. */
   sustainedSeconds: number;
+  /** All time in which it was, s. */
+  loudSeconds: number;
   /** By how much noise fell from the first third of that time to the last, power ratio: a blow rings off, a train rolls. */
   fall: number;
   /** Level over the quiet floor, power ratio. */
@@ -157,15 +159,17 @@ function mainStretch(smooth: Float64Array, level: number, most: number): [first:
 }
 
 /** Longest time without a break near the level of the loud frames; one blow in the middle of a train is not that level. */
-function sustained(smooth: Float64Array): Pick<NoiseSpan, 'sustainedSeconds' | 'fall'> {
+function sustained(smooth: Float64Array): Pick<NoiseSpan, 'sustainedSeconds' | 'loudSeconds' | 'fall'> {
   const loud = smooth.filter((value) => value > RULE.activeRatio);
   const level = loud.length === 0 ? 0 : quantile(loud, SUSTAIN_QUANTILE);
   const least = Math.max(SUSTAIN_SHARE * level, RULE.activeRatio / 2);
   let longest = 0;
   let end = 0;
   let row = 0;
+  let count = 0;
   smooth.forEach((value, i) => {
     row = value > least ? row + 1 : 0;
+    if (row > 0) count += 1;
     if (row <= longest) return;
     longest = row;
     end = i + 1;
@@ -173,7 +177,8 @@ function sustained(smooth: Float64Array): Pick<NoiseSpan, 'sustainedSeconds' | '
   const third = Math.floor(longest / 3);
   const start = end - longest;
   const fall = third === 0 ? 1 : mean(smooth, start, start + third) / mean(smooth, end - third, end);
-  return { sustainedSeconds: (longest * FRAME_MICROS) / MICROS_PER_SECOND, fall };
+  const seconds = (frames: number): number => (frames * FRAME_MICROS) / MICROS_PER_SECOND;
+  return { sustainedSeconds: seconds(longest), loudSeconds: seconds(count), fall };
 }
 
 /** Frames before and after a first crossing in which the step itself is looked for. */
