@@ -408,7 +408,9 @@ class PipelinePool implements Pipelines {
       feed.openedAt = feed.through = mismatch === null ? snapshot.position : snapshot.quietPosition;
       feed.quietPosition = snapshot.quietPosition;
     }
-    recall(feed.bridge, { loggers: snapshot?.loggers ?? {}, sensors: snapshot?.sensors ?? [] });
+    // Conditions belong to the pipeline that will say when they end; a new one says anew which hold.
+    const sensors = (snapshot?.sensors ?? []).map((sensor) => (state === null ? { ...sensor, active: [] } : sensor));
+    recall(feed.bridge, { loggers: snapshot?.loggers ?? {}, sensors });
     const { bridge, definition, version } = feed;
     this.#post(feed.thread, { kind: 'open', bridge, definition, version, state });
   }

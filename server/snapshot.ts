@@ -14,7 +14,7 @@ export interface Snapshot {
   definitionVersion: number;
   /** The newest record that is in the state; null where the journal was empty. */
   position: Position | null;
-  /** The newest record at which no passage was open: a pipeline of another version begins there. */
+  /** The newest record at which nothing was under way: a pipeline of another version begins there. */
   quietPosition: Position | null;
   /** Newest sample of each logger. */
   loggers: Record<string, Micros>;

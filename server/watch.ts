@@ -192,7 +192,8 @@ export function createWatch(start: WatchStart): BridgeWatch {
       const heardMicros = clock();
       const known: Record<string, { newestMicros: Micros; heardMicros: Micros }> = {};
       for (const [id, newestMicros] of Object.entries(loggers)) known[id] = { newestMicros, heardMicros };
-      desk = { ...desk, loggers: { ...known, ...desk.loggers }, conditions: conditionsOf(definition.id, sensors) };
+      const conditions = conditionsOf(definition.id, sensors);
+      desk = { ...desk, loggers: { ...known, ...desk.loggers }, conditions, openedSecond: -1 };
       told.clear();
     },
   };

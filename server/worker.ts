@@ -23,7 +23,7 @@ export type FromWorker =
 export interface BridgeOutput {
   bridge: string;
   blocks: number;
-  /** No passage is open after them. */
+  /** No record is yet to come of what they hold. */
   quiet: boolean;
   output: PipelineOutput;
   /** When the block had its turn, and when it was done; see `sharedMs`. */
@@ -74,8 +74,7 @@ function run(port: NonNullable<typeof parentPort>): void {
     try {
       const begunMs = sharedMs();
       const output = step(state, block);
-      const quiet = state.detector.open === null;
-      hold({ bridge: block.bridge, blocks: 1, quiet, output, begunMs, doneMs: sharedMs() });
+      hold({ bridge: block.bridge, blocks: 1, quiet: isQuiet(state), output, begunMs, doneMs: sharedMs() });
     } catch (failure) {
       fault(block.bridge, failure);
     }
@@ -97,12 +96,17 @@ function run(port: NonNullable<typeof parentPort>): void {
         const bytes = Uint8Array.from(serialize(state));
         const { bridge, token } = message;
         port.postMessage(
-          { kind: 'snapshot', bridge, token, state: bytes, quiet: state.detector.open === null } satisfies FromWorker,
+          { kind: 'snapshot', bridge, token, state: bytes, quiet: isQuiet(state) } satisfies FromWorker,
           [bytes.buffer],
         );
       }
     }
   });
+}
+
+/** Nothing is under way whose record is yet to come: neither on the bridge nor ringing on. */
+function isQuiet({ detector, exceedance }: PipelineState): boolean {
+  return detector.open === null && detector.ringing === null && exceedance.open === null;
 }
 
 function isUrgent({ levels, passages, progress, axles }: PipelineOutput): boolean {

@@ -226,16 +226,25 @@ describe('pipelines in worker threads', () => {
   });
 
   test('of another definition begin where no passage was open, and leave finished passages alone', async () => {
-    start();
+    const flat = { code: 'flat' as const, sinceMicros: DAWN, detail: 'seen' };
+    const none = { newestMicros: DAWN, samples: 1, counts: {}, noise: null, offset: null };
+    const remember = () => ({ loggers: {}, sensors: [{ ...none, sensor: 'A1', active: [flat] }] });
+    const recalled: number[] = [];
+    const recall: PipelinesOptions['recall'] = (_, { sensors }) => recalled.push(sensors[0]?.active.length ?? -1);
+    start({ remember, recall });
     await bring(100);
     await settled();
+    await pipelines.stop();
+    await start({ remember, recall }).ready();
     await pipelines.stop();
     const before = kept().passages.map(({ id }) => id);
     expect(before.length).toBe(1);
     outputs = [];
-    start({ bridges: [{ definition, version: 2 }] });
+    start({ bridges: [{ definition, version: 2 }], remember, recall });
     await bring(blocks.length);
     await settled();
+    // The new pipeline says anew which conditions hold.
+    expect(recalled).toEqual([-1, 1, 0]);
     expect(complaints.map(({ code }) => code)).toEqual(['SNAPSHOT_UNUSABLE']);
     const after = kept().passages;
     expect(after.length).toBe(2);

@@ -30,6 +30,29 @@ export function onCondition(state: DeskState, condition: SensorCondition, takenM
     : doubted;
 }
 
+/** A pipeline that was opened anew has seen by then whether a fault still holds; noise takes it a minute. */
+const SEEN_ANEW_MICROS = 180 * MICROS_PER_SECOND;
+
+/**
+ * Ends the alarms of faults that began before the pipeline was opened and that it has not seen since: a new one, as after a
+ * change of the definition, does not know that they began, and so never says that they ended. A sensor's silence is not
+ * the pipeline's to see.
+ */
+export function withoutForgotten(state: DeskState, micros: Micros, takenMicros: Micros): DeskState {
+  const openedMicros = state.openedSecond * MICROS_PER_SECOND;
+  if (micros - openedMicros < SEEN_ANEW_MICROS) return state;
+  return Object.values(state.alarms)
+    .filter((alarm) => alarm.kind === 'sensor' && isActive(alarm) && stretchMicros(alarm) < openedMicros)
+    .filter((alarm) => !isLasting(state, alarm.rule) && faultsOf(alarm).every(({ code }) => code !== 'silent'))
+    .reduce((now, alarm) => withAlarm(now, giveBack(alarm, micros, takenMicros, NOT_SEEN)), state);
+}
+
+const NOT_SEEN = 'not seen again since the samples are read anew';
+
+function isLasting({ conditions }: DeskState, sensor: string): boolean {
+  return (conditions[sensor] ?? []).some(({ state, code }) => state === 'began' && ALARMING.includes(code));
+}
+
 /** One a code, so there are never more than there are codes. */
 function withConditions(state: DeskState, sensor: string, conditions: SensorCondition[]): DeskState {
   return { ...state, conditions: { ...state.conditions, [sensor]: conditions } };
@@ -88,8 +111,7 @@ const loggerOf = ({ definition }: DeskState, sensor: string): string | undefined
   definition.sensors.find(({ id }) => id === sensor)?.logger;
 
 function returned(state: DeskState, { sensor, micros }: SensorCondition, takenMicros: Micros): DeskState {
-  const lasting = state.conditions[sensor]!.some((one) => one.state === 'began' && ALARMING.includes(one.code));
-  if (lasting) return state;
+  if (isLasting(state, sensor)) return state;
   return sensorAlarms(state, sensor)
     .filter((alarm) => isActive(alarm) && stretchMicros(alarm) <= micros)
     .reduce((now, alarm) => withAlarm(now, giveBack(alarm, micros, takenMicros)), state);

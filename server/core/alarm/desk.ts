@@ -52,6 +52,7 @@ export function openDesk({ definition, alarms = [], above = [], newest = {}, now
     passage: null,
     records: [],
     settledSecond: -1,
+    openedSecond: -1,
     above,
     conditions: {},
     loggers: Object.fromEntries(

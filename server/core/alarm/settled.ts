@@ -1,6 +1,7 @@
 import type { Alarm } from '../contract/alarm.ts';
 import { MICROS_PER_SECOND, type Micros } from '../contract/time.ts';
 import { aloneDoubt } from './doubt.ts';
+import { withoutForgotten } from './condition.ts';
 import { said } from './level.ts';
 import { letStand } from './life.ts';
 import { withAlarm, type DeskState } from './state.ts';
@@ -17,12 +18,14 @@ export function onSettled(state: DeskState, settledMicros: Micros, takenMicros: 
   const second = Math.floor(settledMicros / MICROS_PER_SECOND);
   if (second === state.settledSecond) return state;
   const micros = second * MICROS_PER_SECOND;
+  const openedSecond = state.openedSecond < 0 ? second : state.openedSecond;
+  const settled = { ...state, settledSecond: second, openedSecond };
   return Object.values(state.alarms)
     .filter((alarm) => isLeft(alarm, micros))
-    .reduce((now, alarm) => withAlarm(now, said(now, unjudged(now, alarm, takenMicros))), {
-      ...state,
-      settledSecond: second,
-    });
+    .reduce(
+      (now, alarm) => withAlarm(now, said(now, unjudged(now, alarm, takenMicros))),
+      withoutForgotten(settled, micros, takenMicros),
+    );
 }
 
 function isLeft({ kind, verdict, returnedMicros }: Alarm, micros: Micros): boolean {

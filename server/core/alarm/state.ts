@@ -19,6 +19,8 @@ export interface DeskState {
   readonly records: readonly RecordWindow[];
   /** Whole second of event time before which no passage is yet to come; -1 before any. */
   readonly settledSecond: number;
+  /** The first such second since the pipeline was opened. */
+  readonly openedSecond: number;
   /** Passages above a limit by the record, of the newest day. */
   readonly above: readonly PassageAbove[];
   /** By sensor. */

@@ -577,6 +577,22 @@ describe('a sensor that cannot be trusted', () => {
     expect(only(run([condition('Z9', 'silent', 'began', DAWN)])).rule).toBe('Z9');
   });
 
+  test('is not held for ever by a fault that a pipeline opened anew has never seen', () => {
+    const before = run([condition('A1', 'flat', 'began', DAWN), condition('A2', 'silent', 'began', DAWN)]);
+    const opened = run([settled(DAWN + 100 * S), settled(DAWN + 279 * S)], fresh(alarmsOf(before)));
+    expect(opened.alarms).toEqual(before.alarms);
+    const over = alarmsOf(run([settled(DAWN + 281 * S)], opened));
+    expect(over.map(({ rule, state }) => [rule, state])).toEqual([
+      ['A1', 'returned to normal, unacknowledged'],
+      ['A2', 'unacknowledged'],
+    ]);
+    expect(over[0]?.steps.at(-1)?.note).toBe('not seen again since the samples are read anew');
+    const seen = run([condition('A1', 'flat', 'began', DAWN + 110 * S), settled(DAWN + 900 * S)], opened);
+    expect(seen.alarms).toEqual(before.alarms);
+    const known = run([settled(DAWN - 100 * S), settled(DAWN + 900 * S)], before);
+    expect(known.alarms).toEqual(before.alarms);
+  });
+
   test('is not announced twice when its whole logger is silent', () => {
     const heard = next(fresh(), { kind: 'heard', logger: 'north', fromMicros: DAWN, toMicros: DAWN }, DAWN).state;
     const silent = next(heard, { kind: 'tick' }, DAWN + 11 * S).state;
