@@ -43,8 +43,8 @@ export type AlarmStep = Static<typeof AlarmStep>;
 
 /**
  * What became of an alarm of the live signal, by the record of its passage: the same severity, another one, or no judgement
- * (inconclusive: the record has no value, or is incomplete and does not reach what live saw), or no train was recognised, so
- * that no record was made. In the last two the live value stands.
+ * (inconclusive: the record has no value, or is incomplete and does not reach what live saw), or no train was recognised and
+ * no record made. In the last two the live value stands.
  */
 export const Verdict = Type.Union([
   Type.Literal('confirmed'),
