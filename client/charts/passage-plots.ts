@@ -3,6 +3,7 @@ import type { Passage } from '#core/contract/passage.ts';
 import { severityOf } from '#core/contract/severity.ts';
 import type { Decay } from './decay.ts';
 import { limitLines } from './limit-line.ts';
+import { forcedWords } from './passage-words.ts';
 import type { PlotSpec } from './plot.ts';
 import { plotColumns, valueAt, type Wave } from './wave.ts';
 
@@ -27,6 +28,7 @@ export function limitOf(definition: BridgeDefinition, sensor: Sensor): Limit | u
 export function waveformSpec(definition: BridgeDefinition, passage: Passage, sensor: Sensor, wave: Wave): PlotSpec {
   const zero = passage.phases.onMicros;
   const after = (micros: number): number => (micros - zero) / 1e6;
+  const words = forcedWords(passage);
   const off = after(passage.phases.offMicros);
   const freeEnd = after(passage.phases.freeEndMicros);
   const from = Math.max(after(passage.startMicros), -1.5);
@@ -45,7 +47,7 @@ export function waveformSpec(definition: BridgeDefinition, passage: Passage, sen
   const peak = measures?.bandPeak.value ?? null;
   const peakAt = peakMicros === null ? -1 : nearest(seconds, after(peakMicros));
   return {
-    x: { values: seconds, title: 'time after the first axle reaches the bridge, s', digits: 3, from, to },
+    x: { values: seconds, title: `time after ${words.zero}, s`, digits: 3, from, to },
     y: {
       title: unit,
       digits,
@@ -69,7 +71,7 @@ export function waveformSpec(definition: BridgeDefinition, passage: Passage, sen
     ],
     limits: { lines, both: true },
     shades: [
-      { from: 0, to: off, label: `forced vibration, 0.00 to ${off.toFixed(2)} s`, strength: 1 },
+      { from: 0, to: off, label: `${words.part}, 0.00 to ${off.toFixed(2)} s`, strength: 1 },
       { from: off, to: freeEnd, label: `free decay, ${off.toFixed(2)} to ${freeEnd.toFixed(2)} s`, strength: 0.45 },
     ],
     marks:

@@ -4,8 +4,21 @@ import { LIMIT_NAMES } from './alarm-words.ts';
 import { chainage, fixed, speed } from '../format.ts';
 import { clockIn, dateIn, offsetIn } from '../time.ts';
 
+/** Whether a train was recognised, or only a level passed. */
+export function isTrain({ phases }: Passage): boolean {
+  return phases.foundBy !== 'live level';
+}
+
+/** What its first part is called, and what its time counts from. */
+export function forcedWords(passage: Passage): { part: string; zero: string } {
+  return isTrain(passage)
+    ? { part: 'forced vibration', zero: 'the first axle reaches the bridge' }
+    : { part: 'above a level', zero: 'a level was passed' };
+}
+
 /** What crossed, as a title: `32 axles, 44.3 m/s`. */
 export function titleOf(passage: Passage): string {
+  if (!isTrain(passage)) return 'A level passed, no train recognised';
   const axles = passage.axleCount.value;
   const fast = passage.speedMs.value;
   const train = axles === null ? 'Train, axles not counted' : `${fixed(axles, 0)} axles`;

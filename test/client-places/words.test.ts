@@ -88,6 +88,13 @@ describe('a passage in words', () => {
     expect(towards(passage, bridge)).toBe('direction not measurable');
   });
 
+  it('calls no train what was not recognised as one', () => {
+    const { phases, ...passage } = passageOf({});
+    expect(titleOf({ ...passage, phases: { ...phases, foundBy: 'live level' } })).toBe(
+      'A level passed, no train recognised',
+    );
+  });
+
   it('never says "below all limits" where no limit holds or nothing was measured', () => {
     const passage = passageOf({});
     expect(verdictOf(passage)).toBe('Below all limits');
