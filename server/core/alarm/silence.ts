@@ -8,7 +8,7 @@ import { noDataMessage } from './wording.ts';
 /** A logger is silent after this long where its definition says nothing, s. */
 export const DEFAULT_SILENT_AFTER_S = 30;
 /** Silence of this many times `silentAfterS` is graver: IL. */
-const GRAVE_SILENCE = 10;
+export const GRAVE_SILENCE = 10;
 
 /** Data came: an alarm of silence is back to normal, and a hole between the newest samples is an interval without data. */
 export function onHeard(
