@@ -71,6 +71,11 @@ export function noteCondition(record: HealthRecord, { sensor, code, state, micro
   if (health === undefined) return;
   if (state !== 'ended') health.counts[code] = (health.counts[code] ?? 0) + 1;
   if (state === 'happened') return;
+  // The logger's clock went back: what comes now is the newest.
+  if (code === 'clock step' && state === 'began') {
+    health.newestMicros = micros;
+    delete health.reading;
+  }
   const others = health.active.filter((condition) => condition.code !== code);
   health.active = state === 'began' ? [...others, { code, sinceMicros: micros, detail }] : others;
 }

@@ -1,5 +1,5 @@
 import { describe, expect, it } from 'vitest';
-import { createHealthRecord, healthView, noteReading, noteSamples } from '../../server/sensor-health.ts';
+import { createHealthRecord, healthView, noteCondition, noteReading, noteSamples } from '../../server/sensor-health.ts';
 import { aDefinition, DAWN } from '../support/specimen.ts';
 
 const plain = aDefinition();
@@ -48,4 +48,23 @@ describe('a silent sensor', () => {
     const [first] = healthView(record, definition, DAWN + 3600 * SECOND).filter(({ sensor }) => sensor === shaking);
     expect(first?.active).toEqual([{ code: 'silent', sinceMicros: DAWN, detail: 'since then no sample has come' }]);
   });
+});
+
+it("the newest sample is of the time that the logger's clock gives, also where that went back", () => {
+  const record = createHealthRecord(definition);
+  const step = { bridge: definition.id, sensor: 'T9', code: 'clock step' as const, detail: 'back' };
+  noteSamples(record, 'T9', 1, DAWN, DAWN);
+  noteReading(record, {
+    bridge: definition.id,
+    sensor: 'T9',
+    startMicros: DAWN,
+    rateHz: 1,
+    samples: Float32Array.of(4),
+  });
+  noteCondition(record, { ...step, state: 'happened', micros: DAWN - 3600 * SECOND });
+  expect(record.sensors.get('T9')).toMatchObject({ newestMicros: DAWN, reading: { value: 4 } });
+  noteCondition(record, { ...step, state: 'began', micros: DAWN - 3600 * SECOND });
+  noteSamples(record, 'T9', 1, DAWN - 3599 * SECOND, DAWN);
+  expect(record.sensors.get('T9')?.newestMicros).toBe(DAWN - 3599 * SECOND);
+  expect(record.sensors.get('T9')).not.toHaveProperty('reading');
 });

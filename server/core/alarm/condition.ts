@@ -24,7 +24,8 @@ export function onCondition(state: DeskState, condition: SensorCondition, takenM
   if (condition.state === 'ended') {
     return returned(withConditions(state, condition.sensor, others), condition, takenMicros);
   }
-  const doubted = doubtLevels(withConditions(state, condition.sensor, [...others, condition]), condition);
+  const known = turnedBack(withConditions(state, condition.sensor, [...others, condition]), condition);
+  const doubted = doubtLevels(known, condition);
   return condition.state === 'began' && ALARMING.includes(condition.code)
     ? raised(doubted, condition, takenMicros)
     : doubted;
@@ -56,6 +57,14 @@ function isLasting({ conditions }: DeskState, sensor: string): boolean {
 /** One a code, so there are never more than there are codes. */
 function withConditions(state: DeskState, sensor: string, conditions: SensorCondition[]): DeskState {
   return { ...state, conditions: { ...state.conditions, [sensor]: conditions } };
+}
+
+/** Where a logger's clock went back, its newest sample is of a time that has been: its next silence counts from there. */
+function turnedBack(state: DeskState, { sensor, code, state: now, micros }: SensorCondition): DeskState {
+  const logger = loggerOf(state, sensor) ?? '';
+  const heard = state.loggers[logger];
+  if (code !== 'clock step' || now !== 'began' || heard === undefined || heard.newestMicros <= micros) return state;
+  return { ...state, loggers: { ...state.loggers, [logger]: { ...heard, newestMicros: micros } } };
 }
 
 /** Level alarms that rest on this sensor and still last. */

@@ -484,6 +484,15 @@ describe('silence of a logger', () => {
     expect(back.effects[0]).toMatchObject({ noData: { fromMicros: DAWN + S, toMicros: DAWN + 60 * S } });
   });
 
+  test('counts from the time that its clock gives, where that went back', () => {
+    const ahead = next(fresh(), heard(DAWN), DAWN + S).state;
+    const back = run([condition('A1', 'clock step', 'began', DAWN - 3600 * S)], ahead);
+    const going = next(back, heard(DAWN - 3599 * S), DAWN + 5 * S).state;
+    const silent = next(going, tick, DAWN + 16 * S);
+    expect(alarmsOf(silent.state).find(({ kind }) => kind === 'no data')?.raisedMicros).toBe(DAWN - 3588 * S);
+    expect(silent.effects[0]).toMatchObject({ noData: { fromMicros: DAWN - 3598 * S, toMicros: null } });
+  });
+
   test('that was noticed by nobody still leaves its interval', () => {
     const first = next(fresh(), heard(DAWN), DAWN + S).state;
     const hole = next(first, heard(DAWN + 30 * S), DAWN + 2 * S);
