@@ -74,12 +74,16 @@ export async function alarmsOfPassage(ask: Ask, passage: string): Promise<Alarm[
   return parsed(ask, 'SELECT json FROM alarms WHERE passage = $1 ORDER BY raised_micros, id', [passage]);
 }
 
+/** Says in a stored passage's text that no train was recognised; such a one is no passage above a limit. */
+const NO_TRAIN = '%"foundBy":"live level"%';
+
 /** Passages above a limit since a time, by the record: what the desk counts in "in the day before". */
 export async function passagesAboveOf(ask: Ask, bridge: string, sinceMicros: Micros): Promise<PassageAbove[]> {
   const rows = await ask(
     `SELECT id, limit_id, on_micros FROM passages
-     WHERE bridge = $1 AND on_micros >= $2 AND severity IS NOT NULL AND limit_id IS NOT NULL ORDER BY on_micros`,
-    [bridge, sinceMicros],
+     WHERE bridge = $1 AND on_micros >= $2 AND severity IS NOT NULL AND limit_id IS NOT NULL AND json NOT LIKE $3
+     ORDER BY on_micros`,
+    [bridge, sinceMicros, NO_TRAIN],
   );
   return rows.map((row) => ({
     limit: String(row['limit_id']),

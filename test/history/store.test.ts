@@ -271,11 +271,14 @@ describe('alarms', () => {
     expect(times(await store.deskAlarms('ottermere')).toSorted()).toEqual([0, 1, 2]);
   });
 
-  test('count the passages above since a time by their records', async () => {
+  test('count the passages above since a time by their records, and none without a train', async () => {
     const store = await begun();
     await commit(store, { onMicros: DAWN, peaks: { A1: 2.5 } });
     await commit(store, { onMicros: DAWN + HOUR, peaks: { A1: 1 } });
     const late = await commit(store, { onMicros: DAWN + 2 * HOUR, peaks: { A1: 3 } });
+    const blow = aPassage({ onMicros: DAWN + HOUR + 5, peaks: { A1: 3 } });
+    const noTrain = { ...blow, phases: { ...blow.phases, foundBy: 'live level' as const } };
+    await store.commitPassage({ passage: noTrain, channels: aWindow(blow, { seconds: 0.1 }), alarms: [] });
     expect(await store.passagesAbove('ottermere', DAWN + 1)).toEqual([
       { limit: 'ballast', passage: late.id, micros: DAWN + 2 * HOUR },
     ]);
