@@ -10,8 +10,8 @@ export interface Decay {
   rectified: number[];
   /** One point per four cycles: √2 times the r.m.s., the amplitude of a slowly decaying cosine. */
   envelope: { second: number; amplitude: number }[];
-  /** The stored damping ratio through the envelope: amplitude at 0 s and its rate of fall, 1/s. */
-  fit: { amplitude: number; perSecond: number } | null;
+  /** The stored damping ratio through the envelope: amplitude at 0 s, its rate of fall, 1/s, and how far the line leaves a point, as a share of it. */
+  fit: { amplitude: number; perSecond: number; off: number } | null;
 }
 
 const CYCLES = 4;
@@ -55,5 +55,17 @@ function fitOf(envelope: Decay['envelope'], f1: number, zeta: number | null): De
   const strongest = Math.max(...envelope.map((point) => point.amplitude));
   const clear = envelope.filter((point) => point.amplitude > strongest / 30);
   const logs = clear.map((point) => Math.log(point.amplitude) + perSecond * point.second);
-  return { amplitude: Math.exp(logs.reduce((sum, log) => sum + log, 0) / logs.length), perSecond };
+  const height = logs.reduce((sum, log) => sum + log, 0) / logs.length;
+  const off = Math.max(...logs.map((log) => Math.expm1(Math.abs(log - height))));
+  return { amplitude: Math.exp(height), perSecond, off };
+}
+
+/** From here on the eye sees that the line leaves the points. */
+const PLAINLY_OFF = 0.2;
+
+/** Said where one damping ratio does not describe the decay; empty where it does. */
+export function decayDoubt({ fit }: Decay): string {
+  if (fit === null || fit.off < PLAINLY_OFF) return '';
+  const percent = Math.round(100 * fit.off);
+  return `the line leaves the envelope by up to ${percent} %: damping changes with amplitude here, and ζ1 is one value for all of it`;
 }

@@ -1,4 +1,4 @@
-import type { Measured } from '#core/contract/measure.ts';
+import { isLowerBound, type Measured } from '#core/contract/measure.ts';
 import type { Micros } from '#core/contract/time.ts';
 import { DIGITS, fixed } from '../format.ts';
 import { dateIn } from '../time.ts';
@@ -25,16 +25,22 @@ export function withUnit(value: number, { unit, digits, factor }: Kind): string 
   return `${fixed(value * factor, digits)}${unit ? `\u00a0${unit}` : ''}`;
 }
 
+/** A measured value in print; a lower bound says so. `≥ 2.03 m/s²` */
+export function valueText(measured: Measured, kind: Kind): string {
+  if (measured.value === null) return 'not measurable';
+  return `${isLowerBound(measured) ? '≥\u00a0' : ''}${withUnit(measured.value, kind)}`;
+}
+
 /**
- * Half the 95 % interval: 1.96 standard errors, the normal law's. Where it would round to zero it gets the one digit
- * it needs; empty where no error can be given.
+ * Half the 95 % interval: 1.96 standard errors, the normal law's, to the place of its value's last digit and never finer
+ * (JCGM 100:2008, 7.2.6); what is less than that digit is rounded up to it. Empty where no error can be given, as for a
+ * lower bound.
  */
 export function uncertainty(measured: Measured, { digits, factor }: Kind): string {
-  if (measured.value === null || measured.standardError === null) return '';
+  if (measured.value === null || measured.standardError === null || isLowerBound(measured)) return '';
   const half = 1.96 * measured.standardError * factor;
   if (half === 0) return '';
-  const text = half.toFixed(digits);
-  return `± ${Number(text) === 0 ? half.toPrecision(1) : text}`;
+  return `± ${Math.max(half, 10 ** -digits).toFixed(digits)}`;
 }
 
 /** `Tue 4 Nov`, for lists whose year is plain. */

@@ -1,4 +1,5 @@
 import { bridgeLengthM, chainageKmAt, type BridgeDefinition } from '#core/contract/bridge.ts';
+import { isLowerBound } from '#core/contract/measure.ts';
 import type { Passage } from '#core/contract/passage.ts';
 import { LIMIT_NAMES } from './alarm-words.ts';
 import { chainage, fixed, speed } from '../format.ts';
@@ -44,6 +45,7 @@ export function verdictOf(passage: Passage): string {
   const { measured, severity, limit } = passage.peak;
   if (measured.value === null) return `Peak deck acceleration not measurable: ${measured.reason}`;
   if (severity !== null) return `Above the ${LIMIT_NAMES[severity]}`;
+  if (isLowerBound(measured)) return 'Not known to be below the limits: the peak is a lower bound';
   return passage.peak.ofGravest === null && limit === null ? 'No limit holds here' : 'Below all limits';
 }
 

@@ -11,7 +11,7 @@ import {
   subjectOf,
   valueOf,
 } from '../../client/charts/alarm-words.ts';
-import { KINDS, uncertainty, withUnit } from '../../client/charts/figure.ts';
+import { KINDS, uncertainty, valueText, withUnit } from '../../client/charts/figure.ts';
 import { timeOf, titleOf, towards, verdictOf } from '../../client/charts/passage-words.ts';
 import { csvOf } from '../../client/charts/table.ts';
 import { trustOf } from '../../client/charts/trust.ts';
@@ -58,8 +58,17 @@ describe('a measured value in print', () => {
     expect(uncertainty(measured(0.0132, 0.0009), KINDS.damping)).toBe('± 0.2');
   });
 
-  it('never prints an uncertainty of zero: a small one gets the digit it needs', () => {
-    expect(uncertainty(measured(5.1, 0.001), KINDS.frequency)).toBe('± 0.002');
+  it('has an uncertainty to the place of its own last digit: a smaller one is rounded up to that, never to zero', () => {
+    expect(uncertainty(measured(5.1, 0.001), KINDS.frequency)).toBe('± 0.01');
+    expect(uncertainty(measured(5.1, 0.02), KINDS.frequency)).toBe('± 0.04');
+  });
+
+  it('that is a lower bound says so, and has no uncertainty', () => {
+    const bound = measured(2.03, 0.01, 'poor', 'lower bound: samples are missing while the train was there');
+    expect(valueText(bound, KINDS.acceleration)).toBe('≥\u00a02.03\u00a0m/s²');
+    expect(uncertainty(bound, KINDS.acceleration)).toBe('');
+    expect(valueText(measured(2.03, 0.01), KINDS.acceleration)).toBe('2.03\u00a0m/s²');
+    expect(valueText(notMeasurable('too short'), KINDS.acceleration)).toBe('not measurable');
   });
 
   it('says nothing where no error can be given, and nothing is measured', () => {
@@ -99,6 +108,8 @@ describe('a passage in words', () => {
     const passage = passageOf({});
     expect(verdictOf(passage)).toBe('Below all limits');
     expect(verdictOf({ ...passage, peak: { ...passage.peak, ofGravest: null } })).toBe('No limit holds here');
+    const bound = measured(1.1, null, 'poor', 'lower bound: the recording stops 0.02 s after the last axle');
+    expect(verdictOf({ ...passage, peak: { ...passage.peak, measured: bound } })).toMatch(/^Not known to be below/);
     const blind = { ...passage.peak, measured: notMeasurable('all deck channels are dead') };
     expect(verdictOf({ ...passage, peak: blind })).toContain('not measurable: all deck channels are dead');
   });
