@@ -1,9 +1,10 @@
+import type { PassageView } from '#core/contract/api.ts';
 import { bridgeLengthM, chainageKmAt, type BridgeDefinition } from '#core/contract/bridge.ts';
 import { isLowerBound } from '#core/contract/measure.ts';
 import type { Passage } from '#core/contract/passage.ts';
 import { LIMIT_NAMES } from './alarm-words.ts';
 import { chainage, fixed, speed } from '../format.ts';
-import { clockIn, dateIn, offsetIn } from '../time.ts';
+import { clockIn, dateIn, minuteIn, offsetIn } from '../time.ts';
 
 /** Whether a train was recognised, or only a level passed. */
 export function isTrain({ phases }: Passage): boolean {
@@ -64,4 +65,34 @@ export function phaseWords({ phases }: Passage): string {
 export function rateWords(passage: Passage): string {
   const rates = [...new Set(passage.channels.map(({ rateHz }) => rateHz))].toSorted((a, b) => b - a);
   return rates.map((rate) => `${fixed(rate, Number.isInteger(rate) ? 0 : 2)} Hz`).join(', ');
+}
+
+/** `an earlier passage` or `a later passage`, seen from `here`. */
+export function orderWords(here: Passage, other: Passage): string {
+  return other.phases.onMicros <= here.phases.onMicros ? 'an earlier passage' : 'a later passage';
+}
+
+/** A passage among others, in one line: `4 Nov 2025, 07:46; 32 axles, 44.3 m/s`. */
+export function shortWords(passage: Passage, zone: string): string {
+  const at = passage.phases.onMicros;
+  return `${dateIn(at, zone).replace(/^\w+ /, '')}, ${minuteIn(at, zone)}; ${titleOf(passage)}`;
+}
+
+/** What makes two passages unlike, so that their difference need not be the bridge's; empty where they are alike. */
+export function unlikeWords(here: PassageView, other: PassageView): string[] {
+  const [a, b] = [here.passage, other.passage];
+  const directions = [a.direction, b.direction].every((direction) => direction !== null);
+  const known = a.axleCount.value !== null && b.axleCount.value !== null;
+  return [
+    ...(a.bridge === b.bridge ? [] : [`it crossed another bridge, ${other.definition.name}`]),
+    ...(directions && a.direction !== b.direction ? ['it went the other way'] : []),
+    ...(known && a.axleCount.value !== b.axleCount.value ? ['it had another number of axles'] : []),
+    ...(isTrain(a) && isTrain(b) ? [] : ['not both were recognised as trains']),
+    ...(a.provenance.definitionVersion === b.provenance.definitionVersion || a.bridge !== b.bridge
+      ? []
+      : [`it was computed with definition ${b.provenance.definitionVersion}`]),
+    ...(a.provenance.ruleVersion === b.provenance.ruleVersion
+      ? []
+      : [`it was computed with rules ${b.provenance.ruleVersion}`]),
+  ];
 }

@@ -2,6 +2,7 @@ import { describe, expect, it } from 'vitest';
 import type { Alarm } from '#core/contract/alarm.ts';
 import type { PassageView } from '#core/contract/api.ts';
 import { measured, notMeasurable } from '#core/contract/measure.ts';
+import type { Passage } from '#core/contract/passage.ts';
 import {
   againstLimit,
   delayWords,
@@ -12,7 +13,7 @@ import {
   valueOf,
 } from '../../client/charts/alarm-words.ts';
 import { KINDS, uncertainty, valueText, withUnit } from '../../client/charts/figure.ts';
-import { timeOf, titleOf, towards, verdictOf } from '../../client/charts/passage-words.ts';
+import { orderWords, timeOf, titleOf, towards, unlikeWords, verdictOf } from '../../client/charts/passage-words.ts';
 import { csvOf } from '../../client/charts/table.ts';
 import { trustOf } from '../../client/charts/trust.ts';
 import { bridge, passageOf } from './passage.ts';
@@ -112,6 +113,44 @@ describe('a passage in words', () => {
     expect(verdictOf({ ...passage, peak: { ...passage.peak, measured: bound } })).toMatch(/^Not known to be below/);
     const blind = { ...passage.peak, measured: notMeasurable('all deck channels are dead') };
     expect(verdictOf({ ...passage, peak: blind })).toContain('not measurable: all deck channels are dead');
+  });
+});
+
+describe('two passages that are compared', () => {
+  const viewOf = (passage: Passage): PassageView => ({
+    passage,
+    definition: bridge,
+    hasWaveform: true,
+    earlier: null,
+    later: null,
+    alike: [],
+    alarms: [],
+  });
+
+  it('say which came first, whatever was opened first', () => {
+    const here = passageOf({});
+    const later = { ...here, phases: { ...here.phases, onMicros: here.phases.onMicros + 1 } };
+    expect(orderWords(here, later)).toBe('a later passage');
+    expect(orderWords(later, here)).toBe('an earlier passage');
+  });
+
+  it('say what makes them unlike, and nothing where they are alike', () => {
+    const here = passageOf({ speedMs: 44.26 });
+    expect(unlikeWords(viewOf(here), viewOf(passageOf({ speedMs: 40 })))).toEqual([]);
+    const other: Passage = {
+      ...here,
+      bridge: 'other',
+      direction: here.direction === 'rising' ? 'falling' : 'rising',
+      axleCount: measured(99, 0),
+      provenance: { ...here.provenance, ruleVersion: 'older' },
+    };
+    const words = unlikeWords(viewOf(here), { ...viewOf(other), definition: { ...bridge, name: 'Other Bridge' } });
+    expect(words).toEqual([
+      'it crossed another bridge, Other Bridge',
+      'it went the other way',
+      'it had another number of axles',
+      'it was computed with rules older',
+    ]);
   });
 });
 
