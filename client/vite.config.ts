@@ -6,8 +6,10 @@ const SERVER = 'http://127.0.0.1:8600';
 
 export default defineConfig({
   root: import.meta.dirname,
-  // Short names of scoped classes: they stand in every line of the templates.
-  plugins: [svelte({ compilerOptions: { cssHash: ({ hash, css }) => `s${hash(css).slice(0, 4)}` } })],
+  // Small pages: short names of scoped classes, which stand in every line of the templates, and templates as trees.
+  plugins: [
+    svelte({ compilerOptions: { fragments: 'tree', cssHash: ({ hash, css }) => `s${hash(css).slice(0, 4)}` } }),
+  ],
   build: {
     outDir: 'dist',
     emptyOutDir: true,
@@ -15,6 +17,8 @@ export default defineConfig({
     // Type is never inlined: the page's policy lets fonts and pictures come from its own server only.
     assetsInlineLimit: 0,
     cssCodeSplit: false,
+    // Every browser of the target preloads modules by itself.
+    modulePreload: { polyfill: false },
     rolldownOptions: {
       treeshake: {
         // The contract builds its schemas when it is loaded. The page uses its types and functions, not the schemas.

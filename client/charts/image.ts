@@ -9,8 +9,13 @@ export interface Caption {
 const SCALE = 2;
 const MARGIN = 16;
 const HEAD = 44;
+const FOOT = 18;
 
-/** A canvas with its caption as PNG. */
+/** Where a picture comes from: the page, its address with the bridge or the passage in it, and when it was saved. */
+const origin = (): string =>
+  `${document.title}, ${decodeURI(location.pathname)}; saved ${new Date().toISOString().slice(0, 19).replace('T', ' ')} UTC`;
+
+/** A canvas with its caption, and at its foot where it comes from, as PNG. */
 export async function pngOfCanvas(source: HTMLCanvasElement, caption: Caption): Promise<Blob> {
   const { width, height } = source.getBoundingClientRect();
   return compose(source, source, width, height, caption);
@@ -43,7 +48,7 @@ async function compose(
   const ink = readInk(themed);
   const canvas = document.createElement('canvas');
   canvas.width = Math.round((width + 2 * MARGIN) * SCALE);
-  canvas.height = Math.round((height + 2 * MARGIN + HEAD) * SCALE);
+  canvas.height = Math.round((height + 2 * MARGIN + HEAD + FOOT) * SCALE);
   const context = canvas.getContext('2d');
   if (!context) throw new Error('this browser gives no canvas to draw the picture on');
   context.scale(SCALE, SCALE);
@@ -56,6 +61,8 @@ async function compose(
   context.font = `13px ${ink.narrow}`;
   context.fillText(finding, MARGIN, MARGIN + 32, width);
   context.drawImage(picture, MARGIN, MARGIN + HEAD, width, height);
+  context.font = `11px ${ink.narrow}`;
+  context.fillText(origin(), MARGIN, MARGIN + HEAD + height + FOOT, width);
   return new Promise((resolve, reject) => {
     canvas.toBlob((blob) => (blob ? resolve(blob) : reject(new Error('the picture could not be saved'))), 'image/png');
   });
