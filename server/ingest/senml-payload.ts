@@ -160,6 +160,9 @@ function toMicros(baseS: number, ownS: number, nowMicros: Micros | null): Micros
   return nowMicros === null ? null : nowMicros + micros;
 }
 
+/** Major types of CBOR (RFC 8949, 3.1) with which a pack of SenML may begin. */
+const ARRAY_OR_TAG: ReadonlySet<number> = new Set([4, 6]);
+
 function isJson(payload: Uint8Array): boolean {
   // Space, tab, line feed, carriage return, [ or {: as CBOR, none of these begins an array of maps.
   return payload.length > 0 && [0x20, 0x09, 0x0a, 0x0d, 0x5b, 0x7b].includes(payload[0]!);
@@ -207,6 +210,10 @@ function jsonDepth(payload: Uint8Array): number {
 }
 
 function parseCbor(payload: Uint8Array): Result<Fields[]> {
+  const first = payload[0];
+  if (first !== undefined && !ARRAY_OR_TAG.has(first >> 5)) {
+    return refuse('MESSAGE_ENCODING', 'begins neither as a JSON array nor as a CBOR array');
+  }
   const decoded = decodeCbor(payload);
   if (!decoded.ok) return decoded;
   const pack = decoded.value;

@@ -4,7 +4,7 @@ import { TypeBoxValidatorCompiler, type TypeBoxTypeProvider } from '@fastify/typ
 import Fastify, { LogController, type FastifyBaseLogger, type FastifyError, type FastifyInstance } from 'fastify';
 import type { AddressInfo } from 'node:net';
 import { Value } from 'typebox/value';
-import { ERRORS, SpanbeatError, type Complaint } from '#core/contract/errors.ts';
+import { SpanbeatError, type Complaint } from '#core/contract/errors.ts';
 import type { TSchema } from 'typebox';
 import type { Backend } from './backend.ts';
 import { answerComplaint, answerError } from './complaint.ts';
@@ -138,7 +138,7 @@ async function listen(app: FastifyInstance, host: string, port: number): Promise
     const code = failure instanceof Error && 'code' in failure ? failure.code : undefined;
     const where = `${host}:${port}`;
     if (code === 'EADDRINUSE') {
-      throw new SpanbeatError({ code: 'PORT_IN_USE', where, detail: ERRORS.PORT_IN_USE.what });
+      throw new SpanbeatError({ code: 'PORT_IN_USE', where, detail: 'the page cannot listen' });
     }
     if (code === 'EACCES' || code === 'EADDRNOTAVAIL' || code === 'ENOTFOUND') {
       throw new SpanbeatError({ code: 'PORT_REFUSED', where, detail: `the system answers ${code}` });

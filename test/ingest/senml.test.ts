@@ -148,6 +148,7 @@ describe('decodeSenml', () => {
     ['CBOR that ends early', EXAMPLE_CBOR.subarray(0, 50), 'MESSAGE_TRUNCATED'],
     ['a CBOR array of text', encode(['a']), 'MESSAGE_SHAPE'],
     ['nothing', new Uint8Array(0), 'MESSAGE_TRUNCATED'],
+    ['plain text', Buffer.from('xx'), 'MESSAGE_ENCODING'],
   ])('refuses a pack with %s', (_what, payload, code) => {
     expect(codeOf(payload)).toBe(code);
   });

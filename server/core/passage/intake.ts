@@ -1,6 +1,7 @@
 import type { ConditionCode } from '../contract/health.ts';
 import type { Micros } from '../contract/time.ts';
 import { MICROS_PER_SECOND, sampleMicros } from '../contract/time.ts';
+import { counted } from '../contract/counted.ts';
 import { createImprint, impress, isKnown, type Imprint } from './imprint.ts';
 import { RULE } from './rule.ts';
 
@@ -127,7 +128,7 @@ function dropKnown(intake: Intake, piece: Piece, samplesBack: number, sink: Inta
   const seconds = (known / intake.rateHz).toFixed(3);
   if (known < piece.samples.length) {
     intake.strays = [];
-    sink.note('overlap', 'happened', piece.startMicros, `${known} samples came twice`);
+    sink.note('overlap', 'happened', piece.startMicros, `${counted(known, 'sample')} came twice`);
     pass(intake, piece.samples, known, sink, false);
   } else if (isKnown(intake.imprint, intake.rateHz, piece.startMicros, piece.samples) === true) {
     intake.strays = [];
@@ -225,7 +226,12 @@ function releaseHeld(intake: Intake, sink: IntakeSink, all: boolean): void {
     const waited = late || intake.held.length > HELD_MOST;
     if (!all && !waited) return;
     const missing = Math.round((first.startMicros - expected) / stepMicros);
-    sink.note('gap', 'happened', expected, `${missing} samples missing (${(missing / intake.rateHz).toFixed(3)} s)`);
+    sink.note(
+      'gap',
+      'happened',
+      expected,
+      `${counted(missing, 'sample')} missing (${(missing / intake.rateHz).toFixed(3)} s)`,
+    );
     intake.held.shift();
     gap = true;
     begin(intake, first, sink);
@@ -270,7 +276,7 @@ function pass(intake: Intake, samples: Float32Array, from: number, sink: IntakeS
       'not a number',
       'happened',
       sampleMicros(intake.anchorMicros!, base, intake.rateHz),
-      `${missing} samples are not numbers`,
+      `${counted(missing, 'sample')} not a number`,
     );
   }
 }
