@@ -297,6 +297,67 @@ describe('what no schema can say is checked too', () => {
   });
 });
 
+describe('a definition with wrong fields', () => {
+  it('is told at once what else is wrong, as far as that does not depend on them', () => {
+    const complaints = complaintsAfter((d) => {
+      const [first, second, third] = d.sensors;
+      Object.assign(d, { chainageKm: 'far', timeZone: 'Europe/Atlantis' });
+      Object.assign(first!, { acrossM: 'left', logger: 'nroth', unit: 'Hz' });
+      Object.assign(second!, { id: third!.id, mount: 'roof' });
+      third!.rateHz = 30;
+      Object.assign(d.limits[0]!, { source: 3, levels: { AL: 3, IL: 2, IAL: 'high' } });
+    });
+    expect(complaints.map((each) => / ([^: ]+: .*)/.exec(each.slice(each.indexOf('bridge.yaml')))?.[1])).toEqual([
+      expect.stringContaining('chainageKm: found "far"'),
+      expect.stringContaining('timeZone: found "Europe/Atlantis"'),
+      expect.stringContaining('sensors[0].logger: no logger "nroth"; did you mean north?'),
+      expect.stringContaining('sensors[0].acrossM: found "left"'),
+      expect.stringContaining('sensors[0].unit: found "Hz", expected a unit of acceleration'),
+      expect.stringContaining('sensors[1].mount: found "roof"'),
+      expect.stringContaining('sensors[2].id: "A3" is also the id of sensors[1]'),
+      expect.stringContaining('sensors[2].rateHz: found 30, expected 67 or more'),
+      expect.stringContaining('limits[0].levels.IL: found 2, expected more than AL (3)'),
+      expect.stringContaining('limits[0].levels.IAL: found "high"'),
+      expect.stringContaining('limits[0].source: found 3'),
+    ]);
+  });
+
+  const whole = aDefinition({
+    spans: [
+      { ...aDefinition().spans[0]!, frequenciesHz: { f1: 5.2, f3: 48 } },
+      { ...aDefinition().spans[0]!, id: 'west', startM: 17.6 },
+    ],
+    loggers: [{ id: 'north', channels: { ch1: 'A1' }, topic: 'site/data' }],
+    limits: [{ ...aDefinition().limits[0]!, spans: ['west'] }],
+  });
+  // At midspan of the span that the limit does not hold for; too slow for it where it did.
+  Object.assign(whole.sensors[0]!, { rateHz: 50, range: [-20, 20] });
+
+  it.each(fieldsOf(whole).map((path) => [fieldName(path), path] as const))(
+    'is not blamed for more than the wrong one: %s',
+    (name, path) => {
+      expect(complaintsOf(stringify(whole))).toEqual([]);
+      const data = structuredClone(whole);
+      const holder = path.slice(0, -1).reduce<unknown>((value, step) => (value as Record<string, unknown>)[step], data);
+      (holder as Record<string, unknown>)[path.at(-1)!] = { wrong: true };
+      const verdict = checkDefinition(data, () => true);
+      const blamed = verdict.ok ? [] : verdict.problems.map((problem) => fieldName(problem.path));
+      expect(blamed).not.toEqual([]);
+      // A field of a choice is told by the choice.
+      expect(blamed.every((field) => field.startsWith(name) || name.startsWith(field))).toBe(true);
+    },
+  );
+});
+
+/** The paths of all fields and entries, from the outside in. */
+function fieldsOf(value: unknown, path: (string | number)[] = []): (string | number)[][] {
+  if (typeof value !== 'object' || value === null) return [];
+  return Object.entries(value).flatMap(([key, inner]) => {
+    const own = [...path, Array.isArray(value) ? Number(key) : key];
+    return [own, ...fieldsOf(inner, own)];
+  });
+}
+
 describe('a file that wants to do harm', () => {
   it('with aliases that unfold without end is refused', () => {
     const levels = Array.from({ length: 30 }, (_, i) => `l${i + 1}: &l${i + 1} [${`*l${i}, `.repeat(9)}*l${i}]`);

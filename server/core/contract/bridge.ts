@@ -168,8 +168,11 @@ export const BridgeDefinition = Type.Object(
 );
 export type BridgeDefinition = Static<typeof BridgeDefinition>;
 
+/** Where a span lies. */
+export type SpanPlace = Pick<Span, 'startM' | 'lengthM'>;
+
 /** Length from the first bearing to the last, m. */
-export function bridgeLengthM(bridge: Pick<BridgeDefinition, 'spans'>): number {
+export function bridgeLengthM(bridge: { spans: readonly SpanPlace[] }): number {
   return Math.max(...bridge.spans.map((span) => span.startM + span.lengthM));
 }
 
@@ -179,13 +182,13 @@ export function chainageKmAt(bridge: Pick<BridgeDefinition, 'spans' | 'chainageK
 }
 
 /** The span a position lies on: the one that contains it, else the nearest. */
-export function spanAt(bridge: Pick<BridgeDefinition, 'spans'>, alongM: number): Span {
-  const distance = (span: Span): number => Math.max(span.startM - alongM, alongM - span.startM - span.lengthM, 0);
+export function spanAt<Place extends SpanPlace>(bridge: { spans: readonly Place[] }, alongM: number): Place {
+  const distance = (span: Place): number => Math.max(span.startM - alongM, alongM - span.startM - span.lengthM, 0);
   return bridge.spans.reduce((best, span) => (distance(span) < distance(best) ? span : best));
 }
 
 /** Whether a sensor measures what the deck-acceleration limits speak of: vertical acceleration of deck or girder. */
-export function isDeckAcceleration(sensor: Sensor): boolean {
+export function isDeckAcceleration(sensor: Partial<Pick<Sensor, 'quantity' | 'mount' | 'direction'>>): boolean {
   return (
     sensor.quantity === 'acceleration' &&
     (sensor.mount === 'deck' || sensor.mount === 'girder') &&
@@ -194,7 +197,7 @@ export function isDeckAcceleration(sensor: Sensor): boolean {
 }
 
 /** Whether each axle leaves one pulse on this sensor. */
-export function countsAxles(sensor: Sensor): boolean {
+export function countsAxles(sensor: Partial<Pick<Sensor, 'quantity' | 'countsAxles'>>): boolean {
   return sensor.quantity === 'axle detector' || sensor.countsAxles === true;
 }
 
