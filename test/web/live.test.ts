@@ -6,7 +6,7 @@ import { afterEach, beforeEach, describe, expect, test } from 'vitest';
 import { WebSocket } from 'ws';
 import type { Complaint } from '#core/contract/errors.ts';
 import { decodeFrame, type Frame } from '#core/contract/frame.ts';
-import { CLOSE, ServerMessage, type ViewerMessage } from '#core/contract/live.ts';
+import { CLOSE, LIVE_VERSION, ServerMessage, type ViewerMessage } from '#core/contract/live.ts';
 import { startWeb, type Web } from '../../server/web/web.ts';
 import { aPassage, anAlarm, DAWN } from '../support/specimen.ts';
 import { fakeBackend } from './fake-backend.ts';
@@ -113,7 +113,7 @@ const second = (index: number, value: number, sensors = ['A1', 'A2', 'A3', 'A4']
 describe('the live socket', () => {
   test('greets with version, run, status and open alarms, then gives a sign of life each second', async () => {
     const one = await greeted();
-    expect(ofType(one, 'hello')[0]).toMatchObject({ version: 1, alarms: [{ severity: 'IL' }] });
+    expect(ofType(one, 'hello')[0]).toMatchObject({ version: LIVE_VERSION, alarms: [{ severity: 'IL' }] });
     await one.until(() => ofType(one, 'status')[0]);
     const other = await greeted();
     expect(ofType(other, 'hello')[0]!.run).toBe(ofType(one, 'hello')[0]!.run);
@@ -223,6 +223,14 @@ describe('the live socket', () => {
     await one.until(() => ofType(one, 'complaint').length === 9);
     expect(web.live.figures().malformed).toBe(9);
     expect(ofType(one, 'complaint').map(({ code }) => code)).toContain('NOT_FOUND');
+    expect(ofType(one, 'complaint').map(({ message }) => message)).toEqual(
+      expect.arrayContaining([
+        expect.stringContaining('type: found nothing, expected "watch" or "unwatch"'),
+        expect.stringContaining('bridge: found nothing, expected a text of at most 64 characters'),
+        expect.stringContaining('columnMicros: found 7, expected 5000 or 10000 or 20000 or 40000 or 80000 or 160000'),
+        expect.stringContaining('pastS: found 61, expected a number, at least 0, at most 60'),
+      ]),
+    );
     for (let i = 0; i < 12; i++) one.socket.send('again');
     expect((await one.closed).code).toBe(1008);
     await greeted();
