@@ -1,7 +1,8 @@
 import { readFile } from 'node:fs/promises';
 import type { BridgeDefinition } from '#core/contract/bridge.ts';
-import { checkDefinition, fieldName } from '#core/contract/definition-check.ts';
+import { checkDefinition } from '#core/contract/definition-check.ts';
 import type { Complaint } from '#core/contract/errors.ts';
+import { fieldName } from '#core/contract/shape.ts';
 import { placed, readYaml } from './yaml-text.ts';
 
 /** A bridge definition with the text it was read from, which the store keeps beside it. */
@@ -31,7 +32,7 @@ export function decodeDefinition(text: string, file: string): DefinitionReading 
     .map(({ code, path, detail, place }) => ({
       code,
       where: placed(file, place),
-      detail: `${fieldName(path)}: ${detail}`,
+      detail: `${fieldName(path, 'the definition')}: ${detail}`,
     }));
   return { ok: false, complaints };
 }

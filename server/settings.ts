@@ -1,8 +1,8 @@
 import { readFile } from 'node:fs/promises';
 import { resolve } from 'node:path';
 import { Type, type Static } from 'typebox';
-import { Value } from 'typebox/value';
 import { accept, refuse, type Result } from '#core/contract/errors.ts';
+import { fieldName, shapeProblems, type ShapeProblem } from '#core/contract/shape.ts';
 import type { RetentionRules } from './history/retention.ts';
 import type { EmbeddedSettings } from './ingest/broker.ts';
 import type { OutsideSettings } from './ingest/client.ts';
@@ -60,15 +60,30 @@ export const GivenSettings = Type.Object(
   {
     data: Type.Optional(Name),
     bridges: Type.Optional(Type.Array(Name, { minItems: 1, maxItems: 1000 })),
-    root: Type.Optional(Type.String({ pattern: '^[^+#/\\s]{1,64}$' })),
+    root: Type.Optional(
+      Type.String({
+        pattern: '^[^+#/\\s]{1,64}$',
+        description: 'one topic level: up to 64 characters, no +, #, / or space',
+      }),
+    ),
     broker: Type.Optional(
       Type.Object(
         {
           /** An outside broker; without it the server runs one of its own on `host` and `port`. */
-          url: Type.Optional(Type.String({ pattern: '^mqtts?://[^\\s/]+$' })),
+          url: Type.Optional(
+            Type.String({
+              pattern: '^mqtts?://[^\\s/]+$',
+              description: 'mqtt:// or mqtts:// with host and port, no path',
+            }),
+          ),
           user: Type.Optional(Name),
           password: Type.Optional(Name),
-          clientId: Type.Optional(Type.String({ pattern: '^[A-Za-z0-9_.-]{1,64}$' })),
+          clientId: Type.Optional(
+            Type.String({
+              pattern: '^[A-Za-z0-9_.-]{1,64}$',
+              description: 'up to 64 letters, digits, dots, dashes or underscores',
+            }),
+          ),
           protocol: Type.Optional(Type.Union([Type.Literal(4), Type.Literal(5)])),
           /** PEM files. */
           ca: Type.Optional(Name),
@@ -85,7 +100,15 @@ export const GivenSettings = Type.Object(
         {
           host: Type.Optional(Name),
           port: Type.Optional(Port),
-          origins: Type.Optional(Type.Array(Type.String({ pattern: '^https?://[^/\\s]+$' }), { maxItems: 32 })),
+          origins: Type.Optional(
+            Type.Array(
+              Type.String({
+                pattern: '^https?://[^/\\s]+$',
+                description: 'http:// or https:// with host and port, no path',
+              }),
+              { maxItems: 32 },
+            ),
+          ),
         },
         { additionalProperties: false },
       ),
@@ -134,6 +157,9 @@ const VARIABLES: Readonly<Record<string, readonly string[]>> = {
   SPANBEAT_PORT: ['web', 'port'],
   SPANBEAT_LOG: ['log'],
 };
+
+/** Settings whose values are not repeated in complaints: an address may hold a password too. */
+const SECRET: ReadonlySet<string> = new Set(['password', 'url']);
 
 export const DEFAULT_WEB = { host: '127.0.0.1', port: 8600 } as const;
 const DEFAULT_DATA = '.spanbeat/data';
@@ -240,7 +266,8 @@ async function readFileSettings(file: string): Promise<Result<GivenSettings>> {
   const given = data ?? {};
   const complaint = complaintOf(given);
   if (complaint === null) return accept(given as GivenSettings);
-  return refuse('SETTINGS_INVALID', `${complaint.field}: ${complaint.detail}`, placed(file, placeOf(complaint.path)));
+  const place = placed(file, placeOf(complaint.path, complaint.atName));
+  return refuse('SETTINGS_INVALID', `${complaint.field}: ${complaint.detail}`, place);
 }
 
 function environmentSettings(environment: Readonly<Record<string, string | undefined>>): GivenSettings {
@@ -256,12 +283,12 @@ function environmentSettings(environment: Readonly<Record<string, string | undef
   return given;
 }
 
-function complaintOf(given: unknown): { field: string; path: string[]; detail: string } | null {
-  if (Value.Check(GivenSettings, given)) return null;
-  const error = Value.Errors(GivenSettings, given)[0];
-  const path = (error?.instancePath ?? '').split('/').slice(1);
-  const more = error?.keyword === 'additionalProperties' ? `: ${error.params.additionalProperties.join(', ')}` : '';
-  return { field: path.join('.') || 'settings', path, detail: `${error?.message ?? 'not as expected'}${more}` };
+function complaintOf(given: unknown): (ShapeProblem & { field: string }) | null {
+  const [first] = shapeProblems(GivenSettings, given).problems;
+  if (first === undefined) return null;
+  const secret = SECRET.has(String(first.path.at(-1)));
+  const detail = secret ? first.detail.replace(/^found .*, expected /, 'expected ') : first.detail;
+  return { ...first, detail, field: fieldName(first.path, 'settings') };
 }
 
 /** Two levels deep, the second over the first. */

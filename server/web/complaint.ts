@@ -1,6 +1,10 @@
-import type { FastifyError, FastifyReply, FastifyRequest } from 'fastify';
+import type { FastifyError, FastifyReply, FastifyRequest, FastifySchemaValidationError } from 'fastify';
+import type { TSchema } from 'typebox';
+import { Compile } from 'typebox/compile';
+import { Value } from 'typebox/value';
 import type { ApiComplaint } from '#core/contract/api.ts';
 import { SpanbeatError, sentence, type Complaint, type ErrorCode } from '#core/contract/errors.ts';
+import { fieldName, shapeProblems } from '#core/contract/shape.ts';
 
 /** HTTP status of a complaint, by code; what is not listed is the server's own trouble. */
 const STATUS: Partial<Record<ErrorCode, number>> = {
@@ -12,6 +16,32 @@ const STATUS: Partial<Record<ErrorCode, number>> = {
   STORE_WRITE: 503,
   DISK_FULL: 503,
 };
+
+/** Longest account of what is wrong in a request. */
+export const LIMIT_DETAIL = 400;
+
+/**
+ * Checks a part of a request against its schema; what does not fit is told by field, what was found and what is allowed.
+ * Text of an address becomes numbers where the schema has such; a body is taken as it is.
+ */
+export function compileCheck({ schema, httpPart = '' }: { schema: TSchema; httpPart?: string }): PartCheck {
+  const shape = Compile(schema);
+  return (given) => {
+    const value = httpPart === 'body' ? given : Value.Convert(schema, given);
+    if (shape.Check(value)) return { value };
+    const error = shapeProblems(schema, value).problems.map(({ path, detail }) => ({
+      keyword: '',
+      instancePath: `/${path.join('/')}`,
+      schemaPath: '',
+      params: {},
+      message: path.length === 0 ? detail : `${fieldName(path, '')}: ${detail}`,
+    }));
+    return { error };
+  };
+}
+
+/** As the web framework wants it. */
+type PartCheck = (given: unknown) => { value: unknown } | { error: FastifySchemaValidationError[] };
 
 /** An answer that is not 2xx, with its status. */
 export function answerComplaint(reply: FastifyReply, complaint: Complaint): FastifyReply {
@@ -43,8 +73,8 @@ export function answerError(
 function complaintOf(error: FastifyError, request: FastifyRequest): Complaint {
   if (error.validation !== undefined) {
     const where = error.validationContext ?? 'request';
-    const detail = error.validation.map(({ instancePath, message }) => `${instancePath} ${message ?? ''}`.trim());
-    return { code: 'REQUEST_INVALID', where, detail: detail.join('; ').slice(0, 400) };
+    const detail = error.validation.map(({ message }) => message).join('; ');
+    return { code: 'REQUEST_INVALID', where, detail: detail.slice(0, LIMIT_DETAIL) };
   }
   if (error.statusCode === 429) return { code: 'REQUESTS_TOO_MANY', detail: error.message };
   const where = `${request.method} ${request.routeOptions.url ?? ''}`;

@@ -6,11 +6,13 @@ import { WebSocketServer, type RawData, type WebSocket } from 'ws';
 import type { Alarm } from '#core/contract/alarm.ts';
 import type { Complaint, ErrorCode } from '#core/contract/errors.ts';
 import type { SensorHealth } from '#core/contract/health.ts';
-import { CLOSE, LIVE_VERSION, ViewerMessage, type ServerMessage } from '#core/contract/live.ts';
+import { CLOSE, LIVE_VERSION, VIEWER_MESSAGES, ViewerMessage, type ServerMessage } from '#core/contract/live.ts';
 import type { Passage } from '#core/contract/passage.ts';
 import type { AxleEvent, LiveSamples, PassageProgress, SpectrumLine } from '#core/contract/pipeline.ts';
+import { showFound } from '#core/contract/schema-words.ts';
+import { fieldName, isMap, shapeProblems } from '#core/contract/shape.ts';
 import type { Backend } from './backend.ts';
-import { bodyOf } from './complaint.ts';
+import { bodyOf, LIMIT_DETAIL } from './complaint.ts';
 import {
   addSamples,
   beginServing,
@@ -183,7 +185,7 @@ export function createLive({ backend, origins, report, pastMicros, limits: given
     }
     const message = binary ? undefined : parsed(data);
     if (!viewerMessage.Check(message)) {
-      misspoke(seat, 'REQUEST_INVALID', 'expected a watch or unwatch message of the contract, in JSON');
+      misspoke(seat, 'REQUEST_INVALID', misunderstood(message));
       return;
     }
     if (message.type === 'watch') watch(seat, message);
@@ -316,6 +318,17 @@ function parsed(data: RawData): unknown {
   } catch {
     return undefined; // no JSON; the caller complains
   }
+}
+
+/** What is wrong in a message from a viewer. */
+function misunderstood(message: unknown): string {
+  if (!isMap(message)) return 'expected a map in JSON text, of type "watch" or "unwatch"';
+  const { type } = message;
+  if (type !== 'watch' && type !== 'unwatch') return `type: found ${showFound(type)}, expected "watch" or "unwatch"`;
+  return shapeProblems(VIEWER_MESSAGES[type], message)
+    .problems.map(({ path, detail }) => `${fieldName(path, type)}: ${detail}`)
+    .join('; ')
+    .slice(0, LIMIT_DETAIL);
 }
 
 /** Answers an upgrade that is not taken, as every other route answers. */

@@ -1,13 +1,13 @@
 import fastifyRateLimit from '@fastify/rate-limit';
 import fastifySwagger from '@fastify/swagger';
-import { TypeBoxValidatorCompiler, type TypeBoxTypeProvider } from '@fastify/type-provider-typebox';
+import type { TypeBoxTypeProvider } from '@fastify/type-provider-typebox';
 import Fastify, { LogController, type FastifyBaseLogger, type FastifyError, type FastifyInstance } from 'fastify';
 import type { AddressInfo } from 'node:net';
 import { Value } from 'typebox/value';
 import { SpanbeatError, type Complaint } from '#core/contract/errors.ts';
 import type { TSchema } from 'typebox';
 import type { Backend } from './backend.ts';
-import { answerComplaint, answerError } from './complaint.ts';
+import { answerComplaint, answerError, compileCheck } from './complaint.ts';
 import { pastColumnMicros } from './envelopes.ts';
 import { createLive, refuse, type Live, type LiveLimits } from './live.ts';
 import { createMetrics } from './metrics.ts';
@@ -86,7 +86,7 @@ async function buildApp(options: WebOptions, live: Live, origins: OriginRule): P
       ? {}
       : { loggerInstance: logger, logController: new LogController({ disableRequestLogging: true }) }),
   }).withTypeProvider<TypeBoxTypeProvider>();
-  app.setValidatorCompiler(TypeBoxValidatorCompiler);
+  app.setValidatorCompiler<TSchema>(compileCheck);
   app.setSerializerCompiler(({ schema, url }) => (answer) => {
     if (checkAnswers) assertAnswer(schema, answer, url);
     return JSON.stringify(answer);

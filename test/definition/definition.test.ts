@@ -3,10 +3,11 @@ import fc from 'fast-check';
 import { describe, expect, it } from 'vitest';
 import { stringify } from 'yaml';
 import type { BridgeDefinition } from '#core/contract/bridge.ts';
-import { checkDefinition, fieldName } from '#core/contract/definition-check.ts';
+import { checkDefinition } from '#core/contract/definition-check.ts';
 import { BridgeDefinition as Schema } from '#core/contract/bridge.ts';
 import { nearestName } from '#core/contract/nearest-name.ts';
 import { describeSchema, schemaAt, showFound } from '#core/contract/schema-words.ts';
+import { fieldName } from '#core/contract/shape.ts';
 import { DEMONSTRATION_FILES } from '../../simulator/demonstration.ts';
 import { decodeDefinition, readDefinition } from '../../server/definition.ts';
 import { YAML_LIMITS } from '../../server/yaml-text.ts';
@@ -333,7 +334,7 @@ describe('a definition with wrong fields', () => {
   // At midspan of the span that the limit does not hold for; too slow for it where it did.
   Object.assign(whole.sensors[0]!, { rateHz: 50, range: [-20, 20] });
 
-  it.each(fieldsOf(whole).map((path) => [fieldName(path), path] as const))(
+  it.each(fieldsOf(whole).map((path) => [fieldName(path, 'the definition'), path] as const))(
     'is not blamed for more than the wrong one: %s',
     (name, path) => {
       expect(complaintsOf(stringify(whole))).toEqual([]);
@@ -341,7 +342,7 @@ describe('a definition with wrong fields', () => {
       const holder = path.slice(0, -1).reduce<unknown>((value, step) => (value as Record<string, unknown>)[step], data);
       (holder as Record<string, unknown>)[path.at(-1)!] = { wrong: true };
       const verdict = checkDefinition(data, () => true);
-      const blamed = verdict.ok ? [] : verdict.problems.map((problem) => fieldName(problem.path));
+      const blamed = verdict.ok ? [] : verdict.problems.map((problem) => fieldName(problem.path, 'the definition'));
       expect(blamed).not.toEqual([]);
       // A field of a choice is told by the choice.
       expect(blamed.every((field) => field.startsWith(name) || name.startsWith(field))).toBe(true);
@@ -472,8 +473,8 @@ describe('words for a schema', () => {
   });
 
   it('name a field by its path', () => {
-    expect(fieldName(['sensors', 2, 'range', 0])).toBe('sensors[2].range[0]');
-    expect(fieldName([])).toBe('the definition');
+    expect(fieldName(['sensors', 2, 'range', 0], 'the definition')).toBe('sensors[2].range[0]');
+    expect(fieldName([], 'the definition')).toBe('the definition');
   });
 });
 

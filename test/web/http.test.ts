@@ -126,6 +126,8 @@ describe('the HTTP interface', () => {
       '/api/bridges/ottermere/definition?version=0',
     ];
     for (const path of paths) await complains(await get(path), 400, 'REQUEST_INVALID');
+    const told = (await (await get('/api/passages?quality=nice')).json()) as { message: string };
+    expect(told.message).toContain('querystring: quality: found "nice", expected "good" or "usable" or "poor"');
     const alarm = `/api/alarms/${backend.openAlarms()[0]!.id}/acknowledge`;
     await complains(await post(alarm, { note: 'without a name' }), 400, 'REQUEST_INVALID');
     await complains(await post(alarm, { by: '', note: '' }), 400, 'REQUEST_INVALID');

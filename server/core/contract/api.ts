@@ -94,8 +94,8 @@ export const DayQuery = Type.Object(
   {
     bridge: Type.String(),
     /** Civil days in the bridge's time zone, `2026-12-01`, both included; at most 400. */
-    from: Type.String({ pattern: '^\\d{4}-\\d{2}-\\d{2}$' }),
-    to: Type.String({ pattern: '^\\d{4}-\\d{2}-\\d{2}$' }),
+    from: Type.String({ pattern: '^\\d{4}-\\d{2}-\\d{2}$', description: 'a day, YYYY-MM-DD' }),
+    to: Type.String({ pattern: '^\\d{4}-\\d{2}-\\d{2}$', description: 'a day, YYYY-MM-DD' }),
   },
   { additionalProperties: false },
 );

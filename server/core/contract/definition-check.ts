@@ -1,10 +1,6 @@
-import type { TSchema } from 'typebox';
-import { Settings } from 'typebox/system';
-import { Value } from 'typebox/value';
 import { BridgeDefinition } from './bridge.ts';
-import { inconsistencies, type DefinitionProblem, type FieldPath, type SoundItem } from './definition-consistency.ts';
-import { nearestName } from './nearest-name.ts';
-import { describeSchema, schemaAt, showFound } from './schema-words.ts';
+import { inconsistencies, type DefinitionProblem, type SoundItem } from './definition-consistency.ts';
+import { isMap, shapeProblems, valueAt, type FieldPath, type ShapeProblem } from './shape.ts';
 
 export type DefinitionVerdict =
   { ok: true; definition: BridgeDefinition } | { ok: false; problems: DefinitionProblem[] };
@@ -25,97 +21,17 @@ const LIMIT_ERRORS = 4 * LIMIT_PROBLEMS;
  * @example checkDefinition({}, () => true) // { ok: false, problems: [… 'chainageKm' is missing …] }
  */
 export function checkDefinition(data: unknown, knownTimeZone: (name: string) => boolean): DefinitionVerdict {
-  const errors = schemaErrors(data);
-  const shape = shapeProblems(errors, data);
-  const known = errors.length < LIMIT_ERRORS;
-  const problems = known ? [...shape, ...inconsistencies(soundParts(data, shape), knownTimeZone)] : shape;
+  const { problems: shape, all } = shapeProblems(BridgeDefinition, data, LIMIT_ERRORS);
+  const wrong = shape.map((problem): DefinitionProblem => ({ code: 'DEFINITION_INVALID', ...problem }));
+  const problems = all ? [...wrong, ...inconsistencies(soundParts(data, shape), knownTimeZone)] : wrong;
   if (problems.length > 0) return { ok: false, problems: problems.slice(0, LIMIT_PROBLEMS) };
   return { ok: true, definition: data as BridgeDefinition };
-}
-
-/** `sensors[2].rateHz`; the root is called so. */
-export function fieldName(path: FieldPath): string {
-  if (path.length === 0) return 'the definition';
-  return path.map((step, at) => (typeof step === 'number' ? `[${step}]` : at === 0 ? step : `.${step}`)).join('');
-}
-
-// the schema
-
-function shapeProblems(errors: ReturnType<typeof schemaErrors>, data: unknown): DefinitionProblem[] {
-  const found = new Map<string, DefinitionProblem>();
-  const note = (problem: DefinitionProblem): void => {
-    const key = JSON.stringify(problem.path);
-    if (!found.has(key)) found.set(key, problem);
-  };
-  for (const error of errors) {
-    // The parts of a choice are told by the choice itself; `boolean` doubles `additionalProperties`.
-    if (error.keyword === 'boolean' || error.schemaPath.includes('/anyOf/')) continue;
-    const path = pointerSteps(error.instancePath, data);
-    const schema = schemaAt(BridgeDefinition, error.schemaPath);
-    if (error.keyword === 'additionalProperties') {
-      for (const name of error.params.additionalProperties) note(unknownField([...path, name], schema));
-    } else if (error.keyword === 'required') {
-      for (const name of error.params.requiredProperties) note(missingField([...path, name], schema));
-    } else {
-      const detail = `found ${showFound(valueAt(data, path))}, expected ${describeSchema(schema)}`;
-      note({ code: 'DEFINITION_INVALID', path, detail });
-    }
-  }
-  return [...found.values()];
-}
-
-/** All errors, where typebox by itself stops at eight. */
-function schemaErrors(data: unknown): ReturnType<typeof Value.Errors> {
-  const before = Settings.Get().maxErrors;
-  Settings.Set({ maxErrors: LIMIT_ERRORS });
-  try {
-    return Value.Errors(BridgeDefinition, data);
-  } finally {
-    Settings.Set({ maxErrors: before });
-  }
-}
-
-function unknownField(path: FieldPath, schema: unknown): DefinitionProblem {
-  const names = Object.keys(propertiesOf(schema));
-  const near = nearestName(String(path.at(-1)), names);
-  const hint = near === null ? `known here are ${names.join(', ')}` : `did you mean ${near}?`;
-  return { code: 'DEFINITION_INVALID', path, detail: `unknown field; ${hint}`, atName: true };
-}
-
-function missingField(path: FieldPath, schema: unknown): DefinitionProblem {
-  const expected = describeSchema(propertiesOf(schema)[String(path.at(-1))]);
-  return { code: 'DEFINITION_INVALID', path, detail: `found nothing, expected ${expected}` };
-}
-
-function propertiesOf(schema: unknown): Record<string, TSchema> {
-  const properties = (schema as { properties?: Record<string, TSchema> } | undefined)?.properties;
-  return properties ?? {};
-}
-
-/** Steps of a JSON pointer (RFC 6901); numbers where the data hold a list. */
-function pointerSteps(pointer: string, data: unknown): (string | number)[] {
-  const steps: (string | number)[] = [];
-  for (const raw of pointer.split('/').slice(1)) {
-    const step = raw.replaceAll('~1', '/').replaceAll('~0', '~');
-    steps.push(Array.isArray(valueAt(data, steps)) ? Number(step) : step);
-  }
-  return steps;
-}
-
-function valueAt(data: unknown, path: FieldPath): unknown {
-  return path.reduce<unknown>(
-    (value, step) =>
-      typeof value === 'object' && value !== null && Object.hasOwn(value, step)
-        ? (value as Record<string | number, unknown>)[step]
-        : undefined,
-    data,
-  );
 }
 
 // what is sound
 
 /** The definition without the fields that the schema found wrong. */
-function soundParts(data: unknown, shape: readonly DefinitionProblem[]): Parameters<typeof inconsistencies>[0] {
+function soundParts(data: unknown, shape: readonly ShapeProblem[]): Parameters<typeof inconsistencies>[0] {
   // What the schema left standing is of the type that the schema gives it.
   const items = <T>(list: string): SoundItem<T>[] => soundItems(valueAt(data, [list]), list, shape);
   const timeZone = valueAt(data, ['timeZone']);
@@ -128,7 +44,7 @@ function soundParts(data: unknown, shape: readonly DefinitionProblem[]): Paramet
   };
 }
 
-function soundItems(entries: unknown, list: string, shape: readonly DefinitionProblem[]): SoundItem<unknown>[] {
+function soundItems(entries: unknown, list: string, shape: readonly ShapeProblem[]): SoundItem<unknown>[] {
   if (!Array.isArray(entries)) return [];
   const own = shape.filter(({ path }) => path[0] === list && path.length > 1);
   return entries.map((entry: unknown, at) => {
@@ -149,6 +65,3 @@ function without(map: Record<string, unknown>, [step, ...rest]: FieldPath): Reco
   const { [step]: inner, ...others } = map;
   return rest.length > 0 && isMap(inner) ? { ...others, [step]: without(inner, rest) } : others;
 }
-
-const isMap = (value: unknown): value is Record<string, unknown> =>
-  typeof value === 'object' && value !== null && !Array.isArray(value);

@@ -3,18 +3,11 @@ import type { Limit, Logger, Sensor, Span, SpanPlace } from './bridge.ts';
 import type { ErrorCode } from './errors.ts';
 import { nearestName } from './nearest-name.ts';
 import { SEVERITIES } from './severity.ts';
+import type { FieldPath, ShapeProblem } from './shape.ts';
 import { unitConversion, unitsOf } from './units.ts';
 
-/** Steps from the root of a definition to a field. */
-export type FieldPath = readonly (string | number)[];
-
-export interface DefinitionProblem {
+export interface DefinitionProblem extends ShapeProblem {
   code: ErrorCode;
-  path: FieldPath;
-  /** What was found, what was expected; without the path. */
-  detail: string;
-  /** True where the problem is a name, not its value: an unknown field. */
-  atName?: boolean;
 }
 
 /** An entry of a list of the definition, with those fields of it that are sound by the schema. */

@@ -5,34 +5,39 @@ import { Passage } from './passage.ts';
 import { SystemStatus } from './status.ts';
 
 /** Version of everything in this file. A client of another version is told so and closed. */
-export const LIVE_VERSION = 1;
+export const LIVE_VERSION = 2;
 
 /** Column widths of the live envelopes that a viewer may ask for, µs. Columns lie on multiples of the width. */
 export const COLUMN_MICROS = [5_000, 10_000, 20_000, 40_000, 80_000, 160_000] as const;
 
+/** Begins to show one bridge, instead of the one before. */
+const Watch = Type.Object(
+  {
+    type: Type.Literal('watch'),
+    bridge: Type.String({ maxLength: 64 }),
+    columnMicros: Type.Union([
+      Type.Literal(5_000),
+      Type.Literal(10_000),
+      Type.Literal(20_000),
+      Type.Literal(40_000),
+      Type.Literal(80_000),
+      Type.Literal(160_000),
+    ]),
+    /** All sensors where absent. */
+    sensors: Type.Optional(Type.Array(Type.String({ maxLength: 64 }), { maxItems: 256 })),
+    /** How much of the past to send first, s. */
+    pastS: Type.Optional(Type.Number({ minimum: 0, maximum: 60 })),
+  },
+  { additionalProperties: false },
+);
+
+const Unwatch = Type.Object({ type: Type.Literal('unwatch') }, { additionalProperties: false });
+
+/** By type. */
+export const VIEWER_MESSAGES = { watch: Watch, unwatch: Unwatch } as const;
+
 /** From the viewer. Anything else is answered with a complaint and counted. */
-export const ViewerMessage = Type.Union([
-  Type.Object(
-    {
-      type: Type.Literal('watch'),
-      bridge: Type.String({ maxLength: 64 }),
-      columnMicros: Type.Union([
-        Type.Literal(5_000),
-        Type.Literal(10_000),
-        Type.Literal(20_000),
-        Type.Literal(40_000),
-        Type.Literal(80_000),
-        Type.Literal(160_000),
-      ]),
-      /** All sensors where absent. */
-      sensors: Type.Optional(Type.Array(Type.String({ maxLength: 64 }), { maxItems: 256 })),
-      /** How much of the past to send first, s. */
-      pastS: Type.Optional(Type.Number({ minimum: 0, maximum: 60 })),
-    },
-    { additionalProperties: false },
-  ),
-  Type.Object({ type: Type.Literal('unwatch') }, { additionalProperties: false }),
-]);
+export const ViewerMessage = Type.Union([Watch, Unwatch]);
 export type ViewerMessage = Static<typeof ViewerMessage>;
 
 const LiveAxle = Type.Object({

@@ -5,6 +5,8 @@ interface SchemaShape {
   const?: unknown;
   anyOf?: SchemaShape[];
   pattern?: string;
+  /** Of a text with a pattern: the pattern in words. */
+  description?: string;
   minimum?: number;
   maximum?: number;
   exclusiveMinimum?: number;
@@ -52,6 +54,8 @@ export function describeSchema(schema: unknown): string {
       return `a list${amount(shape.minItems, shape.maxItems, 'entry', 'entries')}`;
     case 'boolean':
       return 'true or false';
+    case 'null':
+      return 'null';
     case 'object': {
       const names = Object.keys(shape.properties ?? {});
       const least = shape.minProperties === undefined ? '' : `at least ${shape.minProperties} of `;
@@ -79,7 +83,8 @@ function bounds({ minimum, maximum, exclusiveMinimum }: SchemaShape): string[] {
   return words;
 }
 
-function describeText({ pattern, minLength, maxLength }: SchemaShape): string {
+function describeText({ pattern, description, minLength, maxLength }: SchemaShape): string {
+  if (pattern !== undefined && description !== undefined) return description;
   if (pattern === undefined) return `a text${amount(minLength, maxLength, 'character', 'characters')}`;
   const found = PATTERNS.find(({ source }) => source === pattern);
   return found?.words ?? `a text that fits ${pattern}`;
