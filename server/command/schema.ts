@@ -1,6 +1,7 @@
 import { Alarm } from '#core/contract/alarm.ts';
 import * as api from '#core/contract/api.ts';
 import { BridgeDefinition } from '#core/contract/bridge.ts';
+import { ServerMessage, ViewerMessage } from '#core/contract/live.ts';
 import { Passage } from '#core/contract/passage.ts';
 import { EXIT, type Console } from './outcome.ts';
 
@@ -13,6 +14,11 @@ export const SCHEMAS: Readonly<Record<string, () => object>> = {
   alarm: () => ({ $schema: DIALECT, title: 'Alarm of Spanbeat', ...Alarm }),
   // A server tells the whole interface with its routes: /api/openapi.json.
   api: () => ({ $schema: DIALECT, title: 'Bodies and queries of the HTTP interface of Spanbeat', $defs: { ...api } }),
+  live: () => ({
+    $schema: DIALECT,
+    title: 'Messages of the live socket of Spanbeat, /live',
+    $defs: { ViewerMessage, ServerMessage },
+  }),
 };
 
 /** `schema NAME`: prints a JSON Schema. */

@@ -227,7 +227,7 @@ describe('schema', () => {
     expect(Value.Check(schema, { ...definition, spans: [] })).toBe(false);
   });
 
-  it.each(['passage', 'alarm', 'api'])('prints that of %s', async (name) => {
+  it.each(['passage', 'alarm', 'api', 'live'])('prints that of %s', async (name) => {
     const { exit, out } = await run('schema', name);
     expect(exit).toBe(0);
     expect(JSON.parse(out)).toHaveProperty('$schema');
