@@ -1,4 +1,4 @@
-import { axleTracks, bridgeLengthM, type BridgeDefinition, type Sensor } from '../contract/bridge.ts';
+import { axleTracks, bridgeLengthM, countsAxles, type BridgeDefinition, type Sensor } from '../contract/bridge.ts';
 import { measured, notMeasurable, type Measured } from '../contract/measure.ts';
 import type { Axle, Direction } from '../contract/passage.ts';
 import { MICROS_PER_SECOND, type Micros } from '../contract/time.ts';
@@ -43,7 +43,7 @@ export function readAxles(bridge: BridgeDefinition, record: readonly RecordChann
   const certain = seen.filter(({ lonely }) => !lonely);
   const told = certain.some(({ onMicros }) => onMicros !== null) ? certain : seen;
   const [only, other] = told;
-  if (only === undefined) return nothingSeen(record.some(({ axles }) => axles));
+  if (only === undefined) return nothingSeen(whySilent(bridge, record));
   const reading = other === undefined ? only : together(told);
   const doubted = seen.filter((each) => !told.includes(each)).flatMap(({ notes }) => notes);
   return { ...reading, notes: [...reading.notes, ...doubted.map((note) => `${note}: not believed`)] };
@@ -74,7 +74,7 @@ function readTrack(bridge: BridgeDefinition, places: readonly Place[], listeners
   const all = places.flatMap(({ pulses }) => pulses.map(({ micros }) => micros));
   const heardBy = places.filter(({ pulses }) => pulses.length >= TRAIN_AXLES_LEAST).length;
   const nothing = {
-    ...nothingSeen(true),
+    ...nothingSeen(SAW_NOTHING),
     trains: 1,
     firstPulse: Math.min(...all),
     lastPulse: Math.max(...all),
@@ -85,10 +85,20 @@ function readTrack(bridge: BridgeDefinition, places: readonly Place[], listeners
   return { ...pairSensors(nothing, bridge, first, last), lonely: false };
 }
 
-function nothingSeen(sensors: boolean): AxleReading {
+const SAW_NOTHING = 'the axle sensors saw nothing';
+
+/** A recording, and a logger that fails, may lack what the bridge has. */
+function whySilent(bridge: BridgeDefinition, record: readonly RecordChannel[]): string {
+  if (!bridge.sensors.some(countsAxles)) return 'the bridge has no axle sensor';
+  const recorded = record.filter(({ axles }) => axles);
+  if (recorded.length === 0) return 'no samples of the axle sensors';
+  return recorded.every(({ flags }) => flags.includes('flat')) ? 'the axle sensors give no signal' : SAW_NOTHING;
+}
+
+function nothingSeen(reason: string): AxleReading {
   return {
     trains: 0,
-    count: notMeasurable(sensors ? 'the axle sensors saw nothing' : 'the bridge has no axle sensor'),
+    count: notMeasurable(reason),
     axles: [],
     speedMs: notMeasurable('no two axle sensors saw the train'),
     direction: null,

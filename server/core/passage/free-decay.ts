@@ -36,6 +36,7 @@ export function measureFreeDecay(
     zeta1: notMeasurable(reason),
     endMicros,
   });
+  if (startMicros >= toMicros) return none('the record ends with the event: no free decay in it');
   const group = ringingSpan(
     bridge,
     record.filter((channel) => channel.deck && trusted(channel)),

@@ -16,7 +16,7 @@ import { readAxles, type AxleReading } from './axles.ts';
 import { bandOfLimit, canFilter } from './band.ts';
 import { measureFreeDecay } from './free-decay.ts';
 import { noiseSpeed } from './noise-speed.ts';
-import { measureChannel, type CutShort } from './peaks.ts';
+import { eventWords, measureChannel, type CutShort } from './peaks.ts';
 import { findPhases, type FoundPhases, type PassageFrame } from './phases.ts';
 import { arrangeRecord, microsOf, trusted, type RecordChannel } from './record.ts';
 import { noiseSpan, rollingNoise, type RollingNoise } from './rolling-noise.ts';
@@ -47,12 +47,20 @@ export function measurePassage(
   if (found === null) return null;
   const { onMicros, offMicros } = found;
   const cut = frame.cut === null ? null : cutShort(frame.cut, dynamic, axles, found);
-  const measures = dynamic.map((channel) => measureChannel(bridge, channel, onMicros - 200_000, frame.toMicros, cut));
+  const words = eventWords(isTrain(found), frame.whole === true);
+  const measures = dynamic.map((channel) =>
+    measureChannel(bridge, channel, onMicros - 200_000, frame.toMicros, cut, words),
+  );
   const decay = measureFreeDecay(bridge, dynamic, frame.triggerMicros, offMicros, frame.toMicros);
   const speed = speedOf(axles, noise, found);
   const speaking = speakingOf(dynamic, measures);
   const peak = peakOf(bridge, speaking);
-  const notes = [...found.notes, ...axles.notes, ...(cut === null ? [] : [cut]), ...recordNotes(frame, dynamic)];
+  const notes = [
+    ...found.notes,
+    ...axles.notes,
+    ...(cut === null ? [] : [cut]),
+    ...recordNotes(frame, dynamic, isTrain(found)),
+  ];
   const quality = worstOf([
     found.quality,
     ...(peak.measured.value === null ? (['poor'] as const) : [peak.measured.quality]),
@@ -86,10 +94,18 @@ function speedOf(
   noise: RollingNoise | null,
   phases: FoundPhases,
 ): Pick<Passage, 'speedMs' | 'direction'> {
+  if (!isTrain(phases) && axles.speedMs.value === null) {
+    return { speedMs: notMeasurable('no train was recognised'), direction: null };
+  }
   if (axles.speedMs.value !== null || axles.trains > 1 || noise === null) {
     return { speedMs: axles.speedMs, direction: axles.direction };
   }
   return noiseSpeed(noise, phases.onMicros, phases.offMicros);
+}
+
+/** Whether a train was recognised: axles were seen, or wheels were heard. */
+function isTrain({ foundBy }: FoundPhases): boolean {
+  return foundBy === 'axle sensors' || foundBy === 'wheel-rail noise';
 }
 
 /** The bogies of a train are this far apart at most: after so much silence its last axle has passed. */
@@ -198,11 +214,11 @@ function temperatureOf(record: readonly RecordChannel[]): Measured {
 }
 
 /** Said of the window as a whole. */
-function recordNotes(frame: PassageFrame, record: readonly RecordChannel[]): string[] {
+function recordNotes(frame: PassageFrame, record: readonly RecordChannel[], train: boolean): string[] {
   const notes: string[] = [];
   const before = (frame.triggerMicros - frame.fromMicros) / MICROS_PER_SECOND;
   if (before < RULE.beforeSeconds - 0.2 && frame.whole !== true)
-    notes.push(`quiet part of only ${before.toFixed(1)} s before the train`);
+    notes.push(`quiet part of only ${before.toFixed(1)} s before the ${train ? 'train' : 'event'}`);
   const flagged = record.filter(({ flags }) => flags.length > 0);
   for (const { sensor, flags } of flagged) notes.push(`${sensor.id}: ${flags.join(', ')}`);
   for (const { sensor, filled } of record) {

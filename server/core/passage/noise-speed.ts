@@ -40,8 +40,9 @@ export function noiseSpeed(noise: RollingNoise, onMicros: Micros, offMicros: Mic
   const places = noise.channels.map(({ alongM }) => alongM);
   const spreadM = Math.max(...places) - Math.min(...places);
   if (new Set(places).size < 2 || spreadM < 3)
-    return none('no axle sensors, and the deck sensors are too close together');
-  if (places.length < SENSORS_LEAST) return none('no axle sensors, and fewer than three deck sensors to compare');
+    return none('no two axle sensors saw the train, and the deck sensors are too close together');
+  if (places.length < SENSORS_LEAST)
+    return none('no two axle sensors saw the train, and fewer than three deck sensors compare');
   if (offMicros - onMicros < SHORTEST_MICROS) return none('the passage is too short for a speed from noise');
   const traces = tracesOf(noise, onMicros, offMicros);
   const seconds = (traces[0]!.y.length * FRAME_MICROS) / MICROS_PER_SECOND;

@@ -16,6 +16,32 @@ import { RULE } from './rule.ts';
 /** Why every peak of a passage is but a lower bound; null where the whole train was recorded. */
 export type CutShort = string | null;
 
+/** What is said of a channel where something is missing. */
+export interface EventWords {
+  noQuiet: string;
+  noSamples: string;
+  gaps: string;
+}
+
+/** Of a train's passage. */
+const OF_A_TRAIN: EventWords = {
+  noQuiet: 'no quiet part before the train',
+  noSamples: 'no samples between the first axle and the end of the window',
+  gaps: 'samples are missing while the train was there',
+};
+
+/** Of what is not known to be a train; of a recording that is taken as one event, where no quiet part is looked for. */
+export function eventWords(train: boolean, whole: boolean): EventWords {
+  const words: EventWords = train
+    ? OF_A_TRAIN
+    : {
+        noQuiet: 'no quiet part before the event',
+        noSamples: 'no samples of the event',
+        gaps: 'samples are missing during the event',
+      };
+  return whole ? { ...words, noQuiet: 'the whole recording is one event: none of it is taken for quiet' } : words;
+}
+
 /**
  * Measures of one channel between the first axle and the end of the window. Gaps, and what a filter smears of them, are
  * kept out of the search for peaks.
@@ -24,6 +50,7 @@ export type CutShort = string | null;
  * @param fromMicros shortly before the first axle
  * @param toMicros end of the window
  * @param cut said of every peak, which is then poor
+ * @param words said where something is missing
  */
 export function measureChannel(
   bridge: BridgeDefinition,
@@ -31,21 +58,23 @@ export function measureChannel(
   fromMicros: Micros,
   toMicros: Micros,
   cut: CutShort = null,
+  words: EventWords = OF_A_TRAIN,
 ): ChannelMeasures {
   const [from, to] = rangeOf(channel, fromMicros, toMicros);
   const raw = largestOf(channel, channel.x, from, to, RAW_MARGIN);
-  const doubt = doubtOf(channel, cut);
+  const doubt = doubtOf(channel, cut, words);
+  const noSamples = notMeasurable(words.noSamples);
   const measures = {
     sensor: channel.sensor.id,
     rateHz: channel.rateHz,
-    ...noiseAndOffset(channel),
+    ...noiseAndOffset(channel, words),
     flags: channel.flags,
-    rawPeak: raw === null ? NO_SAMPLES : peakValue(raw.value, channel.noise, doubt),
+    rawPeak: raw === null ? noSamples : peakValue(raw.value, channel.noise, doubt),
   };
-  if (raw === null || !channel.deck) return { ...measures, ...notInBand(channel.deck ? NO_SAMPLES : NOT_DECK) };
+  if (raw === null || !channel.deck) return { ...measures, ...notInBand(channel.deck ? noSamples : NOT_DECK) };
   const bands = bandSignals(bridge, channel, from, to);
   const first = bands[0];
-  if (first === undefined) return { ...measures, ...notInBand(NO_SAMPLES) };
+  if (first === undefined) return { ...measures, ...notInBand(noSamples) };
   const inBand = first.signal.subarray(from, to);
   const rms = Math.sqrt(slidingMeanSquareMax(inBand, Math.max(1, Math.round(channel.rateHz))));
   // Noise of a band B wide, over T seconds, moves an r.m.s. by σ/√(2BT) (Bendat and Piersol, Random Data, 8.2).
@@ -64,7 +93,6 @@ export function measureChannel(
 const RAW_MARGIN = 2;
 /** Fewer samples than this show no peak. */
 const SAMPLES_LEAST = 8;
-const NO_SAMPLES = notMeasurable('no samples between the first axle and the end of the window');
 const NOT_DECK = notMeasurable('the band rule is for deck acceleration');
 
 const notInBand = (
@@ -164,18 +192,18 @@ function againstLimit(
 /** Straight lines between so many points a swing of the highest frequency lose 1 % of its height. */
 const POINTS_A_SWING = 20;
 
-function noiseAndOffset(channel: RecordChannel): { offset: Measured; noise: Measured } {
+function noiseAndOffset(channel: RecordChannel, { noQuiet }: EventWords): { offset: Measured; noise: Measured } {
   const { offset, offsetError, noise } = channel;
   if (offset === null || noise === null) {
-    const none = notMeasurable('no quiet part before the train');
+    const none = notMeasurable(noQuiet);
     return { offset: none, noise: none };
   }
   return { offset: measured(offset, offsetError), noise: measured(noise, null) };
 }
 
-function doubtOf(channel: RecordChannel, cut: CutShort): string | undefined {
+function doubtOf(channel: RecordChannel, cut: CutShort, words: EventWords): string | undefined {
   const flags = channel.flags.length > 0 ? `sensor: ${channel.flags.join(', ')}` : undefined;
-  const bound = cut ?? (channel.flags.includes('gap') ? 'samples are missing while the train was there' : undefined);
+  const bound = cut ?? (channel.flags.includes('gap') ? words.gaps : undefined);
   if (bound === undefined) return flags;
   return `${LOWER_BOUND}: ${bound}${flags === undefined ? '' : `; ${flags}`}`;
 }

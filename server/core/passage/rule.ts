@@ -2,7 +2,7 @@
  * The rules by which passages are found and measured, in one place and under one version. A stored passage names the
  * version it was made with; any change here that can change a number needs a new one.
  */
-export const RULE_VERSION = '2026-12-4';
+export const RULE_VERSION = '2026-12-5';
 
 /** Features of the stream are gathered on a fixed grid of event time, so that no split of the samples can matter. */
 export const TICK_MICROS = 100_000;

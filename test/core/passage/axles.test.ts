@@ -115,13 +115,17 @@ describe('axles from two rail gauges', () => {
     expect(reading.notes).toContain('the axle sensors do not agree');
   });
 
-  it('tells apart a bridge without axle sensors and sensors that saw nothing', () => {
+  it('tells apart a bridge without axle sensors, a recording without them, dead ones, and those that saw nothing', () => {
     const noise = samplesOf([], 40, 1, 1);
     expect(read({ S1: noise, S2: samplesOf([], 40, 1, 2) }).count).toMatchObject({
       reason: 'the axle sensors saw nothing',
     });
     const bare = plainBridge({ sensors: plainBridge().sensors.filter(({ quantity }) => quantity === 'acceleration') });
     expect(read({ A1: noise }, bare).count).toMatchObject({ reason: 'the bridge has no axle sensor' });
+    expect(read({ A1: noise }).count).toMatchObject({ reason: 'no samples of the axle sensors' });
+    expect(read({ S1: new Float32Array(noise.length) }).count).toMatchObject({
+      reason: 'the axle sensors give no signal',
+    });
   });
 
   it('takes gauges less than a metre apart for one place', () => {

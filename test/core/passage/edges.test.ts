@@ -170,7 +170,7 @@ describe('what accelerometers alone cannot say', () => {
     const [passage] = passagesOn(bare([10, 10.5]), 60, crossing(20, 'intercity', 35));
     expect(passage!.speedMs).toEqual({
       value: null,
-      reason: 'no axle sensors, and the deck sensors are too close together',
+      reason: 'no two axle sensors saw the train, and the deck sensors are too close together',
     });
   });
 
@@ -342,10 +342,20 @@ describe('a record', () => {
     const [, a2, s1] = passage.channels;
     expect(a2!.rawPeak).toEqual({
       value: null,
-      reason: 'no samples between the first axle and the end of the window',
+      reason: 'no samples of the event',
     });
     expect(s1!.bandPeak).toEqual({ value: null, reason: 'the band rule is for deck acceleration' });
     expect(passage.temperatureC).toEqual({ value: null, reason: 'no temperature sample near the passage' });
+    // Nobody knows of a train, nor which part is quiet, nor where it would ring off.
+    expect(passage.phases.foundBy).toBe('given');
+    expect(passage.speedMs).toEqual({ value: null, reason: 'no train was recognised' });
+    expect(passage.f1Hz).toEqual({ value: null, reason: 'the record ends with the event: no free decay in it' });
+    expect(passage.channels.map(({ noise }) => noise)).toEqual(
+      passage.channels.map(() => ({
+        value: null,
+        reason: 'the whole recording is one event: none of it is taken for quiet',
+      })),
+    );
   });
 });
 
