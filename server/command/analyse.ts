@@ -8,7 +8,7 @@ import { openRecording } from '../exchange/opening.ts';
 import { joinRecordings, type Recording } from '../exchange/recording.ts';
 import { definitionFile } from './definition-file.ts';
 import { complain, complainOf, EXIT, type Console } from './outcome.ts';
-import { tableHeader, tableRow } from './passage-table.ts';
+import { tableHeader, tableRow, timeText } from './passage-table.ts';
 import { gatherWhole } from './whole.ts';
 
 export interface AnalyseSettings {
@@ -35,7 +35,7 @@ export async function analyse(files: readonly string[], settings: AnalyseSetting
   const recordings: Recording[] = [];
   try {
     for (const file of files) recordings.push(await openRecording(file, given, settings));
-    const count = await print(analysed(recordings, given, settings), settings.format, console);
+    const count = await print(analysed(recordings, given, settings), given, settings.format, console);
     if (count === 0) console.err('note: no passage was found; --whole measures the recording as one event\n');
   } catch (error) {
     return complainOf(error, console);
@@ -99,6 +99,7 @@ async function* again(
 
 async function print(
   found: AsyncIterable<Passage>,
+  given: BridgeDefinition,
   format: AnalyseSettings['format'],
   console: Console,
 ): Promise<number> {
@@ -106,7 +107,25 @@ async function print(
   for await (const passage of found) {
     if (format === 'table' && count === 0) await console.out(tableHeader());
     await console.out(format === 'table' ? tableRow(passage) : `${JSON.stringify(passage)}\n`);
+    if (passage.phases.foundBy === 'live level') console.err(`note: ${withoutTrain(passage, given)}\n`);
     count++;
   }
   return count;
+}
+
+/** A level was passed and no train was recognised: when, on which sensor, how far, and what to do. */
+function withoutTrain({ id, peak, channels }: Passage, { limits }: BridgeDefinition): string {
+  const { measured, sensor, micros, limit, severity } = peak;
+  const what = 'no train was recognised, but the deck passed a level';
+  const more = '--whole measures the recording as one event';
+  if (severity === null || micros === null || measured.value === null) {
+    return `${id}: ${what} in the live signal; the record stays below; ${more}`;
+  }
+  const level = limits.find((one) => one.id === limit)?.levels[severity];
+  const others = channels
+    .filter((channel) => channel.sensor !== sensor && channel.limits.some((said) => said.severity !== null))
+    .map((channel) => channel.sensor);
+  const also = others.length === 0 ? '' : `; ${others.join(', ')} too`;
+  const value = `${measured.value.toFixed(2)} m/s² on ${sensor} at ${timeText(micros)} UTC`;
+  return `${id}: ${what}: ${value}, above ${severity} of limit ${limit} (${level} m/s²)${also}; ${more}`;
 }

@@ -15,7 +15,7 @@ const NOT_MEASURABLE = '–';
 const COLUMNS: readonly TableColumn[] = [
   { title: 'passage', width: 34, left: true, text: ({ id }) => id },
   { title: 'first axle (UTC)', width: 21, left: true, text: ({ phases }) => timeText(phases.onMicros) },
-  { title: 'direction', width: 9, left: true, text: ({ direction }) => direction ?? NOT_MEASURABLE },
+  { title: 'direction', width: 9, left: true, text: (passage) => directionText(passage) },
   { title: 'speed [km/h]', width: 12, text: ({ speedMs }) => valueText(speedMs, 1, 3.6) },
   { title: 'axles', width: 5, text: ({ axleCount }) => valueText(axleCount, 0) },
   { title: 'peak [m/s²]', width: 11, text: ({ peak }) => valueText(peak.measured, 2) },
@@ -46,7 +46,13 @@ function valueText(measured: Measured, decimals: number, factor = 1): string {
   return measured.value === null ? NOT_MEASURABLE : (measured.value * factor).toFixed(decimals);
 }
 
-function timeText(micros: Micros): string {
+function directionText({ direction, phases: { foundBy } }: Passage): string {
+  if (foundBy === 'live level' || foundBy === 'given') return 'no train';
+  return direction ?? NOT_MEASURABLE;
+}
+
+/** To the tenth of a second, UTC. */
+export function timeText(micros: Micros): string {
   const tenths = Math.floor(micros / (MICROS_PER_SECOND / 10));
   const { year, month, day, hour, minute, second } = civilTime(Math.floor(tenths / 10));
   const two = (value: number): string => String(value).padStart(2, '0');

@@ -163,6 +163,7 @@ function addAnalyse(program: Command, console: Console, set: SetExit): void {
 A text recording has a header, a column called time, and one column a sensor, named by its id or as its logger names it
 (loggers.channels). Tab, semicolon or comma; with the first two a decimal comma is taken. Time: seconds, Unix epoch in s,
 ms, µs or ns, or ISO 8601 (UTC unless it says otherwise). "A1 [g]" holds values in g; "A1" holds what the logger sent.
+A level that is passed without a train is printed too, its phases found by "live level", and said on standard error.
 A wave form out of the archive (Parquet) is measured in its own window: the same definition gives the same bits.`,
     )
     .action(async (files: string[], options: AnalyseOptions) => {

@@ -2,6 +2,7 @@ import { open, writeFile } from 'node:fs/promises';
 import { setTimeout as sleep } from 'node:timers/promises';
 import type { SampleBlock } from '#core/contract/block.ts';
 import { bridgeLengthM, type BridgeDefinition } from '#core/contract/bridge.ts';
+import { counted } from '#core/contract/counted.ts';
 import { csvHeader, csvRows } from '#core/contract/csv-text.ts';
 import { SpanbeatError, type Complaint } from '#core/contract/errors.ts';
 import { MICROS_PER_SECOND, sampleMicros, type Micros } from '#core/contract/time.ts';
@@ -280,7 +281,7 @@ async function writeTruth(
   } catch (error) {
     throw unwritable(file, error);
   }
-  console.err(`note: the truth of ${truths.length} passages is in ${file}\n`);
+  console.err(`note: the truth of ${counted(truths.length, 'passage')} is in ${file}\n`);
 }
 
 function unwritable(file: string, error: unknown): SpanbeatError {

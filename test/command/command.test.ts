@@ -24,6 +24,7 @@ import { createLoggers } from '../../simulator/logger.ts';
 import { bridgeParameters } from '../../simulator/parameters.ts';
 import { createBridgeSimulation } from '../../simulator/simulation.ts';
 import { createTrain } from '../../simulator/train.ts';
+import { createRandom } from '../support/random.ts';
 import { aDefinition, DAWN } from '../support/specimen.ts';
 
 let folder = '';
@@ -123,6 +124,28 @@ describe('analyse', () => {
     expect(first).toMatch(/ 159\.[89] +32 | 160\.0 +32 /);
     expect(second).toMatch(/ (89\.9|90\.[01]) +4 /);
     expect(head?.indexOf('quality')).toBe(first?.search(/(good|usable|poor)$/));
+  });
+
+  it('tells of a level that is passed without a train: when, where, how far, and what to do', async () => {
+    const random = createRandom(5);
+    // A blow that rings off at 5.2 Hz in a minute of noise: 6 m/s², where IAL is 3.5.
+    const lines = Array.from({ length: 30_000 }, (_, i) => {
+      const sinceS = i / 500 - 30;
+      const ring = sinceS < 0 ? 0 : 6 * Math.exp(-0.8 * sinceS) * Math.sin(2 * Math.PI * 5.2 * sinceS);
+      const noise = (): number => random.uniform(-0.01, 0.01);
+      return [DAWN + i * 2000, ring + noise(), 0.1 * ring + noise()].join(',');
+    });
+    await writeFile(path('blow.csv'), `time,A3,A4\n${lines.join('\n')}\n`);
+    const { exit, out, err } = await run('analyse', path('blow.csv'), '--bridge', 'ottermere');
+    expect(exit).toBe(0);
+    const [passage, ...rest] = passagesOf(out);
+    expect(rest).toEqual([]);
+    expect(passage?.phases.foundBy).toBe('live level');
+    expect(err).toMatch(
+      /^note: ottermere-\S+: no train was recognised, but the deck passed a level: 5\.\d\d m\/s² on A3 at 2026-12-01 05:13:03\.\d UTC, above IAL of limit deck \(3\.5 m\/s²\); --whole measures the recording as one event\n$/m,
+    );
+    const table = await run('analyse', path('blow.csv'), '--bridge', 'ottermere', '--format', 'table');
+    expect(table.out.split('\n')[1]).toContain('no train');
   });
 
   it('measures the whole recording as one event where it is told to', async () => {
@@ -332,7 +355,7 @@ describe('simulate', () => {
     await new Promise<void>((resolve) => aedes.close(() => resolve()));
     await new Promise<void>((resolve) => server.close(() => resolve()));
     expect(exit).toBe(0);
-    expect(err).toContain('the truth of 1 passages');
+    expect(err).toContain('the truth of 1 passage is in');
     const samples = received
       .filter(({ topic }) => topic === 'site/fennick/FE-1/samples')
       .map(({ payload }) => decodeSamples(payload));
