@@ -39,6 +39,15 @@ export function levelsOf(alarm: Alarm, definition: BridgeDefinition | undefined)
   return definition?.limits.find(({ id }) => id === alarm.rule)?.levels;
 }
 
+/** The sensor whose value is told: that of the record once it is known, else the one that told live. */
+export function sensorOf(alarm: Alarm): string | null {
+  if (alarm.recordValue === null) return alarm.sensor;
+  const judged = alarm.steps.findLast(({ what, sensor }) => sensor !== null && JUDGED.has(what));
+  return judged?.sensor ?? alarm.sensor;
+}
+
+const JUDGED: ReadonlySet<string> = new Set(['confirmed', 'corrected']);
+
 /** The value that counts: the record's where it is known, else the live one. */
 export const valueOf = (alarm: Alarm): number | null => alarm.recordValue ?? alarm.liveValue;
 

@@ -2,6 +2,7 @@ import type { Alarm } from '#core/contract/alarm.ts';
 import type { PassageView } from '#core/contract/api.ts';
 import { isDeckAcceleration, spanAt } from '#core/contract/bridge.ts';
 import { fixed } from '../format.ts';
+import { sensorOf } from './alarm-words.ts';
 
 /** Whether the sensor that raised an alarm is to be believed, and why. */
 export interface Trust {
@@ -29,8 +30,8 @@ export function trustOf(alarm: Alarm, view: PassageView | null): Trust {
 }
 
 function fromPassage(alarm: Alarm, { passage, definition }: PassageView): Trust['reasons'] {
-  const channel = passage.channels.find(({ sensor }) => sensor === alarm.sensor);
-  const sensor = definition.sensors.find(({ id }) => id === alarm.sensor);
+  const channel = passage.channels.find(({ sensor }) => sensor === sensorOf(alarm));
+  const sensor = definition.sensors.find(({ id }) => id === sensorOf(alarm));
   if (!channel || !sensor) return [{ good: false, words: 'the passage holds no measures of this sensor' }];
   const reasons: Trust['reasons'] = [];
 

@@ -8,6 +8,7 @@ import {
   delayWords,
   needsAnswer,
   recordWords,
+  sensorOf,
   stepWords,
   subjectOf,
   valueOf,
@@ -155,6 +156,14 @@ describe('two passages that are compared', () => {
 });
 
 describe('an alarm in words', () => {
+  it('names the sensor whose value it tells: of the record once that is known', () => {
+    const step = { micros: 1, takenMicros: 1, severity: null, value: 2.9, by: null, note: null };
+    const judged = alarm({ sensor: 'A4', recordValue: 2.9, steps: [{ ...step, what: 'confirmed', sensor: 'A3' }] });
+    expect(sensorOf(judged)).toBe('A3');
+    expect(sensorOf({ ...judged, recordValue: null })).toBe('A4');
+    expect(sensorOf(alarm({ sensor: 'A4', recordValue: 2.9, steps: [] }))).toBe('A4');
+  });
+
   it('is told by the value of the record once that is known', () => {
     expect(valueOf(alarm())).toBe(2.85);
     expect(valueOf(alarm({ recordValue: 2.92 }))).toBe(2.92);
