@@ -1,6 +1,7 @@
 import { readFileSync } from 'node:fs';
 import { join } from 'node:path';
 import type { Alarm } from '#core/contract/alarm.ts';
+import { counted } from '#core/contract/counted.ts';
 import { SpanbeatError } from '#core/contract/errors.ts';
 import type { PassageWindow, PipelineOutput } from '#core/contract/pipeline.ts';
 import { MICROS_PER_SECOND, type Micros } from '#core/contract/time.ts';
@@ -323,7 +324,8 @@ function startTimers(
   const thin = async (): Promise<void> => {
     try {
       const { dropped, bytes, more } = await history.applyRetention({ ...RETENTION, ...retention }, clock());
-      if (dropped > 0) log.logger.info(`retention thinned ${dropped} wave forms, ${(bytes / 1e6).toFixed(1)} MB`);
+      if (dropped > 0)
+        log.logger.info(`retention thinned ${counted(dropped, 'wave form')}, ${(bytes / 1e6).toFixed(1)} MB`);
       thinning = setTimeout(() => void thin(), more ? TICK_MS : RETENTION_MS.then);
     } catch (failure) {
       report({ code: 'STORE_WRITE', where: 'retention', detail: String(failure) });

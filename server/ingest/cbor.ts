@@ -1,3 +1,4 @@
+import { counted } from '#core/contract/counted.ts';
 import { accept, refuse, type ErrorCode, type Result } from '#core/contract/errors.ts';
 
 /**
@@ -47,7 +48,9 @@ export function decodeCbor(message: Uint8Array): Result<Cbor> {
   try {
     const value = readItem(reader, 0);
     const left = message.length - reader.at;
-    return left === 0 ? accept(value) : refuse('MESSAGE_ENCODING', `${left} bytes follow the end of the CBOR item`);
+    return left === 0
+      ? accept(value)
+      : refuse('MESSAGE_ENCODING', `${counted(left, 'byte')} after the end of the CBOR item`);
   } catch (fault) {
     if (fault instanceof CborFault) return refuse(fault.code, fault.message);
     throw fault;
@@ -134,7 +137,10 @@ function readLength(reader: Reader, info: number, unitBytes: number): number {
   const length = readArgument(reader, info);
   const room = reader.bytes.length - reader.at;
   if (length > room / unitBytes) {
-    throw new CborFault('MESSAGE_TRUNCATED', `length ${length} at byte ${reader.at}, where ${room} bytes are left`);
+    throw new CborFault(
+      'MESSAGE_TRUNCATED',
+      `length ${length} at byte ${reader.at}, with ${counted(room, 'byte')} left`,
+    );
   }
   return Number(length);
 }

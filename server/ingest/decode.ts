@@ -1,5 +1,6 @@
 import { BLOCK_LIMITS, type ChannelSamples, type SampleBlock } from '#core/contract/block.ts';
 import type { BridgeDefinition, Logger, Sensor } from '#core/contract/bridge.ts';
+import { counted } from '#core/contract/counted.ts';
 import { accept, refuse, type Complaint, type ErrorCode, type Result } from '#core/contract/errors.ts';
 import { EARLIEST_MICROS, LATEST_MICROS, MICROS_PER_SECOND, sampleMicros, type Micros } from '#core/contract/time.ts';
 import { decodeSamples } from './samples-payload.ts';
@@ -160,7 +161,7 @@ function countGaps(channels: readonly TimedChannel[], complaints: ComplaintList)
       gaps += 1;
     }
     if (gaps > 0) {
-      const detail = `${gaps} of ${samples.length} values are not finite`;
+      const detail = `${gaps} of ${counted(samples.length, 'value')} not finite`;
       complaints.add({ code: 'VALUE_NOT_FINITE', where: sensor, detail });
     }
   }

@@ -1,4 +1,5 @@
 import { join } from 'node:path';
+import { counted } from '#core/contract/counted.ts';
 import { SpanbeatError, type ErrorCode } from '#core/contract/errors.ts';
 import { MICROS_PER_SECOND, type Micros } from '#core/contract/time.ts';
 import type { Report } from '../report.ts';
@@ -383,7 +384,7 @@ async function cutTail(path: string, files: JournalFiles, report: Report): Promi
       report({
         code: 'JOURNAL_TAIL',
         where: path,
-        detail: `${found.end - found.at} bytes after byte ${found.at} cut off`,
+        detail: `${counted(found.end - found.at, 'byte')} after byte ${found.at} cut off`,
       });
       return found.at;
     }

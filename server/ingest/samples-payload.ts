@@ -1,4 +1,5 @@
 import { BLOCK_LIMITS } from '#core/contract/block.ts';
+import { counted } from '#core/contract/counted.ts';
 import { accept, refuse, type Complaint, type Result } from '#core/contract/errors.ts';
 import type { Micros } from '#core/contract/time.ts';
 import { decodeCbor, isTypedNumbers, type Cbor, type CborMap } from './cbor.ts';
@@ -30,11 +31,21 @@ export interface NamedSamples {
   samples: Float64Array;
 }
 
+/** Major types of CBOR (RFC 8949, 3.1) that can hold a map; others are no CBOR of a logger at all, text mostly. */
+const CONTAINERS: ReadonlySet<number> = new Set([4, 5, 6]);
+/** `{` and `[`. */
+const JSON_BEGINS: ReadonlySet<number> = new Set([0x7b, 0x5b]);
+
 /**
  * Reads a `samples` payload. A channel that cannot be read is left out with a complaint; the others are kept. A field
  * that concerns all of them refuses the message.
  */
 export function decodeSamples(payload: Uint8Array): Result<SamplesMessage> {
+  const first = payload[0];
+  if (first !== undefined && !CONTAINERS.has(first >> 5)) {
+    const hint = JSON_BEGINS.has(first) ? '; JSON belongs on the topic that ends in senml' : '';
+    return refuse('MESSAGE_ENCODING', `does not begin as a CBOR map${hint}`);
+  }
   const decoded = decodeCbor(payload);
   if (!decoded.ok) return decoded;
   const message = decoded.value;
@@ -92,7 +103,7 @@ function readNumbers(numbers: Cbor, factor: number): Result<Float64Array> {
   if (count === null) {
     return refuse(
       'MESSAGE_SHAPE',
-      `${numbers.bytes.length} bytes under tag ${numbers.tag} are no typed array taken here`,
+      `${counted(numbers.bytes.length, 'byte')} under tag ${numbers.tag}: no typed array taken here`,
     );
   }
   return count > BLOCK_LIMITS.samplesPerChannel ? tooLong(count) : accept(toDoubles(numbers, factor));
@@ -112,6 +123,6 @@ export function describe(value: Cbor): string {
   if (typeof value === 'bigint') return String(value).slice(0, 40);
   if (typeof value === 'string') return `the text ${JSON.stringify(value.slice(0, 40))}`;
   if (value instanceof Map) return `a map of ${value.size} keys`;
-  if (value instanceof Uint8Array) return `${value.length} bytes`;
-  return isTypedNumbers(value) ? 'a typed array' : `an array of ${value.length} items`;
+  if (value instanceof Uint8Array) return counted(value.length, 'byte');
+  return isTypedNumbers(value) ? 'a typed array' : `an array of ${counted(value.length, 'item')}`;
 }

@@ -87,7 +87,7 @@ describe('decodeMessage of samples', () => {
     const { blocks, complaints } = take({ ...good(), channels: { A1: Float32Array.of(1, Infinity, NaN, -Infinity) } });
     expect(blocks[0]!.channels[0]!.samples).toEqual(Float64Array.of(1, NaN, NaN, NaN));
     expect(complaints).toEqual([
-      { code: 'VALUE_NOT_FINITE', where: `${TOPIC} A1`, detail: '3 of 4 values are not finite' },
+      { code: 'VALUE_NOT_FINITE', where: `${TOPIC} A1`, detail: '3 of 4 values not finite' },
     ]);
   });
 
@@ -127,6 +127,17 @@ describe('decodeMessage of samples', () => {
     const { blocks, complaints } = take(message);
     expect(blocks).toEqual([]);
     expect(codes(complaints)).toEqual([code]);
+  });
+
+  it.each<[string, string, RegExp]>([
+    ['plain text', 'xx', /^does not begin as a CBOR map$/],
+    ['JSON', '{"start":1}', /^does not begin as a CBOR map; JSON belongs on the topic that ends in senml$/],
+    ['JSON of another shape', '[{"n":"A1","v":1}]', /JSON belongs on the topic that ends in senml$/],
+  ])('calls %s on the topic of samples what it is', (_what, text, words) => {
+    const { blocks, complaints } = decodeMessage(directory, TOPIC, Buffer.from(text), { nowMicros: NOW });
+    expect(blocks).toEqual([]);
+    expect(codes(complaints)).toEqual(['MESSAGE_ENCODING']);
+    expect(complaints[0]!.detail).toMatch(words);
   });
 
   it('refuses 10 000 sensors in one message, and takes 256', () => {

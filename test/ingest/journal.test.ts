@@ -172,7 +172,7 @@ describe('the journal', () => {
       expect(complaints.map(({ code }) => code)).toEqual(torn ? ['JOURNAL_TAIL'] : []);
       if (torn)
         expect(complaints[0]!.detail).toMatch(
-          new RegExp(`^${end - borders[whole]!} bytes after byte ${borders[whole]} `),
+          new RegExp(`^${end - borders[whole]!} bytes? after byte ${borders[whole]} `),
         );
       await again.append(recordOf(9)).durable;
       expect(await numbersIn(again), `cut at ${end}`).toEqual([...count(whole), 9]);

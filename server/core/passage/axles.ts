@@ -1,4 +1,5 @@
 import { axleTracks, bridgeLengthM, countsAxles, type BridgeDefinition, type Sensor } from '../contract/bridge.ts';
+import { counted } from '../contract/counted.ts';
 import { measured, notMeasurable, type Measured } from '../contract/measure.ts';
 import type { Axle, Direction } from '../contract/passage.ts';
 import { MICROS_PER_SECOND, type Micros } from '../contract/time.ts';
@@ -118,7 +119,7 @@ function together(readings: readonly AxleReading[]): AxleReading {
   const whole = readings.every(({ onMicros, offMicros }) => onMicros !== null && offMicros !== null);
   const words = readings.map(({ count, direction, speedMs }) => {
     const speed = speedMs.value === null ? 'at unknown speed' : `at ${speedMs.value.toFixed(1)} m/s`;
-    return `${count.value ?? 'some'} axles ${direction === null ? '' : `towards ${direction} chainage `}${speed}`;
+    return `${count.value === null ? 'some axles' : counted(count.value, 'axle')} ${direction === null ? '' : `towards ${direction} chainage `}${speed}`;
   });
   const reason = `${readings.length} trains at once: ${words.join('; ')}`;
   const axles = readings.reduce((sum, { count }) => sum + (count.value ?? 0), 0);
@@ -152,7 +153,7 @@ interface Place {
 }
 
 function pairSensors(nothing: AxleReading, bridge: BridgeDefinition, low: Place, high: Place): AxleReading {
-  const { pairs, complete, axles: counted } = matchPulses(low.pulses, high.pulses);
+  const { pairs, complete, axles: count } = matchPulses(low.pulses, high.pulses);
   const notes: string[] = [];
   if (pairs.length === 0)
     return {
@@ -170,7 +171,7 @@ function pairSensors(nothing: AxleReading, bridge: BridgeDefinition, low: Place,
   const error = Math.hypot(spread, (speed * Math.SQRT2 * PLACE_ERROR_M) / base);
   if (!even)
     notes.push(`speed varied from ${quantile(speeds, 0.1).toFixed(1)} to ${quantile(speeds, 0.9).toFixed(1)} m/s`);
-  if (!complete) notes.push(`${low.id} saw ${low.pulses.length} axles, ${high.id} ${high.pulses.length}`);
+  if (!complete) notes.push(`${low.id} saw ${counted(low.pulses.length, 'axle')}, ${high.id} ${high.pulses.length}`);
   const axles = placeAxles(pairs, speeds);
   const [entry, exit] = rising ? [low, high] : [high, low];
   const lengthM = bridgeLengthM(bridge);
@@ -183,7 +184,7 @@ function pairSensors(nothing: AxleReading, bridge: BridgeDefinition, low: Place,
   const afterM = rising ? lengthM - exit.alongM : exit.alongM;
   return {
     trains: 1,
-    count: complete ? measured(pairs.length, 0) : measured(counted, null, 'usable', notes.at(-1) ?? ''),
+    count: complete ? measured(pairs.length, 0) : measured(count, null, 'usable', notes.at(-1) ?? ''),
     axles,
     speedMs: even
       ? measured(meanSpeed, error, complete ? 'good' : 'usable', complete ? undefined : notes.at(-1))
