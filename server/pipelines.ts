@@ -2,23 +2,16 @@ import { setImmediate as turn, setTimeout as sleep } from 'node:timers/promises'
 import type { SampleBlock } from '#core/contract/block.ts';
 import type { BridgeDefinition } from '#core/contract/bridge.ts';
 import type { Complaint } from '#core/contract/errors.ts';
-import type { SensorHealth } from '#core/contract/health.ts';
 import type { PipelineOutput } from '#core/contract/pipeline.ts';
-import { MICROS_PER_SECOND, sampleMicros, type Micros } from '#core/contract/time.ts';
-import { PIPELINE_VERSION } from '#core/passage/pipeline.ts';
-import { isAfter, mismatchOf, newFeed, newer, oldest, type Feed } from './feed.ts';
+import { sampleMicros, type Micros } from '#core/contract/time.ts';
+import { isAfter, mismatchOf, newFeed, oldest, type Feed } from './feed.ts';
 import { comparePositions, type Journal, type Position } from './ingest/journal.ts';
 import type { JournalRecord } from './ingest/journal-record.ts';
 import { sharedMs, type Stages } from './stages.ts';
-import { readSnapshot, removeSnapshot, writeSnapshot, type Snapshot } from './snapshot.ts';
+import { readSnapshot, removeSnapshot, type BridgeMemory } from './snapshot.ts';
+import { IDLE_SNAPSHOT_MS, Snapshots, type SnapshotPace } from './snapshots.ts';
 import { heapBytesOf, newThread, newWorker, release, threadsFor, type Thread } from './thread.ts';
 import type { BridgeOutput, FromWorker, ToWorker } from './worker.ts';
-
-/** What the main thread knows of a bridge and keeps in its snapshots. */
-export interface BridgeMemory {
-  loggers: Record<string, Micros>;
-  sensors: SensorHealth[];
-}
 
 export interface PipelinesOptions {
   bridges: readonly { definition: BridgeDefinition; version: number }[];
@@ -48,13 +41,10 @@ export interface PipelinesOptions {
   limits?: Partial<PipelineLimits>;
 }
 
-export interface PipelineLimits {
+export interface PipelineLimits extends SnapshotPace {
   /** Blocks and bytes of samples that may wait for one worker; beyond, whoever feeds waits, which delays acknowledgements. */
   blocks: number;
   bytes: number;
-  /** A snapshot is taken after this much event time, but not more often than this by the wall clock. */
-  snapshotEventS: number;
-  snapshotWallMs: number;
 }
 
 export const PIPELINE_LIMITS: PipelineLimits = {
@@ -64,8 +54,6 @@ export const PIPELINE_LIMITS: PipelineLimits = {
   snapshotWallMs: 5_000,
 };
 
-/** A bridge whose data do not move gets a snapshot this often, so that its place in the journal moves on. */
-const IDLE_SNAPSHOT_MS = 600_000;
 /** How long stopping waits for what is in hand. */
 const STOP_MS = 10_000;
 const PAUSE_MS = { first: 200, longest: 30_000 };
@@ -103,31 +91,27 @@ class PipelinePool implements Pipelines {
   readonly #limits: PipelineLimits;
   readonly #feeds = new Map<string, Feed>();
   readonly #threads: Thread[] = [];
+  readonly #snapshots: Snapshots;
   readonly #recoveries = new Set<Promise<void>>();
   readonly #idle: NodeJS.Timeout;
   /** The newest block that any live bridge was given. */
   #through: Position | null = null;
-  #token = 0;
-  #snapshots = 0;
   #failures = 0;
-  #writing = new Map<string, Promise<void>>();
-  #awaited = new Map<number, () => void>();
   #stopping: Promise<void> | null = null;
   readonly #stopped = Promise.withResolvers<undefined>();
 
   constructor(options: PipelinesOptions) {
     this.#options = options;
     this.#limits = { ...PIPELINE_LIMITS, ...options.limits };
+    this.#snapshots = new Snapshots({ ...options, pace: this.#limits, through: () => this.#through });
     const threads = threadsFor(options.bridges.length, options.workers);
     for (let i = 0; i < threads; i++) this.#threads.push(this.#thread());
     for (const [index, { definition, version }] of options.bridges.entries()) {
       const thread = this.#threads[index % this.#threads.length]!;
-      const feed = newFeed(definition, version, thread);
-      thread.feeds.add(feed);
-      this.#feeds.set(definition.id, feed);
+      this.#feeds.set(definition.id, newFeed(definition, version, thread));
     }
     if (this.#feeds.size > 0) this.#track(this.#recover([...this.#feeds.values()]));
-    this.#idle = setInterval(() => this.#snapshotIdle(), IDLE_SNAPSHOT_MS);
+    this.#idle = setInterval(() => this.#snapshots.takeOfIdle(this.#feeds.values()), IDLE_SNAPSHOT_MS);
     this.#idle.unref();
   }
 
@@ -157,7 +141,12 @@ class PipelinePool implements Pipelines {
 
   figures(): ReturnType<Pipelines['figures']> {
     const blocksInFlight = this.#threads.reduce((sum, { blocks }) => sum + blocks, 0);
-    return { workers: this.#threads.length, blocksInFlight, snapshots: this.#snapshots, failures: this.#failures };
+    return {
+      workers: this.#threads.length,
+      blocksInFlight,
+      snapshots: this.#snapshots.written,
+      failures: this.#failures,
+    };
   }
 
   heapBytes(): Promise<number> {
@@ -179,10 +168,10 @@ class PipelinePool implements Pipelines {
     // A bridge that was still catching up keeps the snapshot it had, or took on the way.
     await Promise.all(this.#recoveries);
     const last = [...this.#feeds.values()].filter(({ live }) => live);
-    for (const feed of last) this.#requestSnapshot(feed, true);
+    for (const feed of last) this.#snapshots.take(feed, true);
     const done = (async () => {
-      await Promise.all(last.map((feed) => this.#snapshotDone(feed)));
-      await Promise.allSettled([...this.#writing.values(), ...last.map(({ durable }) => durable)]);
+      await Promise.all(last.map((feed) => this.#snapshots.taken(feed)));
+      await Promise.allSettled([this.#snapshots.allWritten(), ...last.map(({ durable }) => durable)]);
     })();
     // A history that cannot write, or a pipeline that does not end, must not keep the server: the journal has it all.
     await Promise.race([done, sleep(STOP_MS, undefined, { ref: false })]);
@@ -216,9 +205,10 @@ class PipelinePool implements Pipelines {
   async #threadEnded(thread: Thread, reason: string): Promise<void> {
     thread.failures += 1;
     this.#failures += 1;
-    const bridges = [...thread.feeds].map(({ bridge }) => bridge).join(', ');
+    const own = [...this.#feeds.values()].filter((feed) => feed.thread === thread);
+    const bridges = own.map(({ bridge }) => bridge).join(', ');
     this.#options.report({ code: 'WORKER_FAILED', where: bridges.slice(0, 200), detail: reason });
-    for (const feed of thread.feeds) this.#pause(feed);
+    for (const feed of own) this.#pause(feed);
     thread.blocks = thread.bytes = 0;
     release(thread);
     const recovery = (async () => {
@@ -226,7 +216,7 @@ class PipelinePool implements Pipelines {
       if (this.#stopping !== null) return;
       thread.worker = newWorker();
       this.#listen(thread);
-      await this.#recover([...thread.feeds]);
+      await this.#recover(own);
     })();
     this.#track(recovery);
     await recovery;
@@ -251,7 +241,7 @@ class PipelinePool implements Pipelines {
     feed.thread.bytes += bytes;
     const buffers = new Set(block.channels.map(({ samples }) => samples.buffer as ArrayBuffer));
     this.#post(feed.thread, { kind: 'block', block }, [...buffers]);
-    this.#snapshotWhenDue(feed);
+    this.#snapshots.takeWhenDue(feed);
   }
 
   #room(thread: Thread): Promise<void> | null {
@@ -274,7 +264,7 @@ class PipelinePool implements Pipelines {
       }
       if (thread.blocks <= this.#limits.blocks / 2 && thread.bytes <= this.#limits.bytes / 2) release(thread);
     } else if (feed !== undefined && message.kind === 'fault') this.#fault(feed, message.detail);
-    else if (feed !== undefined && message.kind === 'snapshot') this.#snapshotCame(feed, message);
+    else if (feed !== undefined && message.kind === 'snapshot') this.#snapshots.came(feed, message);
   }
 
   #came(feed: Feed, came: BridgeOutput): void {
@@ -339,7 +329,7 @@ class PipelinePool implements Pipelines {
     }
     feed.inFlight = [];
     feed.replaysInFlight = 0;
-    this.#endSnapshot(feed);
+    this.#snapshots.giveUp(feed);
   }
 
   #track(recovery: Promise<void>): void {
@@ -413,76 +403,5 @@ class PipelinePool implements Pipelines {
     recall(feed.bridge, { loggers: snapshot?.loggers ?? {}, sensors });
     const { bridge, definition, version } = feed;
     this.#post(feed.thread, { kind: 'open', bridge, definition, version, state });
-  }
-
-  // snapshots
-
-  #snapshotWhenDue(feed: Feed): void {
-    if (feed.snapshotMicros === 0) feed.snapshotMicros = feed.newestMicros;
-    if (feed.newestMicros - feed.snapshotMicros < this.#limits.snapshotEventS * MICROS_PER_SECOND) return;
-    if (performance.now() - feed.snapshotAtMs < this.#limits.snapshotWallMs) return;
-    this.#requestSnapshot(feed, false);
-  }
-
-  #snapshotIdle(): void {
-    for (const feed of this.#feeds.values()) {
-      if (feed.live && performance.now() - feed.snapshotAtMs > IDLE_SNAPSHOT_MS) this.#requestSnapshot(feed, false);
-    }
-  }
-
-  /** @param last also where one is on its way */
-  #requestSnapshot(feed: Feed, last: boolean): void {
-    if (!last && (feed.snapshot !== null || this.#writing.has(feed.bridge))) return;
-    const token = ++this.#token;
-    // A live bridge has been given everything of its own up to the newest block of all.
-    feed.snapshot = { token, position: feed.live ? newer(this.#through, feed.through) : feed.through };
-    feed.snapshotMicros = feed.newestMicros;
-    feed.snapshotAtMs = performance.now();
-    this.#post(feed.thread, { kind: 'snapshot', bridge: feed.bridge, token });
-  }
-
-  #snapshotCame(feed: Feed, { token, state, quiet }: Extract<FromWorker, { kind: 'snapshot' }>): void {
-    if (feed.snapshot?.token !== token) return;
-    const { position } = feed.snapshot;
-    const snapshot: Snapshot = {
-      bridge: feed.bridge,
-      pipelineVersion: PIPELINE_VERSION,
-      definitionVersion: feed.version,
-      position,
-      quietPosition: quiet ? position : feed.quietPosition,
-      ...structuredClone(this.#options.remember(feed.bridge)),
-      state,
-    };
-    const { durable } = feed;
-    const earlier = this.#writing.get(feed.bridge);
-    const writing = (async () => {
-      await durable;
-      // The last one may be asked for while another is still being written; it has the same file.
-      await earlier;
-      await writeSnapshot(this.#options.folder, snapshot);
-      this.#snapshots += 1;
-    })()
-      .catch((failure: unknown) => {
-        // The older one and the journal still serve.
-        this.#options.report({ code: 'SNAPSHOT_WRITE', where: feed.bridge, detail: String(failure) });
-      })
-      .finally(() => {
-        if (this.#writing.get(feed.bridge) === writing) this.#writing.delete(feed.bridge);
-      });
-    this.#writing.set(feed.bridge, writing);
-    this.#endSnapshot(feed);
-  }
-
-  #endSnapshot(feed: Feed): void {
-    const token = feed.snapshot?.token;
-    feed.snapshot = null;
-    if (token === undefined) return;
-    this.#awaited.get(token)?.();
-    this.#awaited.delete(token);
-  }
-
-  #snapshotDone(feed: Feed): Promise<void> {
-    const token = feed.snapshot?.token;
-    return token === undefined ? Promise.resolve() : new Promise((resolve) => this.#awaited.set(token, resolve));
   }
 }

@@ -7,8 +7,15 @@ import { accept, refuse, type Result } from '#core/contract/errors.ts';
 import type { Micros } from '#core/contract/time.ts';
 import type { Position } from './ingest/journal.ts';
 
+/** What the main thread knows of a bridge, which no pipeline does. */
+export interface BridgeMemory {
+  /** Newest sample of each logger. */
+  loggers: Record<string, Micros>;
+  sensors: SensorHealth[];
+}
+
 /** The state of one bridge at a place in the journal: whatever came after that place is taken from the journal again. */
-export interface Snapshot {
+export interface Snapshot extends BridgeMemory {
   bridge: string;
   pipelineVersion: string;
   definitionVersion: number;
@@ -16,9 +23,6 @@ export interface Snapshot {
   position: Position | null;
   /** The newest record at which nothing was under way: a pipeline of another version begins there. */
   quietPosition: Position | null;
-  /** Newest sample of each logger. */
-  loggers: Record<string, Micros>;
-  sensors: SensorHealth[];
   /** The pipeline's state as the worker serialised it. */
   state: Uint8Array;
 }

@@ -1,11 +1,9 @@
 import { availableParallelism } from 'node:os';
 import { Worker } from 'node:worker_threads';
-import type { Feed } from './feed.ts';
 
-/** A worker thread with the bridges it runs. */
+/** A worker thread, and how much waits for it. */
 export interface Thread {
   worker: Worker;
-  feeds: Set<Feed>;
   blocks: number;
   bytes: number;
   waiting: (() => void)[];
@@ -45,7 +43,6 @@ export const newWorker = (): Worker =>
 
 export const newThread = (worker: Worker): Thread => ({
   worker,
-  feeds: new Set(),
   blocks: 0,
   bytes: 0,
   waiting: [],

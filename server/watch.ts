@@ -12,7 +12,7 @@ import { stretchMicros } from '#core/alarm/fault.ts';
 import { isActive } from '#core/alarm/life.ts';
 import { silenceOf } from '#core/alarm/silence.ts';
 import type { DeskEffect, DeskEvent, DeskState, DeskStep, NoData } from '#core/alarm/state.ts';
-import type { BridgeMemory } from './pipelines.ts';
+import type { BridgeMemory } from './snapshot.ts';
 import {
   createHealthRecord,
   healthView,
