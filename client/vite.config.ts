@@ -20,6 +20,8 @@ export default defineConfig({
     // Every browser of the target preloads modules by itself.
     modulePreload: { polyfill: false },
     rolldownOptions: {
+      // What the first page needs is one file: names that files hand to each other do not compress.
+      output: { codeSplitting: { groups: [{ name: 'pages', tags: ['$initial'] }] } },
       treeshake: {
         // The contract builds its schemas when it is loaded. The page uses its types and functions, not the schemas.
         manualPureFunctions: ['Type', 'Nullable', 'Cyclic'],
