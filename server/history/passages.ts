@@ -1,6 +1,6 @@
 import { SpanbeatError } from '#core/contract/errors.ts';
 import type { PassagePage, PassageQuery, PassageRow } from '#core/contract/api.ts';
-import type { Measured } from '#core/contract/measure.ts';
+import { isLowerBound, type Measured } from '#core/contract/measure.ts';
 import type { Passage } from '#core/contract/passage.ts';
 import type { Severity } from '#core/contract/severity.ts';
 import type { Ask, Row, SqlValue } from './database.ts';
@@ -76,7 +76,7 @@ export async function pageOf(ask: Ask, query: PassageQuery): Promise<PassagePage
      ORDER BY ${peakFirst}p.on_micros DESC, p.id DESC LIMIT ${where.put(limit + 1)}`,
     where.values,
   );
-  const page = rows.slice(0, limit).map(rowOf);
+  const page = await withBounds(ask, rows.slice(0, limit).map(rowOf));
   const last = page.at(-1);
   const next = rows.length > limit && last !== undefined ? cursorOf(order, last) : null;
   return { rows: page, total: Number(count?.['n'] ?? 0), next };
@@ -97,7 +97,7 @@ export async function alikeOf(ask: Ask, passage: Passage, limit: number): Promis
       limit,
     ],
   );
-  return rows.map(rowOf);
+  return withBounds(ask, rows.map(rowOf));
 }
 
 /** The passages just before and after, on the same bridge. */
@@ -121,7 +121,20 @@ export async function lastOf(ask: Ask): Promise<PassageRow[]> {
      JOIN (SELECT bridge, max(on_micros) AS newest FROM passages GROUP BY bridge) l
        ON l.bridge = p.bridge AND l.newest = p.on_micros ORDER BY p.bridge, p.id`,
   );
-  return rows.map(rowOf);
+  return withBounds(ask, rows.map(rowOf));
+}
+
+/** Only a poor passage has a lower bound for its peak, so that whole passages are seldom looked into. */
+async function withBounds(ask: Ask, rows: PassageRow[]): Promise<PassageRow[]> {
+  const poor = rows.filter(({ quality, peak }) => quality === 'poor' && peak !== null).map(({ id }) => id);
+  if (poor.length === 0) return rows;
+  const asked = poor.map((_, i) => `$${i + 1}`).join(', ');
+  const bounds = new Set<string>();
+  for (const { json } of await ask(`SELECT json FROM passages WHERE id IN (${asked})`, poor)) {
+    const { id, peak } = JSON.parse(String(json)) as Passage;
+    if (isLowerBound(peak.measured)) bounds.add(id);
+  }
+  return rows.map((row) => (bounds.has(row.id) ? { ...row, peakAtLeast: true } : row));
 }
 
 function rowOf(row: Row): PassageRow {

@@ -4,6 +4,7 @@ import { tmpdir } from 'node:os';
 import { join } from 'node:path';
 import { afterEach, beforeEach, describe, expect, test } from 'vitest';
 import type { Complaint } from '#core/contract/errors.ts';
+import { measured } from '#core/contract/measure.ts';
 import type { Passage } from '#core/contract/passage.ts';
 import { MICROS_PER_SECOND, type Micros } from '#core/contract/time.ts';
 import { openDuckDb } from '../../server/history/database.ts';
@@ -201,6 +202,20 @@ describe('the list of passages', () => {
     const rest = await store.passages({ order: 'peak', limit: 2, cursor: page.next ?? '' });
     expect(rest.rows.map(({ peak }) => peak)).toEqual([1, null]);
     expect(rest).toMatchObject({ next: null, total: 4 });
+  });
+
+  test('marks a peak that is but a lower bound, and no other poor one', async () => {
+    const store = await begun();
+    const bound = measured(1.2, null, 'poor', 'lower bound: the recording stops before the train has left');
+    const plain = aPassage({ onMicros: DAWN, quality: 'poor' });
+    const cut = aPassage({ onMicros: DAWN + HOUR, quality: 'poor' });
+    for (const passage of [plain, { ...cut, peak: { ...cut.peak, measured: bound } }])
+      await store.commitPassage({ passage, channels: [], alarms: [] });
+    const { rows } = await store.passages({ bridge: 'ottermere' });
+    expect(rows.map(({ id, peakAtLeast }) => [id, peakAtLeast])).toEqual([
+      [cut.id, true],
+      [plain.id, undefined],
+    ]);
   });
 
   test('is narrowed by every filter of the query', async () => {

@@ -68,6 +68,8 @@ export const PassageRow = Type.Object({
   bridge: Type.String(),
   onMicros: Type.Integer(),
   peak: Nullable(Type.Number()),
+  /** Whether the peak is but a lower bound; absent where it is not. */
+  peakAtLeast: Type.Optional(Type.Boolean()),
   sensor: Nullable(Type.String()),
   severity: Nullable(Severity),
   ofGravest: Nullable(Type.Number()),
