@@ -51,12 +51,16 @@ const JUDGED: ReadonlySet<string> = new Set(['confirmed', 'corrected']);
 /** The value that counts: the record's where it is known, else the live one. */
 export const valueOf = (alarm: Alarm): number | null => alarm.recordValue ?? alarm.liveValue;
 
+/** Whether the value that counts is but a lower bound. */
+export const isAtLeast = (alarm: Alarm): boolean => alarm.recordAtLeast === true && alarm.recordValue !== null;
+
 /** `0.12 above IL 2.80`, or how far below its own limit the record has found it. */
 export function againstLimit(alarm: Alarm, levels: Levels | undefined): string {
   const value = valueOf(alarm);
   const limit = levels?.[alarm.severity];
   if (value === null || limit === undefined) return alarm.severity;
   const above = value - limit;
+  if (isAtLeast(alarm) && above < 0) return `not known to be below ${alarm.severity} ${fixed(limit, 2)}`;
   return `${fixed(Math.abs(above), 2)} ${above >= 0 ? 'above' : 'below'} ${alarm.severity} ${fixed(limit, 2)}`;
 }
 
@@ -71,7 +75,7 @@ export interface RecordWords {
 
 /** What the record of the passage made of a level alarm, or why there is none that could. */
 export function recordWords(alarm: Alarm): RecordWords {
-  const atLeast = alarm.recordAtLeast === true ? 'at least ' : '';
+  const atLeast = isAtLeast(alarm) ? 'at least ' : '';
   const value = alarm.recordValue === null ? 'none' : `${atLeast}${fixed(alarm.recordValue, 2)} m/s²`;
   const found = alarm.recordSeverity === null ? 'below all limits' : `above ${alarm.recordSeverity}`;
   switch (alarm.verdict) {

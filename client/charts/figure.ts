@@ -1,6 +1,6 @@
 import { isLowerBound, type Measured } from '#core/contract/measure.ts';
 import type { Micros } from '#core/contract/time.ts';
-import { DIGITS, fixed } from '../format.ts';
+import { DIGITS, fixed, plusMinus } from '../format.ts';
 import { dateIn } from '../time.ts';
 
 /** How a kind of measure is printed. */
@@ -25,22 +25,41 @@ export function withUnit(value: number, { unit, digits, factor }: Kind): string 
   return `${fixed(value * factor, digits)}${unit ? `\u00a0${unit}` : ''}`;
 }
 
+/** What stands before a value that is but a lower bound. */
+export const AT_LEAST = '≥\u00a0';
+
 /** A measured value in print; a lower bound says so. `≥ 2.03 m/s²` */
 export function valueText(measured: Measured, kind: Kind): string {
   if (measured.value === null) return 'not measurable';
-  return `${isLowerBound(measured) ? '≥\u00a0' : ''}${withUnit(measured.value, kind)}`;
+  return bare(measured, placesOf(measured, kind), kind.factor) + (kind.unit && `\u00a0${kind.unit}`);
+}
+
+/** The same for a column that names its unit. */
+export function bare(measured: Measured, digits: number, factor = 1): string {
+  if (measured.value === null) return 'n. m.';
+  return `${isLowerBound(measured) ? AT_LEAST : ''}${fixed(measured.value * factor, digits)}`;
 }
 
 /**
- * Half the 95 % interval: 1.96 standard errors, the normal law's, to the place of its value's last digit and never finer
- * (JCGM 100:2008, 7.2.6); what is less than that digit is rounded up to it. Empty where no error can be given, as for a
- * lower bound.
+ * Half the 95 % interval: 1.96 standard errors, the normal law's, with two significant digits at most, to the place of
+ * its value's last digit (JCGM 100:2008, 7.2.6); what is less than that digit is rounded up to it. Empty where no error
+ * can be given, as for a lower bound.
  */
-export function uncertainty(measured: Measured, { digits, factor }: Kind): string {
-  if (measured.value === null || measured.standardError === null || isLowerBound(measured)) return '';
-  const half = 1.96 * measured.standardError * factor;
-  if (half === 0) return '';
-  return `± ${Math.max(half, 10 ** -digits).toFixed(digits)}`;
+export function uncertainty(measured: Measured, kind: Kind): string {
+  const half = halfOf(measured, kind);
+  const places = placesOf(measured, kind);
+  return half === 0 ? '' : `± ${fixed(Math.max(half, 10 ** -places), places)}`;
+}
+
+function halfOf(measured: Measured, { factor }: Kind): number {
+  return isLowerBound(measured) ? 0 : (plusMinus(measured) ?? 0) * factor;
+}
+
+/** Decimals of a value and of its uncertainty: those of its kind, fewer where the uncertainty leaves no sense in them. */
+function placesOf(measured: Measured, kind: Kind): number {
+  let places = kind.digits;
+  while (places > 0 && halfOf(measured, kind) * 10 ** places >= 99.5) places -= 1;
+  return places;
 }
 
 /** `Tue 4 Nov`, for lists whose year is plain. */

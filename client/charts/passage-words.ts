@@ -87,6 +87,9 @@ export function unlikeWords(here: PassageView, other: PassageView): string[] {
     ...(a.bridge === b.bridge ? [] : [`it crossed another bridge, ${other.definition.name}`]),
     ...(directions && a.direction !== b.direction ? ['it went the other way'] : []),
     ...(known && a.axleCount.value !== b.axleCount.value ? ['it had another number of axles'] : []),
+    ...(known && a.axleCount.value === b.axleCount.value && !sameAxles(a, b)
+      ? ['its axles stood at other distances']
+      : []),
     ...(isTrain(a) && isTrain(b) ? [] : ['not both were recognised as trains']),
     ...(a.provenance.definitionVersion === b.provenance.definitionVersion || a.bridge !== b.bridge
       ? []
@@ -95,4 +98,9 @@ export function unlikeWords(here: PassageView, other: PassageView): string[] {
       ? []
       : [`it was computed with rules ${b.provenance.ruleVersion}`]),
   ];
+}
+
+/** Distances are as good as the speed, some per mille, and half a metre at worst for one axle. */
+function sameAxles(a: Passage, b: Passage): boolean {
+  return a.axles.every(({ behindFirstM: at }, i) => Math.abs(at - (b.axles[i]?.behindFirstM ?? at)) < 0.5 + 0.01 * at);
 }

@@ -270,10 +270,16 @@ function drawOver(u: uPlot, spec: PlotSpec, ink: Ink, ratio: number): void {
   };
   const x = (value: number): number => u.valToPos(value, 'x', true) / ratio;
   const y = (value: number): number => u.valToPos(value, 'y', true) / ratio;
-  const write = (text: string, at: [number, number], colour: string, align: CanvasTextAlign, weight = 400): void => {
+  const write: Write = (text, at, colour, align, weight = 400, halo = false) => {
     context.font = `${weight} 12px ${ink.narrow}`;
     context.fillStyle = colour;
     context.textAlign = align;
+    if (halo) {
+      context.strokeStyle = ink.paper;
+      context.lineWidth = 5;
+      context.lineJoin = 'round';
+      context.strokeText(text, at[0], at[1]);
+    }
     context.fillText(text, at[0], at[1]);
   };
   context.textBaseline = 'alphabetic';
@@ -338,7 +344,15 @@ interface Box {
   top: number;
   bottom: number;
 }
-type Write = (text: string, at: [number, number], colour: string, align: CanvasTextAlign, weight?: number) => void;
+/** With a halo, the words stay legible where lines cross them. */
+type Write = (
+  text: string,
+  at: [number, number],
+  colour: string,
+  align: CanvasTextAlign,
+  weight?: number,
+  halo?: boolean,
+) => void;
 
 function drawMark(
   context: CanvasRenderingContext2D,
@@ -363,7 +377,7 @@ function drawMark(
     context.stroke();
   }
   const right = px < box.right - 60;
-  write(mark.label, [px + (right ? 12 : -12), py + 4], colour, right ? 'left' : 'right', 600);
+  write(mark.label, [px + (right ? 12 : -12), py + 4], colour, right ? 'left' : 'right', 600, true);
 }
 
 /** The name of a trace over its right end. */
@@ -385,11 +399,7 @@ function tagSeries(
   if (value == null) return;
   const at = Math.max(box.top + 10, Math.min(box.bottom - 6, y(value - laneOffset(spec, series.lane ?? 0)) - 12));
   const right = Math.min(box.right, x(spec.x.values[last]!)) - 2;
-  u.ctx.font = `500 12px ${ink.narrow}`;
-  const width = u.ctx.measureText(series.tag).width;
-  u.ctx.fillStyle = ink.paper;
-  u.ctx.fillRect(right - width - 3, at - 11, width + 6, 15);
-  write(series.tag, [right, at], ink[series.colour], 'right', 500);
+  write(series.tag, [right, at], ink[series.colour], 'right', 500, true);
 }
 
 function line(context: CanvasRenderingContext2D, x1: number, y1: number, x2: number, y2: number): void {

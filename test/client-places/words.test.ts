@@ -6,6 +6,7 @@ import type { Passage } from '#core/contract/passage.ts';
 import {
   againstLimit,
   delayWords,
+  isAtLeast,
   needsAnswer,
   recordWords,
   sensorOf,
@@ -13,7 +14,7 @@ import {
   subjectOf,
   valueOf,
 } from '../../client/charts/alarm-words.ts';
-import { KINDS, uncertainty, valueText, withUnit } from '../../client/charts/figure.ts';
+import { bare, KINDS, uncertainty, valueText, withUnit } from '../../client/charts/figure.ts';
 import { orderWords, timeOf, titleOf, towards, unlikeWords, verdictOf } from '../../client/charts/passage-words.ts';
 import { csvOf } from '../../client/charts/table.ts';
 import { trustOf } from '../../client/charts/trust.ts';
@@ -65,10 +66,25 @@ describe('a measured value in print', () => {
     expect(uncertainty(measured(5.1, 0.02), KINDS.frequency)).toBe('± 0.04');
   });
 
+  it('and its uncertainty have fewer digits where that has more than two significant ones', () => {
+    const coarse = measured(12.345, 0.6, 'usable', 'x');
+    expect(valueText(coarse, KINDS.frequency)).toBe('12.3\u00a0Hz');
+    expect(uncertainty(coarse, KINDS.frequency)).toBe('± 1.2');
+    expect(uncertainty(measured(40, 7), KINDS.speed)).toBe('± 14');
+    expect(valueText(measured(40.4, 7), KINDS.speed)).toBe('40\u00a0m/s');
+  });
+
+  it('is never printed finer than 0.995 of the next place allows: 0.996 is 1.0', () => {
+    expect(uncertainty(measured(5, 0.996 / 1.96), KINDS.frequency)).toBe('± 1.0');
+    expect(uncertainty(measured(5, 0.994 / 1.96), KINDS.frequency)).toBe('± 0.99');
+  });
+
   it('that is a lower bound says so, and has no uncertainty', () => {
     const bound = measured(2.03, 0.01, 'poor', 'lower bound: samples are missing while the train was there');
     expect(valueText(bound, KINDS.acceleration)).toBe('≥\u00a02.03\u00a0m/s²');
     expect(uncertainty(bound, KINDS.acceleration)).toBe('');
+    expect(bare(bound, 2)).toBe('≥\u00a02.03');
+    expect(bare(notMeasurable('too short'), 2)).toBe('n. m.');
     expect(valueText(measured(2.03, 0.01), KINDS.acceleration)).toBe('2.03\u00a0m/s²');
     expect(valueText(notMeasurable('too short'), KINDS.acceleration)).toBe('not measurable');
   });
@@ -135,6 +151,16 @@ describe('two passages that are compared', () => {
     expect(orderWords(later, here)).toBe('an earlier passage');
   });
 
+  it('are unlike where as many axles stood at other distances', () => {
+    const here = passageOf({});
+    const moved = (byM: number): Passage => ({
+      ...here,
+      axles: here.axles.map((axle, i) => ({ ...axle, behindFirstM: axle.behindFirstM + (i > 0 ? byM : 0) })),
+    });
+    expect(unlikeWords(viewOf(here), viewOf(moved(0.3)))).toEqual([]);
+    expect(unlikeWords(viewOf(here), viewOf(moved(2)))).toEqual(['its axles stood at other distances']);
+  });
+
   it('say what makes them unlike, and nothing where they are alike', () => {
     const here = passageOf({ speedMs: 44.26 });
     expect(unlikeWords(viewOf(here), viewOf(passageOf({ speedMs: 40 })))).toEqual([]);
@@ -156,6 +182,15 @@ describe('two passages that are compared', () => {
 });
 
 describe('an alarm in words', () => {
+  it('calls no lower bound below a limit', () => {
+    const { levels } = bridge.limits[0]!;
+    const bound = alarm({ recordValue: 2.7, recordAtLeast: true });
+    expect(isAtLeast(bound)).toBe(true);
+    expect(againstLimit(bound, levels)).toBe('not known to be below IL 2.80');
+    expect(againstLimit({ ...bound, recordValue: 2.92 }, levels)).toBe('0.12 above IL 2.80');
+    expect(isAtLeast({ ...bound, recordValue: null })).toBe(false);
+  });
+
   it('names the sensor whose value it tells: of the record once that is known', () => {
     const step = { micros: 1, takenMicros: 1, severity: null, value: 2.9, by: null, note: null };
     const judged = alarm({ sensor: 'A4', recordValue: 2.9, steps: [{ ...step, what: 'confirmed', sensor: 'A3' }] });
