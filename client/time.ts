@@ -41,11 +41,12 @@ export function clockTenthsIn(micros: Micros, zone = 'UTC'): string {
 /** `14:32` */
 export const minuteIn = (micros: Micros, zone = 'UTC'): string => formatter(zone, SHORT_CLOCK).format(micros / 1000);
 
-/** `Tue 17 Feb 2026` */
+/** `Tue 17 Feb 2026`; months have three letters, as columns of dates want them. */
 export const dateIn = (micros: Micros, zone = 'UTC'): string =>
   formatter(zone, DATE)
     .format(micros / 1000)
-    .replaceAll(',', '');
+    .replaceAll(',', '')
+    .replace('Sept', 'Sep');
 
 /** `2026-02-17`, the civil day in the zone. */
 export function dayIn(micros: Micros, zone = 'UTC'): string {

@@ -1,6 +1,6 @@
 import { isLowerBound, type Measured } from '#core/contract/measure.ts';
 import type { Micros } from '#core/contract/time.ts';
-import { DIGITS, fixed, plusMinus } from '../format.ts';
+import { DIGITS, fixed, plural, plusMinus } from '../format.ts';
 import { dateIn } from '../time.ts';
 
 /** How a kind of measure is printed. */
@@ -38,6 +38,12 @@ export function valueText(measured: Measured, kind: Kind): string {
 export function bare(measured: Measured, digits: number, factor = 1): string {
   if (measured.value === null) return 'n. m.';
   return `${isLowerBound(measured) ? AT_LEAST : ''}${fixed(measured.value * factor, digits)}`;
+}
+
+/** How many axles were counted: `32 axles`, `≥ 8 axles` of a train that was seen in part, null where none were counted. */
+export function axlesText(counted: Measured): string | null {
+  if (counted.value === null) return null;
+  return `${isLowerBound(counted) ? AT_LEAST : ''}${plural(counted.value, 'axle')}`;
 }
 
 /**

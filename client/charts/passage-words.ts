@@ -3,6 +3,7 @@ import { bridgeLengthM, chainageKmAt, type BridgeDefinition } from '#core/contra
 import { isLowerBound } from '#core/contract/measure.ts';
 import type { Passage } from '#core/contract/passage.ts';
 import { LIMIT_NAMES } from './alarm-words.ts';
+import { axlesText } from './figure.ts';
 import { chainage, fixed, speed } from '../format.ts';
 import { clockIn, dateIn, minuteIn, offsetIn } from '../time.ts';
 
@@ -21,9 +22,8 @@ export function forcedWords(passage: Passage): { part: string; zero: string } {
 /** What crossed, as a title: `32 axles, 44.3 m/s`. */
 export function titleOf(passage: Passage): string {
   if (!isTrain(passage)) return 'A level passed, no train recognised';
-  const axles = passage.axleCount.value;
   const fast = passage.speedMs.value;
-  const train = axles === null ? 'Train, axles not counted' : `${fixed(axles, 0)} axles`;
+  const train = axlesText(passage.axleCount) ?? 'Train, axles not counted';
   return `${train}, ${fast === null ? 'speed not measurable' : `${speed(fast)} m/s`}`;
 }
 

@@ -1,5 +1,6 @@
 import { describe, expect, it } from 'vitest';
 import type { Day } from '#core/contract/api.ts';
+import { dayLabels, dayTable, isDark, monthsOf, notesOf, rowsBefore } from '../../client/charts/day-rows.ts';
 import {
   clockChange,
   hourOfDay,
@@ -142,5 +143,64 @@ describe('the time before monitoring began', () => {
     // Half of the last day is yet to come.
     expect(monitoredShare(dark, late - 12 * HOUR)).toBeCloseTo(1 - 4.2 / 30, 9);
     expect(monitoredShare(days.slice(0, 1), late)).toBeNull();
+  });
+});
+
+describe('what stands beside the rows', () => {
+  const dark = (name: string): Day => {
+    const whole = day(name);
+    return { ...whole, noData: [{ fromMicros: whole.startMicros, toMicros: whole.endMicros }] };
+  };
+
+  it('names the month on the first row, the first of a month, and on Mondays', () => {
+    const labels = dayLabels(
+      ['2026-08-29', '2026-08-30', '2026-08-31', '2026-09-01', '2026-09-02'].map((name) => day(name)),
+    );
+    expect(labels.map(({ weekday, date, month }) => `${weekday} ${date} ${month}`.trim())).toEqual([
+      'Sat 29 Aug',
+      'Sun 30',
+      'Mon 31 Aug',
+      'Tue 1 Sep',
+      'Wed 2',
+    ]);
+    expect(labels.map(({ weekend }) => weekend)).toEqual([true, true, false, false, false]);
+  });
+
+  it('sums the days of each month, of which the first may be shown in part', () => {
+    const days = ['2026-08-31', '2026-09-01', '2026-09-02'].map((name, i) => ({
+      ...day(name),
+      passages: i + 1,
+      highest: i === 1 ? null : i + 0.5,
+      above: { AL: i, IL: 0, IAL: i },
+    }));
+    expect(monthsOf(days)).toEqual([
+      { name: 'Aug 2026', from: 0, rows: 1, passages: 1, highest: 0.5, above: { AL: 0, IL: 0, IAL: 0 } },
+      { name: 'Sep 2026', from: 1, rows: 2, passages: 5, highest: 2.5, above: { AL: 3, IL: 0, IAL: 3 } },
+    ]);
+  });
+
+  it('brackets dark days that follow one another into one note, and speaks of no day before monitoring began', () => {
+    const begun = midnight('2026-07-02', ZONE);
+    const early = { ...dark('2026-07-01'), beganMicros: begun };
+    const part = {
+      ...day('2026-07-05'),
+      noData: [{ fromMicros: utc('2026-07-05T10:00:00Z'), toMicros: utc('2026-07-05T11:30:00Z') }],
+    };
+    const days = [early, day('2026-07-02'), dark('2026-07-03'), dark('2026-07-04'), part, dark('2026-07-06')];
+    expect(days.map(isDark)).toEqual([true, false, true, true, false, true]);
+    expect(rowsBefore(days)).toBe(1);
+    expect(notesOf(days, 1)).toEqual([
+      { row: 2, rows: 2, text: 'no data, 2 days' },
+      { row: 4, rows: 1, text: 'no data 1.5 h' },
+      { row: 5, rows: 1, text: 'no data, 1 day' },
+    ]);
+    expect(dayTable(days).rows.map((row) => row.slice(-2))).toEqual([
+      [24, 24],
+      [0, 0],
+      [24, 0],
+      [24, 0],
+      [1.5, 0],
+      [24, 0],
+    ]);
   });
 });

@@ -104,9 +104,12 @@ describe('a passage in words', () => {
   it('says what crossed, when, and where to', () => {
     const passage = passageOf({ speedMs: 44.26 });
     expect(titleOf(passage)).toBe('2 axles, 44.3 m/s');
+    expect(titleOf({ ...passage, axleCount: measured(1, null) })).toBe('1 axle, 44.3 m/s');
+    const cut = measured(8, null, 'poor', 'lower bound: the recording ends under the train');
+    expect(titleOf({ ...passage, axleCount: cut })).toBe('≥\u00a08 axles, 44.3 m/s');
     expect(towards(passage, bridge)).toBe('towards km 10.010');
     expect(towards({ ...passage, direction: 'falling' }, bridge)).toBe('towards km 9.990');
-    expect(timeOf(passage, 'Europe/Berlin')).toBe('Mon 21 Sept 2026, 16:13:22 local (UTC+2), 14:13:22 UTC');
+    expect(timeOf(passage, 'Europe/Berlin')).toBe('Mon 21 Sep 2026, 16:13:22 local (UTC+2), 14:13:22 UTC');
   });
 
   it('says what is not measurable instead of leaving it out', () => {
